@@ -1,0 +1,1 @@
+"""The bench as checked records: beam, detectors, chamber, vapour, gas; uncertainties."""

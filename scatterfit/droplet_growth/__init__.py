@@ -1,0 +1,1 @@
+"""Gas state from pressure; radius against time with heat, vapour, curvature, depletion."""

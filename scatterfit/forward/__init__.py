@@ -1,0 +1,1 @@
+"""What each detector and the transmitted beam would show; noise; simulation."""

@@ -1,0 +1,1 @@
+"""Baseline and noise, global search, refinement, alternatives, uncertainty, verdict."""

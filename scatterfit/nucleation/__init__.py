@@ -1,0 +1,1 @@
+"""Many pulses: J(S, T), slopes, theory, activation."""

@@ -1,0 +1,1 @@
+"""Many traces: ledger, runner, watcher."""

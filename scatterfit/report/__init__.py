@@ -1,0 +1,1 @@
+"""Rounding, tables, figures, page."""
