@@ -28,6 +28,11 @@ SET = Annotated[
                  "example chamber.temperature_K=297.15; repeatable, recorded in the result."),
 ]
 _PAIR_OPTION = "--exclude-ms"
+EXCLUDE = Annotated[
+    list[str] | None,
+    typer.Option(_PAIR_OPTION, metavar="A B", help="Leave out the samples between two times [ms]; "
+                 "repeatable, recorded in the result."),
+]
 
 
 def main(arguments=None):
@@ -220,10 +225,7 @@ def fit(
     ] = None,
     as_json: Annotated[bool, typer.Option("--json", help="Print the result as JSON.")] = False,
     settings: SET = None,
-    exclude_ms: Annotated[
-        list[str] | None, typer.Option(_PAIR_OPTION, metavar="A B", help="Leave out the samples between "
-                                "two times [ms]; repeatable, recorded in the result.")
-    ] = None,
+    exclude_ms: EXCLUDE = None,
 ):
     """Fit one pulse: radius, growth, number, nucleation.
 

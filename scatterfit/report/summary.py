@@ -161,7 +161,7 @@ def _fit(result):
     chi2, lag = result["chi2_reduced"], result["residual_lag1"]
     if chi2 is None:
         return ""
-    text = f"Fit: chi² per degree of freedom {format_number(chi2, digits=3)}"
+    text = f"Fit: reduced chi² {format_number(chi2, digits=3)}"
     return f"{text}, correlation of neighbouring residuals {format_number(lag, digits=2)}"
 
 
