@@ -1,0 +1,180 @@
+"""A pulse's own values in place of the chamber file's, addressed by key path."""
+
+from scatterfit.apparatus.keys import HUMIDITY, KEYS_OF, TABLE_BY_NAME, allowed_names
+from scatterfit.apparatus.values import fail, read_sigma, read_value, suggestion
+
+
+def split_path(path):
+    """Split a key path into table, column of a detector, and key.
+
+    Parameters
+    ----------
+    path : str
+        Such as ``chamber.temperature_K`` or ``detector.scatter1_V.gain_V_m``.
+
+    Returns
+    -------
+    parts : tuple of str or None
+        Table, column (empty but for detectors; the gas for ``gas.carrier.GAS``) and key;
+        ``None`` where no key of the chamber file has this path.
+
+    Examples
+    --------
+    >>> split_path("detector.scatter1_V.gain_V_m")
+    ('detector', 'scatter1_V', 'gain_V_m')
+    >>> split_path("gas.carrier.helium")
+    ('gas', 'helium', 'carrier')
+    >>> split_path("chamber.colour") is None
+    True
+    """
+    table, _, rest = path.partition(".")
+    if table not in TABLE_BY_NAME:
+        return None
+    column, key = "", rest
+    if table == "detector":
+        column, _, key = rest.rpartition(".")
+        if not column or key == "column":
+            return None
+    elif rest.startswith("carrier.") and table == "gas":
+        key, _, column = rest.partition(".")
+    return (table, column, key) if key in allowed_names(table) else None
+
+
+def check_override(path, value, where):
+    """Refuse an override that could not hold on any bench.
+
+    Parameters
+    ----------
+    path : str
+        Key path.
+    value : object
+        Its value, in the unit of the key.
+    where : str
+        File, or file and line, for messages.
+
+    Raises
+    ------
+    ChamberFileError
+        If the key path is not known, or the value has the wrong type or is out of bounds.
+
+    Examples
+    --------
+    >>> check_override("chamber.temperature_K", 296.15, "pulse.csv, line 1")
+    """
+    parts = split_path(path)
+    if parts is None:
+        fail(where, path, value, f"unknown key path; {suggestion(path, known_paths())}")
+    table, column, name = parts
+    if table == "gas" and column:
+        return
+    if name in KEYS_OF[table]:
+        read_value(KEYS_OF[table][name], value, where, path)
+    else:
+        read_sigma(KEYS_OF[table][name.removesuffix("_sigma")], value, where, path)
+
+
+def known_paths(columns=("COLUMN",)):
+    """Return every key path, with the given columns for detectors.
+
+    Parameters
+    ----------
+    columns : sequence of str
+        Columns of the bench's detectors.
+
+    Returns
+    -------
+    paths : list of str
+        Key paths.
+
+    Examples
+    --------
+    >>> "detector.scatter1_V.gain_V_m" in known_paths(["scatter1_V"])
+    True
+    """
+    paths = []
+    for table in TABLE_BY_NAME:
+        names = allowed_names(table)
+        if table == "detector":
+            paths += [f"detector.{c}.{name}" for c in columns for name in names[1:]]
+        else:
+            paths += [f"{table}.{name}" for name in names]
+    return paths
+
+
+def apply_overrides(mapping, overrides, where="overrides"):
+    """Return a chamber file's mapping with some values replaced.
+
+    One of the four ways to state the vapour replaces whichever the file uses.
+
+    Parameters
+    ----------
+    mapping : Mapping
+        The parsed chamber file; it stays as it is.
+    overrides : Mapping of str to object
+        Key path to value, in the unit of the key.
+    where : str
+        What messages call the origin of the overrides.
+
+    Returns
+    -------
+    changed : dict
+        A new mapping, to be checked as a whole by `apparatus_from_mapping`.
+
+    Raises
+    ------
+    ChamberFileError
+        If a key path is not known, names a detector that the bench does not have, or its value
+        could not hold on any bench.
+
+    Examples
+    --------
+    >>> before = {"chamber": {"temperature_K": 296.15, "path_mm": 120.0}}
+    >>> apply_overrides(before, {"chamber.temperature_K": 297.0})
+    {'chamber': {'temperature_K': 297.0, 'path_mm': 120.0}}
+    """
+    changed = {name: _copy(content) for name, content in mapping.items()}
+    _make_room_for_vapour(changed, overrides)
+    for path, value in overrides.items():
+        check_override(path, value, where)
+        table, column, name = split_path(path)
+        if table == "detector":
+            _detector(changed, path, value, where)[name] = value
+        elif table == "gas" and column:
+            content = changed.setdefault("gas", {})
+            if not isinstance(content.get("carrier"), dict):
+                content["carrier"] = {}
+            content["carrier"][column] = value
+        else:
+            changed.setdefault(table, {})[name] = value
+    return changed
+
+
+def _copy(content):
+    if isinstance(content, list):
+        return [_copy(part) for part in content]
+    if isinstance(content, dict):
+        return {name: _copy(part) for name, part in content.items()}
+    return content
+
+
+def _make_room_for_vapour(mapping, overrides):
+    """Drop the file's statement of the vapour where an override makes another."""
+    stated = [name for name in HUMIDITY if f"vapour.{name}" in overrides]
+    if stated and isinstance(mapping.get("vapour"), dict):
+        for name in set(HUMIDITY) - set(stated):
+            mapping["vapour"].pop(name, None)
+            mapping["vapour"].pop(f"{name}_sigma", None)
+
+
+def _detector(mapping, path, value, where):
+    """Return the detector's table that an override's key path names."""
+    tables = [table for table in mapping.get("detector", []) if isinstance(table, dict)]
+    column = split_path(path)[1]
+    for table in tables:
+        if table.get("column") == column:
+            return table
+    columns = [str(table.get("column")) for table in tables]
+    remedy = f"no detector fills column {column}; " + (
+        suggestion(column, columns) if columns else "the bench has no detectors"
+    )
+    return fail(where, path, value, remedy)
