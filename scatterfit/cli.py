@@ -231,8 +231,7 @@ def fit(
 
     Example: scatterfit fit bench.toml pulse.csv --out results
     """
-    from scatterfit.cli_pulse import fit_files, write_result
-    from scatterfit.files import json_text
+    from scatterfit.cli_pulse import fit_files, result_text, write_result
 
     pulse = fit_files(chamber, trace, settings or (), _exclusions(exclude_ms))
     result = pulse.to_dict()
@@ -240,7 +239,7 @@ def fit(
         for path in write_result(out, trace.stem, pulse):
             print(f"wrote {path}", file=sys.stderr)
     if as_json:
-        print(json_text(result))
+        print(result_text(result))
     else:
         from scatterfit.report.summary import summary_text
 
