@@ -5,6 +5,27 @@ import tomllib
 from scatterfit.errors import ChamberFileError
 
 
+def delimiter_of(header_line):
+    """Return what separates the columns of a table.
+
+    Parameters
+    ----------
+    header_line : str
+        The line of column names.
+
+    Returns
+    -------
+    delimiter : str
+        Tab, semicolon or comma, whichever of them comes first in this list.
+
+    Examples
+    --------
+    >>> delimiter_of("time_ms;scatter1_V")
+    ';'
+    """
+    return next((mark for mark in "\t;" if mark in header_line), ",")
+
+
 def parse_scalar(text, *, decimal_comma=False):
     """Return the value that a piece of text stands for.
 

@@ -14,13 +14,13 @@ from pathlib import Path
 import numpy as np
 
 from scatterfit.apparatus.overrides import check_override, split_path
-from scatterfit.apparatus.values import shown, suggestion
-from scatterfit.errors import ChamberFileError, TraceError
-from scatterfit.files_text import parse_scalar
+from scatterfit.apparatus.values import fail, nearest, printable, shown
+from scatterfit.errors import TraceError
+from scatterfit.files_text import delimiter_of, parse_scalar
 from scatterfit.units import PRESSURE_UNITS, TIME_UNITS, VOLTAGE_UNITS, column_unit, to_si
 
 TRACE_SUFFIXES = (".csv", ".tsv", ".txt", ".dat")
-"""Endings of the files that `read_trace` reads."""
+"""Endings of the files that are taken for traces in a folder."""
 
 FEWEST_SAMPLES = 20
 """Usable samples that a trace must have."""
@@ -28,6 +28,8 @@ FEWEST_SAMPLES = 20
 _BINARY_SUFFIXES = {".h5": "HDF5", ".hdf5": "HDF5", ".nc": "netCDF"}
 _TIME_COLUMNS = tuple(f"time_{unit}" for unit in TIME_UNITS)
 _BYTE_ORDER_MARK = b"\xef\xbb\xbf"
+_NAMES_LENGTH = 200
+_NOT_REPAIRED = "; a damaged file is not repaired"
 
 
 @dataclass(frozen=True)
@@ -85,18 +87,18 @@ def read_trace(path):
         If one of its ``#`` lines sets a value that no bench could have.
     """
     source = str(path)
-    raw = _read_bytes(path)
-    text = _decode(raw, source)
-    preamble, header_line, line_number, body = _split(text, source)
-    layout = _layout(header_line, line_number, source)
+    raw = _read_bytes(path, source)
+    preamble, header_line, body = _split(_decode(raw, source), source)
+    layout = _layout(header_line, len(preamble), preamble, source)
     overrides, comments = _overrides(preamble, layout)
+    if not body.strip():
+        raise _refused(source, "there are no data rows below the header")
     table = _fast_table(body, layout)
     if table is None:
         table = _careful_table(body, layout)
-    time = _time(table, layout)
     return Trace(
         source=source,
-        time=time,
+        time=_time(table, layout),
         columns=_columns(table, layout),
         header=layout.header,
         overrides=overrides,
@@ -105,79 +107,75 @@ def read_trace(path):
     )
 
 
-def _read_bytes(path):
+def _refused(source, text):
+    return TraceError(printable(f"{source}: {text}"))
+
+
+def _read_bytes(path, source):
     kind = _BINARY_SUFFIXES.get(Path(path).suffix.lower())
     if kind is not None:
-        message = (f"{path}: {kind} traces are not read by this version; "
-                   "save the columns as CSV, one row a sample")
-        raise TraceError(message)
+        raise _refused(source, f"{kind} traces are not read by this version of scatterfit; save "
+                               "the columns as CSV, one row a sample")
     try:
         return Path(path).read_bytes()
     except OSError as error:
-        message = f"{path}: cannot be read: {error.strerror or error}"
-        raise TraceError(message) from error
+        raise _refused(source, f"cannot be read: {error.strerror or error}") from error
 
 
 def _decode(raw, source):
     """Return the file's text with single newlines, or refuse what is not text."""
+    raw = raw.removeprefix(_BYTE_ORDER_MARK)
     if not raw.strip():
-        message = f"{source}: the file is empty; a header of column names and rows are needed"
-        raise TraceError(message)
-    if raw.startswith(_BYTE_ORDER_MARK):
-        raw = raw[len(_BYTE_ORDER_MARK):]
-    if b"\0" in raw:
-        message = f"{source}: not a text file (it holds zero bytes); save it as UTF-8 text"
-        raise TraceError(message)
+        raise _refused(source, "the file is empty; a header of column names and rows are needed")
     try:
+        if b"\0" in raw:
+            raise _refused(source, "not text (it holds zero bytes); save it as UTF-8 text")
         text = raw.decode("utf-8")
     except UnicodeDecodeError as error:
         row = raw.count(b"\n", 0, error.start) + 1
-        message = (f"{source}: row {row}: not UTF-8 text (byte 0x{raw[error.start]:02x}); "
-                   "save it as UTF-8 text")
-        raise TraceError(message) from error
+        raise _refused(source, f"row {row}: not UTF-8 text (byte 0x{raw[error.start]:02x}); save "
+                               "it as UTF-8 text") from error
     return text.replace("\r\n", "\n").replace("\r", "\n") if "\r" in text else text
 
 
 def _split(text, source):
-    """Return the ``#`` lines with their numbers, the header with its number, and the body."""
-    preamble, position, number = [], 0, 0
+    """Return the lines before the header, the header, and everything below it."""
+    preamble, position = [], 0
     while position < len(text):
         end = text.find("\n", position)
         end = len(text) if end < 0 else end
-        line, number = text[position:end], number + 1
+        line = text[position:end]
         position = end + 1
-        if line.startswith("#"):
-            preamble.append((number, line))
-        elif line.strip():
-            return preamble, line, number, text[position:]
-    message = f"{source}: there is no header of column names and there are no rows"
-    raise TraceError(message)
+        if line.strip() and not line.startswith("#"):
+            return preamble, line, text[position:].rstrip(" \n")
+        preamble.append(line)
+    raise _refused(source, "there is no header of column names, and there are no rows")
 
 
-def _layout(line, number, source):
+def _layout(line, lines_before, preamble, source):
     """Read the header: what separates the columns, and what they are called."""
-    delimiter = next((mark for mark in "\t;" if mark in line), ",")
+    delimiter = delimiter_of(line)
     header = tuple(_unquoted(name) for name in line.split(delimiter))
-    layout = _Layout(source, delimiter, header, number + 1)
+    row = lines_before + 1
     if all(_is_number(name, delimiter) for name in header):
-        message = f"{source}: row {number}: a header of column names is missing before the numbers"
-        raise TraceError(message)
+        hint = "; the # line before it is a comment" if any(
+            name in before for before in preamble for name in _TIME_COLUMNS) else ""
+        raise _refused(source, f"row {row}: numbers where the header of column names should "
+                               f"be{hint}")
     for position, name in enumerate(header, start=1):
         if not name:
-            message = f"{source}: row {number}: column {position} of the header has no name"
-            raise TraceError(message)
+            raise _refused(source, f"row {row}: column {position} of the header has no name")
         if header.count(name) > 1:
-            message = f"{source}: row {number}: column {name} is there twice"
-            raise TraceError(message)
+            raise _refused(source, f"row {row}: column {name} is there twice")
+    layout = _Layout(source, delimiter, header, row + 1)
     _time_column(layout)
     return layout
 
 
 def _unquoted(cell):
     cell = cell.strip()
-    if len(cell) >= 2 and cell[0] == cell[-1] == '"':
-        return cell[1:-1].strip()
-    return cell
+    quoted = len(cell) >= 2 and cell[0] == cell[-1] == '"'
+    return cell[1:-1].strip() if quoted else cell
 
 
 def _is_number(cell, delimiter):
@@ -193,11 +191,14 @@ def _cell_value(cell, delimiter):
     cell = _unquoted(cell)
     if not cell:
         return math.nan
-    if delimiter != ",":
-        cell = cell.replace(",", ".", 1)
-    if "_" in cell or not cell.isascii():
+    if "_" in cell or not cell.isascii():  # float takes 1_000 and other alphabets' digits
         raise ValueError(cell)
-    return float(cell)
+    return float(cell if delimiter == "," else cell.replace(",", ".", 1))
+
+
+def _names(header):
+    text = ", ".join(header)
+    return text if len(text) <= _NAMES_LENGTH else text[: _NAMES_LENGTH - 3] + "..."
 
 
 def _time_column(layout):
@@ -205,50 +206,26 @@ def _time_column(layout):
     found = [name for name in layout.header if name in _TIME_COLUMNS]
     if len(found) == 1:
         return layout.header.index(found[0]), column_unit(found[0], TIME_UNITS)
-    there = ", ".join(layout.header)
-    what = "there is no time column" if not found else f"{' and '.join(found)} both give the time"
-    message = (f"{layout.source}: row {layout.first_row - 1}: {what}; exactly one of "
-               f"{', '.join(_TIME_COLUMNS)} is needed, the columns are {shown_names(there)}")
-    raise TraceError(message)
-
-
-def shown_names(text, length=200):
-    """Return a list of names, cut where it gets too long for one line.
-
-    Parameters
-    ----------
-    text : str
-        Names, separated by commas.
-    length : int
-        Most characters to show [-].
-
-    Returns
-    -------
-    text : str
-        The names on one line.
-
-    Examples
-    --------
-    >>> shown_names("time_ms, scatter1_V", 10)
-    'time_ms...'
-    """
-    text = text.encode("unicode_escape").decode("ascii")
-    return text if len(text) <= length else text[: length - 3] + "..."
+    what = f"{' and '.join(found)} both give the time" if found else "there is no time column"
+    text = (f"row {layout.first_row - 1}: {what}; exactly one of {', '.join(_TIME_COLUMNS)} is "
+            f"needed, the columns are {_names(layout.header)}")
+    if len(layout.header) == 1:
+        text += "; columns are separated by comma, tab or semicolon"
+    raise _refused(layout.source, text)
 
 
 def _overrides(preamble, layout):
     """Return the values that the ``#`` lines set, and the lines that set none."""
     overrides, comments = {}, []
-    for number, line in preamble:
+    for row, line in enumerate(preamble, start=1):
         text = line.lstrip("#").strip()
         path, equals, written = (part.strip() for part in text.partition("="))
         if not equals or split_path(path) is None:
-            comments.append(text)
+            comments += [text] if text else []
             continue
-        where = f"{layout.source}, row {number}"
+        where = f"{layout.source}: row {row}"
         if path in overrides:
-            message = f"{where}: {path} = {written}: is set twice in this file"
-            raise ChamberFileError(message)
+            fail(where, path, written, "is set twice in this file")
         overrides[path] = parse_scalar(written, decimal_comma=layout.delimiter == ";")
         check_override(path, overrides[path], where)
     return overrides, tuple(comments)
@@ -256,83 +233,74 @@ def _overrides(preamble, layout):
 
 def _fast_table(body, layout):
     """Return all cells as floats, shape (rows, columns), or None where a closer look is due."""
-    body = body.rstrip("\n")
-    width = len(layout.header)
-    if not body or "_" in body or not body.isascii():
+    if not body.isascii() or "\n\n" in body or body.startswith("\n"):
         return None
-    lines = body.split("\n")
-    separators = width - 1
-    if any(line.count(layout.delimiter) != separators for line in lines):
-        return None
-    if layout.delimiter != ",":
-        if "," in body and "." in body:
+    if layout.delimiter != "," and "," in body:
+        if "." in body:
             return None
         body = body.replace(",", ".")
+    rows = _spelled_out(body, layout.delimiter).split("\n")
     try:
-        cells = np.array(
-            list(map(float, body.replace("\n", layout.delimiter).split(layout.delimiter))))
+        table = np.loadtxt(rows, delimiter=layout.delimiter, comments=None, ndmin=2)
     except ValueError:
         return None
-    return cells.reshape(len(lines), width)
+    return table if table.shape == (len(rows), len(layout.header)) else None
+
+
+def _spelled_out(body, mark):
+    """Return the rows with ``nan`` in their empty cells."""
+    for _ in range(2):  # twice, as neighbours share a mark
+        body = body.replace(mark + mark, f"{mark}nan{mark}")
+    body = body.replace(f"{mark}\n", f"{mark}nan\n").replace(f"\n{mark}", f"\nnan{mark}")
+    return body + "nan" if body.endswith(mark) else body
 
 
 def _careful_table(body, layout):
     """Return all cells as floats, shape (rows, columns), or name the first that is wrong."""
-    lines = body.rstrip("\n").split("\n") if body.strip() else []
-    if not lines:
-        message = f"{layout.source}: there are no data rows below the header"
-        raise TraceError(message)
-    decimal_marks = set()
+    marks = set()
     return np.array([
-        _careful_row(line, number, layout, decimal_marks)
-        for number, line in enumerate(lines, start=layout.first_row)
+        _careful_row(line, row, layout, marks)
+        for row, line in enumerate(body.split("\n"), start=layout.first_row)
     ])
 
 
-def _careful_row(line, number, layout, decimal_marks):
+def _careful_row(line, row, layout, marks):
+    """Return the cells of one row; ``marks`` collects the decimal marks that the file uses."""
     cells = line.split(layout.delimiter)
     if len(cells) != len(layout.header):
-        what = "is empty" if not line.strip() else f"has {len(cells)} cells"
-        message = (f"{layout.source}: row {number} {what}, the header has "
-                   f"{len(layout.header)} columns ({shown_names(', '.join(layout.header))}); "
-                   "a damaged file is not repaired")
-        raise TraceError(message)
+        what = f"{len(cells)} cell{'s' if len(cells) > 1 else ''}" if line.strip() else "no cells"
+        raise _refused(layout.source, f"row {row}: {what}, the header has {len(layout.header)} "
+                                      f"columns ({_names(layout.header)}){_NOT_REPAIRED}")
     values = []
     for name, cell in zip(layout.header, cells, strict=True):
         try:
             values.append(_cell_value(cell, layout.delimiter))
         except ValueError:
-            message = (f"{layout.source}: row {number}, column {name}: {shown(cell.strip())} is "
-                       "not a number; a damaged file is not repaired")
-            raise TraceError(message) from None
-        decimal_marks.update(mark for mark in ".," if mark in cell)
-        if len(decimal_marks) > 1:
-            message = (f"{layout.source}: row {number}, column {name}: {shown(cell.strip())} "
-                       "changes between decimal points and decimal commas within the file")
-            raise TraceError(message)
+            raise _refused(layout.source, f"row {row}, column {name}: {shown(cell.strip())} is "
+                                          f"not a number{_NOT_REPAIRED}") from None
+        marks.update(mark for mark in ".," if mark in cell)
+        if len(marks) > 1:
+            raise _refused(layout.source, f"row {row}, column {name}: {shown(cell.strip())} "
+                           "mixes decimal points and decimal commas in one file" + _NOT_REPAIRED)
     return values
 
 
 def _time(table, layout):
     """Return the sample times [s], which must increase from row to row."""
     index, unit = _time_column(layout)
-    name = layout.header[index]
-    time = table[:, index]
+    name, time = layout.header[index], table[:, index]
     wrong = np.flatnonzero(~np.isfinite(time))
     if wrong.size:
-        message = (f"{layout.source}: row {layout.first_row + wrong[0]}, column {name}: "
-                   "a sample without a time; a damaged file is not repaired")
-        raise TraceError(message)
+        raise _refused(layout.source, f"row {layout.first_row + wrong[0]}, column {name}: a "
+                                      f"sample without a time{_NOT_REPAIRED}")
     wrong = np.flatnonzero(np.diff(time) <= 0)
     if wrong.size:
         before, here = time[wrong[0]], time[wrong[0] + 1]
         what = "stands still at" if here == before else f"runs backwards from {before:.12g} to"
-        message = (f"{layout.source}: row {layout.first_row + wrong[0] + 1}, column {name}: "
-                   f"time {what} {here:.12g}; a damaged file is not repaired")
-        raise TraceError(message)
+        raise _refused(layout.source, f"row {layout.first_row + wrong[0] + 1}, column {name}: "
+                                      f"time {what} {here:.12g}{_NOT_REPAIRED}")
     if time.size < FEWEST_SAMPLES:
-        message = (f"{layout.source}: {time.size} samples, at least {FEWEST_SAMPLES} are needed")
-        raise TraceError(message)
+        raise _refused(layout.source, f"{time.size} samples, at least {FEWEST_SAMPLES} are needed")
     return np.ascontiguousarray(to_si(time, unit))
 
 
@@ -348,12 +316,12 @@ def _columns(table, layout):
     return columns
 
 
-def check_columns(bench_columns, trace):
+def check_columns(named, trace):
     """Refuse a trace that lacks a column of the bench, or has next to nothing in one.
 
     Parameters
     ----------
-    bench_columns : sequence of tuple of str
+    named : sequence of tuple of str
         Pairs of key path and column name, as ``consistency.columns_of`` returns them.
     trace : Trace
         The trace.
@@ -363,19 +331,13 @@ def check_columns(bench_columns, trace):
     TraceError
         If a column is missing or has fewer than 20 finite samples.
     """
-    for path, column in bench_columns:
+    for path, column in named:
         if column not in trace.columns:
-            message = (f"{trace.source}: there is no column {column}, which the chamber file names "
-                       f"({path}); the columns are {shown_names(', '.join(trace.header))}"
-                       f"{_meant(column, trace.columns)}")
-            raise TraceError(message)
+            match = nearest(column, trace.columns)
+            meant = f"; did you mean {match}?" if match else ""
+            raise _refused(trace.source, f"there is no column {column}, which the chamber file "
+                           f"names ({path}); the columns are {_names(trace.header)}{meant}")
         usable = np.count_nonzero(np.isfinite(trace.columns[column]))
         if usable < FEWEST_SAMPLES:
-            message = (f"{trace.source}: column {column}: {usable} usable samples, at least "
-                       f"{FEWEST_SAMPLES} are needed")
-            raise TraceError(message)
-
-
-def _meant(column, known):
-    text = suggestion(column, known)
-    return f"; {text}" if text.startswith("did you mean") else ""
+            raise _refused(trace.source, f"column {column}: {usable} usable samples, at least "
+                                         f"{FEWEST_SAMPLES} are needed")

@@ -32,6 +32,10 @@ UNITS = {
     "N_m": (1.0, 1.0),
     "mm2_s": (1.0, 1e6),
     "kJ_mol": (1e3, 1.0),
+    "J_mol_K": (1.0, 1.0),
+    "mW_m_K": (1.0, 1e3),
+    "uPa_s": (1.0, 1e6),
+    "g_mol": (1.0, 1e3),
     "": (1.0, 1.0),
 }
 """Suffix to (numerator, denominator) of its size in SI.

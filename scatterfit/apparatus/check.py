@@ -179,7 +179,7 @@ def _carrier(content, where, sigmas):
     if isinstance(fractions, dict):
         fractions = _fractions(fractions, where, sigmas)
     try:
-        return dict(matter.carrier(fractions).fractions)
+        return dict(matter.carrier(fractions).composition)
     except InvalidInputError as error:
         fail(where, "gas.carrier", content["carrier"], str(error))
 
@@ -188,10 +188,9 @@ def _fractions(table, where, sigmas):
     fractions = {}
     for name, value in table.items():
         path = f"gas.carrier.{name}"
-        if isinstance(value, bool) or not isinstance(value, int | float):
-            fail(where, path, value, "a mole fraction must be a number")
-        if not 0 <= value <= 1:
-            fail(where, path, value, "a mole fraction must be at least 0 and at most 1")
+        number = not isinstance(value, bool) and isinstance(value, int | float)
+        if not (number and 0 <= value <= 1):
+            fail(where, path, value, "a mole fraction must be a number, at least 0 and at most 1")
         if name.removesuffix("_sigma") not in table:
             fail(where, path, value, f"there is no {path.removesuffix('_sigma')}")
         if name.endswith("_sigma"):
@@ -202,4 +201,4 @@ def _fractions(table, where, sigmas):
     if abs(total - 1) > _FRACTION_TOLERANCE:
         remedy = f"mole fractions of the dry gas must add up to 1; these add up to {total:.8g}"
         fail(where, "gas.carrier", table, remedy)
-    return fractions
+    return {name: fraction for name, fraction in fractions.items() if fraction > 0}

@@ -59,7 +59,7 @@ class Key:
     default: object = None
     """What holds when it is absent, in the key's unit; ``None``: nothing does."""
     property_name: str | None = None
-    """For an override in ``[vapour]``: name of the property."""
+    """For what overrides a correlation: the property's name in ``matter``."""
     example: str = ""
     """A value as it would be written in the file."""
     doc: str = ""
@@ -119,8 +119,8 @@ HUMIDITY = ("mole_fraction", "partial_pressure_kPa", "saturation_ratio", "dew_po
 KEYS = (
     Key("beam", "wavelength_nm", "wavelength", "nm", bounds=Bounds(200, 2000), required=True,
         example="532.0", doc="vacuum wavelength"),
-    Key("beam", "polarization", "polarization", "deg", kind="polarization", required=True,
-        example='"perpendicular"',
+    Key("beam", "polarization", "polarization", "deg", kind="polarization",
+        bounds=Bounds(-180, 180), required=True, example='"perpendicular"',
         doc='electric field against the scattering plane: "perpendicular", "parallel", '
             '"unpolarized", or degrees from the plane'),
     Key("detector", "column", "column", kind="column", required=True, example='"scatter1_V"',
@@ -182,9 +182,24 @@ KEYS = (
         doc="of the vapour in the carrier at 273.15 K and 101.325 kPa"),
     Key("vapour", "latent_heat_kJ_mol", "latent_heat", "kJ_mol", bounds=Bounds(1, 500),
         property_name="latent_heat", example="44.5", doc="molar heat of evaporation"),
-    Key("vapour", "saturation_pressure_scale", "saturation_pressure_scale",
-        bounds=Bounds(0.2, 5), property_name="saturation_pressure_scale", example="1.0",
-        doc="factor on the built-in saturation vapour pressure"),
+    Key("vapour", "saturation_pressure_kPa", "saturation_pressure", "kPa",
+        bounds=Bounds(0, 1e3, open_low=True), property_name="saturation_pressure",
+        example="3.17",
+        doc="over the liquid at 298.15 K; the built-in dependence on temperature stays"),
+    Key("vapour", "vapour_heat_capacity_J_mol_K", "vapour_heat_capacity", "J_mol_K",
+        bounds=Bounds(10, 2000), property_name="vapour_heat_capacity", example="33.6",
+        doc="of the vapour at constant pressure"),
+    Key("vapour", "liquid_heat_capacity_J_mol_K", "liquid_heat_capacity", "J_mol_K",
+        bounds=Bounds(10, 5000), property_name="liquid_heat_capacity", example="75.3",
+        doc="of the liquid at constant pressure"),
+    Key("vapour", "vapour_conductivity_mW_m_K", "vapour_conductivity", "mW_m_K",
+        bounds=Bounds(0.5, 500), property_name="vapour_conductivity", example="18.0",
+        doc="thermal conductivity of the dilute vapour"),
+    Key("vapour", "vapour_viscosity_uPa_s", "vapour_viscosity", "uPa_s",
+        bounds=Bounds(0.5, 200), property_name="vapour_viscosity", example="9.5",
+        doc="of the dilute vapour"),
+    Key("vapour", "molar_mass_g_mol", "molar_mass", "g_mol", bounds=Bounds(1, 2000),
+        property_name="molar_mass", example="18.015", doc="of the substance"),
     Key("vapour", "mass_accommodation", "mass_accommodation", bounds=_ACCOMMODATION, default=1.0,
         example="1.0", doc="mass accommodation coefficient"),
     Key("vapour", "thermal_accommodation", "thermal_accommodation", bounds=_ACCOMMODATION,

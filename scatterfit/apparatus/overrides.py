@@ -1,7 +1,7 @@
 """A pulse's own values in place of the chamber file's, addressed by key path."""
 
 from scatterfit.apparatus.keys import HUMIDITY, KEYS_OF, TABLE_BY_NAME, allowed_names
-from scatterfit.apparatus.values import fail, read_sigma, read_value, suggestion
+from scatterfit.apparatus.values import fail, nearest, read_sigma, read_value, suggestion
 
 
 def split_path(path):
@@ -63,7 +63,8 @@ def check_override(path, value, where):
     """
     parts = split_path(path)
     if parts is None:
-        fail(where, path, value, f"unknown key path; {suggestion(path, known_paths())}")
+        columns = (path.removeprefix("detector.").rpartition(".")[0] or "COLUMN",)
+        fail(where, path, value, f"unknown key path; {_path_meant(path, columns)}")
     table, column, name = parts
     if table == "gas" and column:
         return
@@ -71,6 +72,12 @@ def check_override(path, value, where):
         read_value(KEYS_OF[table][name], value, where, path)
     else:
         read_sigma(KEYS_OF[table][name.removesuffix("_sigma")], value, where, path)
+
+
+def _path_meant(path, columns):
+    match = nearest(path, known_paths(columns))
+    return f"did you mean {match}?" if match else (
+        "a key path reads TABLE.KEY, or detector.COLUMN.KEY, such as chamber.temperature_K")
 
 
 def known_paths(columns=("COLUMN",)):
@@ -139,14 +146,20 @@ def apply_overrides(mapping, overrides, where="overrides"):
         table, column, name = split_path(path)
         if table == "detector":
             _detector(changed, path, value, where)[name] = value
-        elif table == "gas" and column:
-            content = changed.setdefault("gas", {})
-            if not isinstance(content.get("carrier"), dict):
-                content["carrier"] = {}
-            content["carrier"][column] = value
         else:
-            changed.setdefault(table, {})[name] = value
+            _put(changed, table, column, name, value)
     return changed
+
+
+def _put(mapping, table, column, name, value):
+    content = mapping.setdefault(table, {})
+    if not isinstance(content, dict):  # said by the check of the whole
+        return
+    if column:
+        if not isinstance(content.get(name), dict):
+            content[name] = {}
+        content = content[name]
+    content[column or name] = value
 
 
 def _copy(content):

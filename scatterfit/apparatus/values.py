@@ -13,6 +13,7 @@ POLARIZATIONS = {"perpendicular": math.pi / 2, "parallel": 0.0, "unpolarized": N
 
 _INDEX_PARTS = (("n", 1.0, 4.0), ("k", 0.0, 10.0))
 _SHOWN_LENGTH = 60
+_LARGEST = 1.7e308
 
 
 def nearest(word, known):
@@ -90,14 +91,38 @@ def shown(value):
     if isinstance(value, bool):
         text = str(value).lower()
     elif isinstance(value, str):
-        text = '"' + value.encode("unicode_escape").decode("ascii") + '"'
+        text = f'"{value}"'
     elif isinstance(value, dict):
         text = "{" + ", ".join(f"{k} = {shown(v)}" for k, v in value.items()) + "}"
     elif isinstance(value, list | tuple):
         text = "[" + ", ".join(shown(v) for v in value) + "]"
     else:
         text = str(value)
+    text = printable(text)
     return text if len(text) <= _SHOWN_LENGTH else text[: _SHOWN_LENGTH - 3] + "..."
+
+
+def printable(text):
+    r"""Return a text on one line, with what cannot be printed as escapes.
+
+    Parameters
+    ----------
+    text : str
+        Any text.
+
+    Returns
+    -------
+    text : str
+        The same with line breaks and control characters spelled out.
+
+    Examples
+    --------
+    >>> print(printable("two" + chr(10) + "lines"))
+    two\nlines
+    """
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
 def fail(where, path, value, remedy):
@@ -120,7 +145,7 @@ def fail(where, path, value, remedy):
         Always.
     """
     message = f"{where}: {path} = {shown(value)}: {remedy}"
-    raise ChamberFileError(message)
+    raise ChamberFileError(printable(message))
 
 
 def read_value(key, value, where, path):
@@ -207,10 +232,9 @@ def _number(value, where, path):
             if value.replace(",", ".", 1).replace(".", "", 1).strip("+-").isdigit():
                 hint += "; write it without quotes and with a decimal point"
         fail(where, path, value, hint)
-    number = float(value)
-    if not math.isfinite(number):
+    if not abs(value) <= _LARGEST:
         fail(where, path, value, "must be a finite number")
-    return number
+    return float(value)
 
 
 def _read_number(key, value, where, path):
@@ -253,10 +277,7 @@ def _read_polarization(key, value, where, path):
             meant = f'; did you mean "{match}"?' if match else ""
             fail(where, path, value, f"must be {words} or a number of degrees{meant}")
         return POLARIZATIONS[value]
-    number = _number(value, where, path)
-    if abs(number) > 180:
-        fail(where, path, value, "must be at least -180 and at most 180 (deg)")
-    return to_si(number, key.unit)
+    return _read_number(key, value, where, path)
 
 
 def _read_index(_key, value, where, path):
