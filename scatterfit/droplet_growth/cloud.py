@@ -1,0 +1,261 @@
+"""Radius against time for a cloud: classes of droplets that share one gas.
+
+The unknown is not stepped through time but solved at all its nodes at once: rates are evaluated
+for every class, node and variant together, integrated, and the result is fed back until it stands
+still. In (r + l)^2 growth is nearly a straight line, so a few rounds do. What couples the
+droplets, the vapour they take and the heat they give, is linearised and solved as one scalar
+equation a round (Newton's method for integral equations), which also holds in thick clouds that
+relax much faster than the nodes are apart.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from scatterfit.constants import GAS_CONSTANT
+from scatterfit.droplet_growth.properties import horner, mean_speed
+from scatterfit.droplet_growth.single_droplet import growth_rate
+
+_ROUNDS = 30
+_TOLERANCE = 2e-6
+_SMALLEST_FRACTION = 1e-9
+
+
+@dataclass(frozen=True)
+class CloudParameters:
+    """What may differ between variants of one pulse; arrays broadcast to shape (v,)."""
+
+    droplets_per_mole: np.ndarray
+    """Droplets per mole of moist gas [1/mol]."""
+    growth_scale: np.ndarray
+    """Factor on dr/dt [-]."""
+    mass_accommodation: np.ndarray
+    """[-]."""
+    thermal_accommodation: np.ndarray
+    """[-]."""
+    vapour_fraction: np.ndarray
+    """Mole fraction of vapour before condensation [-]."""
+    temperature_factor: np.ndarray
+    """Undisturbed temperature over that of the gas path [-]."""
+
+    def columns(self):
+        """Return the fields as arrays of shape (v,)."""
+        return np.broadcast_arrays(
+            *(np.atleast_1d(np.asarray(value, dtype=float)) for value in (
+                self.droplets_per_mole, self.growth_scale, self.mass_accommodation,
+                self.thermal_accommodation, self.vapour_fraction, self.temperature_factor,
+            ))
+        )
+
+
+@dataclass(frozen=True)
+class CloudGrowth:
+    """A solved cloud, for v variants, c classes and m nodes."""
+
+    time: np.ndarray
+    """Nodes, shape (m,) [s]."""
+    square: np.ndarray
+    """(r + l)^2, the variable in which growth is smooth, shape (v, c, m) [m^2]."""
+    square_rate: np.ndarray
+    """Its time derivative, shape (v, c, m) [m^2/s]."""
+    length: np.ndarray
+    """l, shape (v,) [m]."""
+    start_radius: float
+    """Radius at birth [m]."""
+    birth_times: np.ndarray
+    """Shape (v, c) [s]."""
+    weights: np.ndarray
+    """Share of droplets a class, shape (c,) [-]."""
+    condensed: np.ndarray
+    """Moles condensed per mole of moist gas, shape (v, m) [-]."""
+    temperature: np.ndarray
+    """Of the gas, shape (v, m) [K]."""
+    vapour_fraction: np.ndarray
+    """Of the gas, shape (v, m) [-]."""
+    droplet_temperature: np.ndarray
+    """Shape (v, c, m) [K]."""
+    pressure: np.ndarray
+    """Shape (m,) [Pa]."""
+    droplets_per_mole: np.ndarray
+    """Shape (v,) [1/mol]."""
+    converged: bool
+    """Whether the last round changed nothing that matters."""
+
+    @property
+    def radius(self):
+        """Radius at the nodes, shape (v, c, m) [m]."""
+        return np.sqrt(self.square) - self.length[:, None, None]
+
+    @property
+    def number_density(self):
+        """Droplets per volume at the nodes, shape (v, m) [1/m^3]."""
+        moles = self.pressure / (GAS_CONSTANT * self.temperature * (1.0 - self.condensed))
+        return self.droplets_per_mole[:, None] * moles
+
+
+def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
+    """Return how a cloud grows.
+
+    Parameters
+    ----------
+    properties : GrowthProperties
+        Of the pulse.
+    path : GasPath
+        The undisturbed gas, m nodes.
+    births : tuple of ndarray
+        Times, shape (c,) or (v, c) [s], and weights, shape (c,) [-], of the classes.
+    parameters : CloudParameters
+        One or more variants.
+    start_radius : float
+        Radius at birth [m].
+
+    Returns
+    -------
+    cloud : CloudGrowth
+        The solution for all variants.
+    """
+    number, scale, mass, thermal, fraction, factor = parameters.columns()
+    times, weights = births
+    times = np.broadcast_to(times, (number.size, weights.size))
+    length = _typical_length(properties, path, mass)
+    gas = _Gas(properties, path, fraction, factor)
+    square = np.maximum(
+        (start_radius + length[:, None, None]) ** 2
+        + 4e-11 * np.maximum(path.time - times[:, :, None], 0.0), 0.0,
+    )
+    condensed = np.zeros((number.size, path.time.size))
+    moles = (4.0 * np.pi / 3.0 / properties.molar_volume) * number
+    temperature, share = gas.state(condensed)
+    droplet_temperature = np.repeat(temperature[:, None, :], weights.size, axis=1)
+    accommodation = (mass[:, None, None], thermal[:, None, None])
+    place = _birth_cells(path.time, times)
+    floor = (start_radius + length[:, None, None]) ** 2
+    step = np.diff(path.time)
+    converged, slope = False, None
+    for turn in range(_ROUNDS):
+        radius = np.sqrt(square) - length[:, None, None]
+        surroundings = (temperature[:, None, :], path.pressure, share[:, None, :])
+        rate, droplet_temperature = growth_rate(
+            properties, radius, surroundings, accommodation, droplet_temperature,
+            steps=3 if turn == 0 else 1,
+        )
+        rate *= (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
+        grown = np.maximum(_since_birth(rate, step, place), 0.0)
+        new_square = floor + grown
+        new_radius = np.sqrt(new_square) - length[:, None, None]
+        cubes = np.einsum("c,vcm->vm", weights, new_radius**3) - start_radius**3
+        error = moles[:, None] * cubes - condensed
+        if slope is None or turn < 4:
+            slope = _slope(gas, rate, condensed, share, temperature, path)
+        alive = grown > 0.0
+        gain = (1.5 * moles[:, None, None]) * new_radius**2 / (new_radius + length[:, None, None])
+        gain = np.einsum("c,vcm->vm", weights, np.where(alive, gain, 0.0))
+        response = np.einsum("c,vcm->vm", weights, slope * np.where(alive, 1.0, 0.0))
+        inner = _coupled(error, gain, response, step)
+        change = error + gain * inner
+        condensed = np.clip(condensed + change, 0.0, 0.999 * fraction[:, None])
+        new_square = np.maximum(new_square + np.where(alive, inner[:, None, :], 0.0), floor)
+        moved = np.max(np.abs(new_square - square) / new_square)
+        square = new_square
+        temperature, share = gas.state(condensed)
+        if moved < _TOLERANCE:
+            converged = True
+            break
+    return CloudGrowth(
+        time=path.time, square=square, square_rate=np.where(alive, rate, 0.0), length=length,
+        start_radius=start_radius, birth_times=times, weights=weights, condensed=condensed,
+        temperature=temperature, vapour_fraction=share, droplet_temperature=droplet_temperature,
+        pressure=path.pressure, droplets_per_mole=number, converged=converged,
+    )
+
+
+class _Gas:
+    """State of the gas as a function of what has condensed."""
+
+    def __init__(self, properties, path, fraction, factor):
+        self.properties = properties
+        self.fraction = fraction[:, None]
+        self.undisturbed = path.temperature * factor[:, None]
+
+    def state(self, condensed):
+        """Return temperature [K] and vapour mole fraction [-], shape (v, m).
+
+        From cp dT = R T dp/p + L dq: the heat enters as a factor exp(sum of L dq / (cp T)).
+        """
+        p = self.properties
+        temperature = self.undisturbed
+        if condensed.any():
+            guess = self.undisturbed
+            for _ in range(2):
+                latent = horner(p.latent_heat_of, p.scaled(guess)) / (p.heat_capacity * guess)
+                heat = np.zeros_like(condensed)
+                np.cumsum(
+                    0.5 * (latent[:, 1:] + latent[:, :-1]) * np.diff(condensed, axis=1),
+                    axis=1, out=heat[:, 1:],
+                )
+                heat += (latent * condensed)[:, :1]
+                guess = self.undisturbed * np.exp(heat)
+            temperature = guess
+        share = (self.fraction - condensed) / (1.0 - condensed)
+        return temperature, np.maximum(share, _SMALLEST_FRACTION)
+
+
+def _typical_length(properties, path, accommodation):
+    """Return the length [m] that makes (r + l)^2 grow nearly straight, shape (v,)."""
+    temperature = path.reference_temperature
+    film = properties.scaled(np.asarray(temperature))
+    diffusivity = horner(properties.diffusivity_of, film) * temperature / path.reference_pressure
+    mean_free_path = 3.0 * diffusivity / mean_speed(temperature, properties.vapour_molar_mass)
+    return (4.0 / (3.0 * accommodation) - 0.4) * mean_free_path
+
+
+def _birth_cells(time, births):
+    """Return the cell that holds each birth and how far into it the birth falls, shape (v, c)."""
+    cell = np.clip(np.searchsorted(time, births, side="right") - 1, 0, time.size - 2)
+    within = (births - time[cell]) / (time[cell + 1] - time[cell])
+    return cell, np.clip(within, 0.0, 1.0)
+
+
+def _since_birth(rate, step, place):
+    """Return the integral of a rate from each class's birth on, shape (v, c, m)."""
+    total = np.zeros_like(rate)
+    np.cumsum(0.5 * step * (rate[..., 1:] + rate[..., :-1]), axis=-1, out=total[..., 1:])
+    cell, within = place
+    index = cell[..., None]
+    low = np.take_along_axis(rate, index, -1)[..., 0]
+    high = np.take_along_axis(rate, index + 1, -1)[..., 0]
+    before = np.take_along_axis(total, index, -1)[..., 0]
+    before = before + step[cell] * within * (low + 0.5 * within * (high - low))
+    return total - before[..., None]
+
+
+def _slope(gas, rate, condensed, share, temperature, path):
+    """Return d(rate)/dq at fixed radius, shape (v, c, m), from the linear law's driving force.
+
+    The rate is proportional to what drives it, the distance from equilibrium, which falls with q
+    by the vapour taken and by the warming of the gas. An estimate serves: it only steers
+    the iteration.
+    """
+    p = gas.properties
+    saturated = np.exp(horner(p.log_pressure, p.scaled(temperature))) / path.pressure
+    latent = horner(p.latent_heat_of, p.scaled(temperature))
+    steepness = latent / (GAS_CONSTANT * temperature**2)
+    warming = latent / p.heat_capacity
+    drive = np.maximum(np.abs(share - saturated), 0.02 * saturated)
+    per_mole = (1.0 + saturated * steepness * warming) / drive
+    return -np.abs(rate) * per_mole[:, None, :]
+
+
+def _coupled(error, gain, response, step):
+    """Return u with u' = response (error + gain u), u = 0 at the start, shape (v, m)."""
+    damping = gain * response
+    drive = response * error
+    inner = np.zeros_like(error)
+    half = 0.5 * step
+    if np.max(np.abs(error)) == 0.0:
+        return inner
+    for j in range(step.size):
+        top = inner[:, j] * (1.0 + half[j] * np.maximum(damping[:, j], -1.0 / half[j]))
+        top = top + half[j] * (drive[:, j] + drive[:, j + 1])
+        inner[:, j + 1] = top / (1.0 - half[j] * damping[:, j + 1])
+    return inner

@@ -1,0 +1,366 @@
+"""From the bench and a pressure trace to all that growth needs: gas, births, properties."""
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from scatterfit import matter
+from scatterfit.apparatus.records import Apparatus
+from scatterfit.constants import GAS_CONSTANT, STANDARD_PRESSURE
+from scatterfit.droplet_growth.births import Births, births_at_once, births_from_rate
+from scatterfit.droplet_growth.classical_rate import classical_log_rate
+from scatterfit.droplet_growth.gas_path import GasPath, adiabatic_temperature, choose_nodes
+from scatterfit.droplet_growth.pressure import smooth, undo_lag
+from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
+
+_RESAMPLED = 20_000
+_BIRTH_RADIUS = 3e-9
+_SEED_RADIUS = 25e-9
+_CRITICAL_FREEZING = 235.0
+
+
+@dataclass(frozen=True)
+class Hold:
+    """The state in which droplets are born, at the peak of the nucleation rate."""
+
+    temperature: float
+    """[K]."""
+    pressure: float
+    """[Pa]."""
+    saturation_ratio: float
+    """Over the liquid [-]."""
+    effective: float | None
+    """Integral of the rate over its peak [s]."""
+    log_rate: float
+    """ln of the classical rate there, per m3 and s [-]."""
+
+
+@dataclass(frozen=True)
+class GrowthSetup:
+    """One pulse, ready to be grown."""
+
+    apparatus: Apparatus
+    substance: matter.Substance
+    gas: matter.Gas
+    properties: GrowthProperties
+    path: GasPath
+    births: Births
+    hold: Hold | None
+    vapour_fraction: float
+    """Mole fraction of vapour before the expansion [-]."""
+    start_pressure: float
+    """Before the expansion [Pa]."""
+    growth_saturation_ratio: float
+    """Over the liquid, undisturbed, at the reference pressure of growth [-]."""
+    start_radius: float
+    """Of droplets at birth [m]."""
+    clock_known: bool
+    """Whether births are timed by a pressure trace."""
+    threshold: float | None = None
+    """Saturation ratio at which seeds become droplets [-]; ``None`` without seeds."""
+    ramp: tuple[np.ndarray, np.ndarray] | None = None
+    """Time [s] and smooth pressure [Pa], for seeded pulses whose threshold is fitted."""
+    warnings: tuple[tuple[str, str], ...] = field(default=())
+    """Codes and texts worth telling the user."""
+
+
+def vapour_mole_fraction(apparatus, substance, pressure):
+    """Return the mole fraction of vapour before the expansion.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    substance : matter.Substance
+        Its vapour.
+    pressure : float
+        Pressure before the expansion [Pa].
+
+    Returns
+    -------
+    fraction : float
+        Mole fraction of vapour in the moist gas [-].
+    """
+    vapour, chamber = apparatus.vapour, apparatus.chamber
+    if vapour.mole_fraction is not None:
+        return float(vapour.mole_fraction)
+    if vapour.partial_pressure is not None:
+        return float(vapour.partial_pressure) / pressure
+    if vapour.saturation_ratio is not None:
+        saturated = float(substance.saturation_pressure(chamber.temperature))
+        return float(vapour.saturation_ratio) * saturated / pressure
+    return float(substance.saturation_pressure(vapour.dew_point)) / pressure
+
+
+def growth_setup(apparatus, time=None, pressure=None, duration=0.1, classes=4):
+    """Return what growth needs, from the pressure trace or from the stated states.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,), optional
+        Sample times [s].
+    pressure : ndarray, shape (n,), optional
+        Absolute pressure as recorded [Pa].
+    duration : float
+        How long growth is followed where there is no pressure trace [s].
+    classes : int
+        Classes of droplets by birth.
+
+    Returns
+    -------
+    setup : GrowthSetup
+        Gas path, births and properties.
+    """
+    substance = matter.substance(apparatus.vapour.substance)
+    substance = substance.with_overrides(apparatus.vapour.overrides)
+    gas = matter.carrier(apparatus.carrier)
+    if pressure is None:
+        return _stated(apparatus, substance, gas, duration, classes)
+    return _measured(apparatus, substance, gas, (time, pressure), classes)
+
+
+def _measured(apparatus, substance, gas, record, classes):
+    """Return the setup of a pulse with a pressure trace."""
+    time, recorded = record
+    gauge = apparatus.pressure
+    smoothed, noise = smooth(recorded)
+    smoothed = undo_lag(time, smoothed + gauge.offset, gauge.time_constant)
+    plateau = _plateau(smoothed, noise)
+    start = apparatus.chamber.pressure or plateau
+    warnings = _pressure_warnings(apparatus, start, plateau, noise)
+    fraction = vapour_mole_fraction(apparatus, substance, start)
+    settled = float(np.median(smoothed[time > 0.5 * (time[0] + time[-1])]))
+    lowest = min(float(smoothed.min()), settled)
+    low = _expanded(gas, substance, fraction, apparatus.chamber.temperature, (start, lowest))[0]
+    reference, heat_capacity = _expanded(
+        gas, substance, fraction, apparatus.chamber.temperature, (start, settled)
+    )
+    temperature = adiabatic_temperature(
+        smoothed, apparatus.chamber.temperature, start, heat_capacity
+    )
+    saturation = fraction * smoothed / substance.saturation_pressure(temperature)
+    liquid_at = _liquid(substance)
+    log_rate = classical_log_rate(
+        temperature, fraction * smoothed, saturation, liquid_at(temperature)
+    )
+    threshold, ramp = None, None
+    if apparatus.seed is not None:
+        threshold = _threshold(apparatus, substance, reference)
+        births = births_at_threshold(time, saturation, threshold)
+        ramp = (time, smoothed)
+        hold = None
+        peak = int(np.argmax(saturation))
+    else:
+        births = births_from_rate(time, log_rate, classes)
+        peak = int(np.argmax(log_rate))
+    hold = Hold(
+        float(temperature[peak]), float(smoothed[peak]), float(saturation[peak]),
+        births.effective or None, float(log_rate[peak]),
+    )
+    first, last = births.times[0], births.times[-1]
+    nodes = choose_nodes(time, smoothed, (first, max(last, first + 1e-5)))
+    at_nodes = np.interp(nodes, time, smoothed)
+    path = GasPath(
+        nodes, at_nodes,
+        adiabatic_temperature(at_nodes, apparatus.chamber.temperature, start, heat_capacity),
+        settled, reference,
+    )
+    return _finish(
+        (apparatus, substance, gas), path, births, hold, fraction, start, low,
+        clock_known=True, threshold=threshold, ramp=ramp, warnings=warnings,
+    )
+
+
+def _stated(apparatus, substance, gas, duration, classes):
+    """Return the setup of a pulse whose growth and hold are stated; births are centred on 0."""
+    growth, pulse, start = apparatus.growth, apparatus.pulse, apparatus.chamber.pressure
+    fraction = vapour_mole_fraction(apparatus, substance, start)
+    length = pulse.hold if pulse and pulse.hold else 0.0
+    held = pulse is not None and pulse.temperature is not None and pulse.pressure is not None
+    if length:
+        grid = np.linspace(-0.5 * length, 0.5 * length, 201)
+        births = births_from_rate(grid, np.zeros(grid.size), classes)
+    else:
+        births = births_at_once(0.0)
+    ends = (births.times[0], max(births.times[-1], births.times[0] + 1e-5))
+    nodes = choose_nodes(
+        np.linspace(-0.5 * length, duration, 2001), np.full(2001, growth.pressure), ends
+    )
+    in_hold = (nodes < 0.5 * length) if held else np.zeros(nodes.size, dtype=bool)
+    path = GasPath(
+        nodes,
+        np.where(in_hold, pulse.pressure if held else growth.pressure, growth.pressure),
+        np.where(in_hold, pulse.temperature if held else growth.temperature, growth.temperature),
+        growth.pressure, growth.temperature,
+    )
+    hold = None
+    if held:
+        saturation = fraction * pulse.pressure / float(
+            substance.saturation_pressure(pulse.temperature)
+        )
+        log_rate = classical_log_rate(
+            pulse.temperature, fraction * pulse.pressure, saturation,
+            _liquid(substance)(pulse.temperature),
+        )
+        hold = Hold(pulse.temperature, pulse.pressure, saturation, pulse.hold, float(log_rate))
+    low = min(growth.temperature, pulse.temperature if held else growth.temperature)
+    return _finish(
+        (apparatus, substance, gas), path, births, hold, fraction, start, low,
+        clock_known=False,
+    )
+
+
+def _finish(bench, path, births, hold, fraction, start, low, **more):
+    """Return the setup, with properties over the range that the pulse can reach."""
+    apparatus, substance, gas = bench
+    reference = path.reference_temperature
+    high = max(apparatus.chamber.temperature, reference) + 15.0
+    saturated = float(substance.saturation_pressure(reference))
+    growth_ratio = fraction * path.reference_pressure / saturated
+    droplet = reference + 0.6 * _warming(substance, gas, fraction, path)
+    properties = growth_properties(substance, gas, fraction, low - 10.0, high, droplet)
+    radius = _BIRTH_RADIUS
+    if apparatus.seed is not None:
+        radius = 0.5 * apparatus.seed.diameter if apparatus.seed.diameter else _SEED_RADIUS
+    warnings = more.pop("warnings", ())
+    if hold is not None and hold.temperature < _CRITICAL_FREEZING and substance.name == "water":
+        warnings += ((
+            "may-freeze",
+            f"the hold is at {hold.temperature:.1f} K: below about 235 K water droplets may "
+            "freeze; radius and number assume liquid droplets",
+        ),)
+    return GrowthSetup(
+        apparatus, substance, gas, properties, path, births, hold, fraction, start,
+        growth_ratio, radius, warnings=warnings, **more,
+    )
+
+
+def _warming(substance, gas, fraction, path):
+    """Return roughly how much warmer than the gas a droplet is [K], by the linear law."""
+    temperature = path.reference_temperature
+    saturated = float(substance.saturation_pressure(temperature)) / path.reference_pressure
+    latent = float(substance.latent_heat(temperature))
+    diffusivity = float(matter.diffusivity(substance, gas)(temperature))
+    flow = diffusivity * STANDARD_PRESSURE / (GAS_CONSTANT * temperature)
+    conductivity = float(gas.conductivity(temperature))
+    steepness = latent / (GAS_CONSTANT * temperature**2)
+    excess = max(fraction - saturated, 0.0)
+    return latent * flow * excess / (conductivity + latent * flow * saturated * steepness)
+
+
+def _expanded(gas, substance, fraction, start_temperature, pressures):
+    """Return the temperature after an expansion [K] and the heat capacity that leads there."""
+    start, end = pressures
+    temperature = start_temperature
+    for _ in range(4):
+        middle = 0.5 * (start_temperature + temperature)
+        heat_capacity = float(matter.moist_heat_capacity(gas, substance, fraction, middle))
+        temperature = float(adiabatic_temperature(end, start_temperature, start, heat_capacity))
+    return temperature, heat_capacity
+
+
+def _plateau(smoothed, noise):
+    """Return the pressure before the expansion [Pa]."""
+    first = float(np.median(smoothed[: max(smoothed.size // 200, 5)]))
+    near = np.abs(smoothed - first) < max(4.0 * noise, 1e-3 * first)
+    end = int(np.argmin(near)) if not near.all() else smoothed.size
+    return float(np.mean(smoothed[: max(end, 5)]))
+
+
+def _pressure_warnings(apparatus, stated, measured, noise):
+    """Return a reason where the stated and the measured start pressure disagree."""
+    if apparatus.chamber.pressure is None:
+        return ()
+    sigma = np.hypot(
+        apparatus.sigmas.get("chamber.pressure_kPa", 0.0),
+        apparatus.sigmas.get("pressure.offset_kPa", 0.0),
+    )
+    allowed = 3.0 * max(sigma, 3e-4 * stated, 0.1 * noise)
+    if abs(stated - measured) <= allowed:
+        return ()
+    return ((
+        "pressure-disagrees",
+        f"chamber.pressure_kPa is {stated / 1e3:.3f} kPa but the trace starts at "
+        f"{measured / 1e3:.3f} kPa: check pressure.offset_kPa or the stated value",
+    ),)
+
+
+def _liquid(substance):
+    """Return a function of temperature that gives what nucleation asks of the liquid."""
+    def at(temperature):
+        return (
+            substance.surface_tension(temperature), substance.density(temperature),
+            substance.molar_mass,
+        )
+    return at
+
+
+def _threshold(apparatus, substance, temperature):
+    """Return the saturation ratio at which the seeds become droplets, by Kelvin's equation."""
+    if apparatus.seed.diameter is None:
+        return 1.0
+    tension = float(substance.surface_tension(temperature))
+    volume = substance.molar_mass / float(substance.density(temperature))
+    radius = 0.5 * apparatus.seed.diameter
+    return float(np.exp(2.0 * tension * volume / (GAS_CONSTANT * temperature * radius)))
+
+
+def births_at_threshold(time, saturation, threshold):
+    """Return births at the moment when the saturation ratio first passes a threshold.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        Increasing [s].
+    saturation : ndarray, shape (n,)
+        Saturation ratio [-].
+    threshold : float
+        Where seeds become droplets [-].
+
+    Returns
+    -------
+    births : Births
+        One class; at the peak of the saturation ratio where the threshold is never passed.
+
+    Examples
+    --------
+    >>> time = np.linspace(0.0, 1.0, 11)
+    >>> births_at_threshold(time, 1.0 + time, 1.25).median
+    0.25
+    """
+    above = saturation >= threshold
+    if not above.any():
+        return births_at_once(time[np.argmax(saturation)])
+    i = int(np.argmax(above))
+    if i == 0:
+        return births_at_once(time[0])
+    part = (threshold - saturation[i - 1]) / (saturation[i] - saturation[i - 1])
+    return births_at_once(time[i - 1] + part * (time[i] - time[i - 1]))
+
+
+def with_threshold(setup, threshold):
+    """Return the setup of a seeded pulse with another threshold.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of a seeded pulse.
+    threshold : float
+        Saturation ratio at which seeds become droplets [-].
+
+    Returns
+    -------
+    setup : GrowthSetup
+        With births moved.
+    """
+    time, pressure = setup.ramp
+    ratio = pressure / setup.path.reference_pressure
+    exponent = GAS_CONSTANT / setup.properties.heat_capacity
+    temperature = setup.path.reference_temperature * ratio**exponent
+    saturated = setup.substance.saturation_pressure(temperature)
+    births = births_at_threshold(
+        time, setup.vapour_fraction * pressure / saturated, threshold
+    )
+    return replace(setup, births=births, threshold=float(threshold))

@@ -1,0 +1,355 @@
+"""What each channel would show: a cloud's growth, its light, and the derivatives of both."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from scatterfit.constants import GAS_CONSTANT
+from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
+from scatterfit.droplet_growth.setup import GrowthSetup, with_threshold
+from scatterfit.forward.light import CloudLight, look_up, spread_table
+from scatterfit.forward.low_pass import low_pass
+
+# Steps of the numerical derivatives of growth; growth is smooth to far below them.
+STEPS = {
+    "number": 0.02, "scale": 0.01, "accommodation": 0.05, "temperature": 3e-4,
+    "vapour": 2e-3, "threshold": 2e-3,
+}
+
+
+@dataclass(frozen=True)
+class Channel:
+    """One optical channel as the model needs it."""
+
+    column: str
+    kind: str
+    """``"scatter"`` or ``"transmission"``."""
+    row: int
+    """Row of its cross section in the light; for a transmission that of the extinction."""
+    path: float
+    """Cloud that attenuates it [m]."""
+    gain: float | None
+    """[V m]; ``None`` where the amplitude is free."""
+    time_constant: float
+    """[s]."""
+    angle_row: int | None = None
+    """Row with the derivative of its cross section by the angle [m^2/rad]."""
+
+
+@dataclass(frozen=True)
+class Cloud:
+    """What the fit looks for, as logarithms where a quantity is positive."""
+
+    number: float
+    """ln of droplets per volume at the reference state [1/m^3]."""
+    scale: float = 0.0
+    """ln of the growth scale."""
+    delay: float = 0.0
+    """Optical time less pressure time, or time of the median birth without a gauge [s]."""
+    variance: float = 0.0
+    """Variance of ln r beyond that of the base table [-]."""
+    accommodation: float = 0.0
+    """ln of the mass accommodation coefficient over the chamber file's."""
+    temperature: float = 0.0
+    """ln of the start temperature over the chamber file's."""
+    vapour: float = 0.0
+    """ln of the vapour fraction over the chamber file's."""
+    threshold: float = 0.0
+    """ln of the seeds' threshold over the setup's."""
+    angles: tuple[float, ...] = ()
+    """Shift of each detector's angle [rad]."""
+
+
+@dataclass(frozen=True)
+class PulseModel:
+    """One pulse's forward model."""
+
+    setup: GrowthSetup
+    light: CloudLight
+    channels: tuple[Channel, ...]
+    extinction_row: int
+
+
+@dataclass(frozen=True)
+class CloudState:
+    """The cloud at the sample times."""
+
+    radius: np.ndarray
+    """Shape (c, n) [m]; zero before birth."""
+    number_density: np.ndarray
+    """Shape (n,) [1/m^3]."""
+    log_radius_by: dict
+    """Derivatives of ln r by each parameter, shape (c, n)."""
+    log_density_by: dict
+    """Derivatives of ln of the number density, shape (n,)."""
+    growth: object
+    """The solved cloud (CloudGrowth)."""
+
+
+def per_mole(setup, log_number):
+    """Return droplets per mole of gas from ln of their number at the reference state [1/m^3].
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    log_number : array_like, shape (...)
+        ln of droplets per volume [-].
+
+    Returns
+    -------
+    droplets : ndarray, shape (...)
+        Droplets per mole [1/mol].
+    """
+    path = setup.path
+    return np.exp(log_number) * (GAS_CONSTANT * path.reference_temperature) / path.reference_pressure
+
+
+def _parameters(setup, cloud, names):
+    """Return the growth parameters of the cloud and of its neighbours by name."""
+    vapour = setup.apparatus.vapour
+    values = {
+        "number": cloud.number, "scale": cloud.scale, "accommodation": cloud.accommodation,
+        "temperature": cloud.temperature, "vapour": cloud.vapour,
+    }
+    rows = {key: np.full(len(names) + 1, value) for key, value in values.items()}
+    for i, name in enumerate(names):
+        if name in rows:
+            rows[name][i + 1] += STEPS[name]
+    mass = np.minimum(vapour.mass_accommodation * np.exp(rows["accommodation"]), 5.0)
+    return CloudParameters(
+        droplets_per_mole=per_mole(setup, rows["number"]),
+        growth_scale=np.exp(rows["scale"]),
+        mass_accommodation=mass,
+        thermal_accommodation=np.full(mass.size, vapour.thermal_accommodation),
+        vapour_fraction=setup.vapour_fraction * np.exp(rows["vapour"]),
+        temperature_factor=np.exp(rows["temperature"]),
+    )
+
+
+def grow(setup, cloud, names=()):
+    """Return the solved cloud and, as further variants, its neighbours for derivatives.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    cloud : Cloud
+        Where to solve.
+    names : sequence of str
+        Parameters to vary, in order.
+
+    Returns
+    -------
+    growth : CloudGrowth
+        Variant 0 is the cloud itself.
+    """
+    births = _birth_times(setup, cloud, names)
+    return solve_cloud(
+        setup.properties, setup.path, (births, setup.births.weights),
+        _parameters(setup, cloud, names), setup.start_radius,
+    )
+
+
+def _birth_times(setup, cloud, names):
+    """Return the births of each variant, shape (v, c) or (c,) [s]."""
+    if setup.threshold is None:
+        return setup.births.times
+    base = setup.threshold
+
+    def at(shift):
+        return with_threshold(setup, 1.0 + (base - 1.0 + 1e-9) * np.exp(shift) if base > 1.02
+                              else base * np.exp(shift)).births.times
+
+    rows = [at(cloud.threshold)] * (len(names) + 1)
+    if "threshold" in names:
+        rows[1 + list(names).index("threshold")] = at(cloud.threshold + STEPS["threshold"])
+    return np.array(rows)
+
+
+def cloud_state(model, cloud, time, names=()):
+    """Return radius and number density at the sample times, with their derivatives.
+
+    Parameters
+    ----------
+    model : PulseModel
+        Of the pulse.
+    cloud : Cloud
+        Where to evaluate.
+    time : ndarray, shape (n,)
+        Samples [s].
+    names : sequence of str
+        Parameters to differentiate by; those that act on growth are done by differences.
+
+    Returns
+    -------
+    state : CloudState
+        Per class and sample.
+    """
+    moving = [name for name in names if name in STEPS]
+    growth = grow(model.setup, cloud, moving)
+    clock = time - cloud.delay
+    index, t, width = _places(growth.time, clock)
+    square = _hermite(growth.square, growth.square_rate, index, t, width)
+    born = clock > growth.birth_times[0][:, None]
+    length = growth.length[0]
+    radius = np.sqrt(square[0]) - length
+    safe = np.where(born, np.maximum(radius, growth.start_radius), growth.start_radius)
+    log_radius = np.log(safe)
+    log_radius_by = {}
+    for i, name in enumerate(moving):
+        other = np.sqrt(square[i + 1]) - growth.length[i + 1]
+        other = np.where(born, np.maximum(other, growth.start_radius), growth.start_radius)
+        log_radius_by[name] = (np.log(other) - log_radius) / STEPS[name]
+    density = growth.number_density
+    at = density[:, index] + t * (density[:, index + 1] - density[:, index])
+    log_density_by = {
+        name: np.log(at[i + 1] / at[0]) / STEPS[name] for i, name in enumerate(moving)
+    }
+    if "delay" in names:
+        rate = growth.square_rate[0]
+        slope = rate[:, index] + t * (rate[:, index + 1] - rate[:, index])
+        speed = slope / (2.0 * (safe + length))
+        log_radius_by["delay"] = np.where(born, -speed / safe, 0.0)
+    return CloudState(
+        np.where(born, safe, 0.0), at[0], log_radius_by, log_density_by, growth,
+    )
+
+
+def _places(nodes, clock):
+    """Return the cell of each sample, its place in the cell and the cell's width."""
+    index = np.clip(np.searchsorted(nodes, clock, side="right") - 1, 0, nodes.size - 2)
+    width = nodes[index + 1] - nodes[index]
+    t = np.clip((clock - nodes[index]) / width, 0.0, 1.0)
+    return index, t, width
+
+
+def _hermite(values, rates, index, t, width):
+    """Return cubic interpolants of values with known time derivatives, shape (..., n)."""
+    low, high = values[..., index], values[..., index + 1]
+    first, last = rates[..., index] * width, rates[..., index + 1] * width
+    rise = high - low
+    c = first + last - 2.0 * rise
+    b = rise - first - c
+    return low + t * (first + t * (b + t * c))
+
+
+@dataclass(frozen=True)
+class ChannelSignal:
+    """One channel's noiseless shape and its derivatives."""
+
+    shape: np.ndarray
+    """Volts per unit amplitude, or transmission, shape (n,)."""
+    by: dict
+    """Derivatives by parameter, each of shape (n,); the number's is split by what it acts
+    through: ``"number_gain"``, ``"number_extinction"``, ``"number_depletion"``."""
+
+
+def channel_signals(model, cloud, time, names=()):
+    """Return what every channel would show without noise and offset.
+
+    A detector shows ``gain n C exp(-n C_ext path)`` with its cross section averaged over the
+    cloud (``gain`` is 1 where none is known); the transmission shows ``exp(-n C_ext path)``.
+
+    Parameters
+    ----------
+    model : PulseModel
+        Of the pulse.
+    cloud : Cloud
+        Where to evaluate.
+    time : ndarray, shape (n,)
+        Samples [s].
+    names : sequence of str
+        Parameters to differentiate by.
+
+    Returns
+    -------
+    signals : list of ChannelSignal
+        One a channel.
+    state : CloudState
+        The cloud behind them.
+    """
+    state = cloud_state(model, cloud, time, names)
+    table = spread_table(model.light, cloud.variance)
+    born = state.radius > 0.0
+    log_radius = np.log(np.where(born, state.radius, np.exp(table.start)))
+    values, slopes, bends = look_up(table, log_radius, curvature="variance" in names)
+    weights = np.where(born, state.growth.weights[:, None], 0.0)
+    mean = np.einsum("cn,rcn->rn", weights, values)
+    for detector, channel in enumerate(model.channels):
+        if channel.angle_row is not None and cloud.angles:
+            mean[channel.row] += cloud.angles[detector] * mean[channel.angle_row]
+            values[channel.row] += cloud.angles[detector] * values[channel.angle_row]
+            slopes[channel.row] += cloud.angles[detector] * slopes[channel.angle_row]
+    mean_by = {
+        name: np.einsum("cn,rcn->rn", weights * change, slopes)
+        for name, change in state.log_radius_by.items()
+    }
+    if "variance" in names:
+        mean_by["variance"] = np.einsum("cn,rcn->rn", weights, bends)
+    signals = [
+        _one_channel(model, i, channel, state, mean, mean_by, time, names)
+        for i, channel in enumerate(model.channels)
+    ]
+    return signals, state
+
+
+def _one_channel(model, position, channel, state, mean, mean_by, time, names):
+    """Return one channel's signal."""
+    density = state.number_density
+    scatter = channel.kind == "scatter"
+    row = model.extinction_row if scatter else channel.row
+    depth = density * mean[row] * channel.path
+    light = np.exp(-depth)
+    own = mean[channel.row]
+    shape = (channel.gain or 1.0) * density * own * light if scatter else light
+    bright = (channel.gain or 1.0) * density * light
+    rows, order = [shape], []
+    for name in names:
+        change = mean_by.get(name)
+        thinner = state.log_density_by.get(name)
+        part = np.zeros_like(shape)
+        if change is not None:
+            if scatter:
+                part = part + bright * change[channel.row]
+            part = part - shape * density * channel.path * change[row]
+        if thinner is not None:
+            if name == "number":
+                thinner = thinner - 1.0
+            part = part + shape * thinner * ((1.0 if scatter else 0.0) - depth)
+        if name == f"angle:{position}" and channel.angle_row is not None:
+            part = part + bright * mean[channel.angle_row]
+        if name == "number":
+            order += ["number_depletion", "number_gain", "number_extinction"]
+            rows += [part, shape if scatter else np.zeros_like(shape), -shape * depth]
+        else:
+            order.append(name)
+            rows.append(part)
+    filtered = low_pass(time, np.array(rows), channel.time_constant)
+    by = dict(zip(order, filtered[1:], strict=True))
+    if "number" in names:
+        by["number"] = by["number_depletion"] + by["number_gain"] + by["number_extinction"]
+    return ChannelSignal(filtered[0], by)
+
+
+def moved(cloud, **changes):
+    """Return a cloud with some parameters replaced.
+
+    Parameters
+    ----------
+    cloud : Cloud
+        Where to start.
+    **changes : float
+        New values by field name.
+
+    Returns
+    -------
+    cloud : Cloud
+        The other cloud.
+
+    Examples
+    --------
+    >>> moved(Cloud(number=20.0), scale=0.1).scale
+    0.1
+    """
+    return replace(cloud, **changes)

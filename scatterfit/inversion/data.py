@@ -1,0 +1,177 @@
+"""Samples that can be fitted: what is left out, how noisy the rest is, and its averages."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from scatterfit.inversion.noise import NoiseModel, estimate_noise, running_mean
+
+_SMOOTHING = 15
+
+
+@dataclass(frozen=True)
+class ChannelData:
+    """One optical channel's samples."""
+
+    column: str
+    kind: str
+    """``"scatter"`` or ``"transmission"``."""
+    signal: np.ndarray
+    """As recorded, less nothing; not-a-number cells are zero and not used, shape (n,) [V]."""
+    used: np.ndarray
+    """Which samples are fitted, shape (n,) [bool]."""
+    sigma: np.ndarray
+    """Standard deviation of each sample, shape (n,) [V]."""
+    noise: NoiseModel
+    clipped: int
+    """Samples left out as clipped."""
+    missing: int
+    """Samples left out as not finite."""
+
+
+@dataclass(frozen=True)
+class Bins:
+    """Channels averaged over the same intervals of time."""
+
+    time: np.ndarray
+    """Shape (m,) [s]."""
+    values: np.ndarray
+    """Weighted means, shape (channels, m) [V]."""
+    weights: np.ndarray
+    """One over the standard deviation of the mean; zero where there is none, (channels, m)."""
+    counts: np.ndarray
+    """Samples in each mean, shape (channels, m)."""
+
+
+def channel_data(column, kind, signal, window, baseline, full_scale=None):
+    """Return a channel's samples with their noise.
+
+    Parameters
+    ----------
+    column : str
+        Its name.
+    kind : str
+        ``"scatter"`` or ``"transmission"``.
+    signal : ndarray, shape (n,)
+        As recorded; may hold not-a-number cells [V].
+    window : ndarray, shape (n,)
+        Which samples may be fitted [bool].
+    baseline : ndarray, shape (n,)
+        Which samples show no droplets [bool].
+    full_scale : float, optional
+        Largest voltage the digitizer can show [V].
+
+    Returns
+    -------
+    data : ChannelData
+        Samples, masks and noise.
+    """
+    finite = np.isfinite(signal)
+    signal = np.where(finite, signal, 0.0)
+    good = finite & window
+    before = baseline & good
+    rest = float(np.median(signal[before])) if before.any() else 0.0
+    dark = rest if kind == "scatter" else 0.0
+    noise = estimate_noise(signal[good], dark)
+    clipped = np.zeros(signal.size, dtype=bool)
+    if full_scale is not None:
+        margin = max(noise.step, 1e-6 * full_scale)
+        clipped = good & (np.abs(signal) >= full_scale - margin)
+        if clipped.any():
+            noise = estimate_noise(signal[good & ~clipped], dark)
+    used = good & ~clipped
+    smooth = running_mean(np.where(good, signal, rest), _SMOOTHING)
+    sigma = np.sqrt(noise.variance(smooth))
+    return ChannelData(
+        column, kind, signal, used, sigma, noise, int(clipped.sum()), int((~finite & window).sum())
+    )
+
+
+def without(data, bad):
+    """Return a channel with some more samples left out.
+
+    Parameters
+    ----------
+    data : ChannelData
+        A channel.
+    bad : ndarray, shape (n,)
+        Samples to leave out [bool].
+
+    Returns
+    -------
+    data : ChannelData
+        The channel without them.
+    """
+    return replace(data, used=data.used & ~bad)
+
+
+def bin_edges(time, start, most):
+    """Return where to cut the record so that no bin is longer than it need be.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        Samples, increasing [s].
+    start : float
+        When droplets are born: before it bins may be long [s].
+    most : int
+        Number of bins at the most, roughly.
+
+    Returns
+    -------
+    edges : ndarray, shape (m,)
+        Index of the first sample of each bin, increasing, first is 0.
+
+    Examples
+    --------
+    >>> bin_edges(np.arange(10.0), -1.0, 5)
+    array([0, 2, 4, 6, 8])
+    """
+    n = time.size
+    if n <= most:
+        return np.arange(n)
+    span = time[-1] - time[0]
+    age = np.maximum(time - start, 0.0)
+    # Lobes come evenly in r, so ever slower in time: bins follow, within a factor.
+    density = np.where(time < start, 0.25, 1.0 + 0.7 * np.sqrt(span / (age + 0.02 * span)))
+    cumulative = np.cumsum(density)
+    bins = np.floor(cumulative / cumulative[-1] * most * 0.999999).astype(int)
+    return np.flatnonzero(np.diff(bins, prepend=-1) > 0)
+
+
+def bin_channels(time, channels, edges):
+    """Return all channels averaged over the same bins.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        Samples [s].
+    channels : sequence of ChannelData
+        Channels of the trace.
+    edges : ndarray, shape (m,)
+        First sample of each bin.
+
+    Returns
+    -------
+    bins : Bins
+        Means and their weights.
+    """
+    total = np.add.reduceat(np.ones(time.size), edges)
+    middle = np.add.reduceat(time, edges) / total
+    values, weights, counts = [], [], []
+    for data in channels:
+        inverse = np.where(data.used, data.sigma**-2.0, 0.0)
+        strength = np.add.reduceat(inverse, edges)
+        top = np.add.reduceat(inverse * data.signal, edges)
+        moment = np.add.reduceat(inverse * time, edges)
+        some = strength > 0.0
+        mean = np.where(some, top / np.where(some, strength, 1.0), 0.0)
+        # A bin with samples left out has its centre elsewhere: shift its mean back along the slope.
+        centre = np.where(some, moment / np.where(some, strength, 1.0), middle)
+        slope = np.gradient(mean, middle) if mean.size > 2 else np.zeros_like(mean)
+        full = np.add.reduceat(data.used.astype(float), edges)
+        shifted = np.where(full < total, 0.0, slope) * (middle - centre)
+        values.append(mean + shifted)
+        weights.append(np.sqrt(strength))
+        counts.append(full)
+    return Bins(middle, np.array(values), np.array(weights), np.array(counts))

@@ -1,0 +1,75 @@
+"""How far the computed growth rate may be trusted: the prior of the growth scale."""
+
+import numpy as np
+
+from scatterfit.droplet_growth.single_droplet import growth_rate
+from scatterfit import matter
+
+_TEMPERATURE = 0.3
+_FRACTION = 0.01
+_SATURATION = 0.005
+
+
+def growth_scale_sigma(setup):
+    """Return the relative standard uncertainty of the computed growth rate.
+
+    From the uncertainties of the start temperature, the vapour, the diffusivity, the conductivity
+    and the vapour pressure, each by its effect on the rate at the reference radius. Where the
+    chamber file states no uncertainty, 0.3 K and 1 percent of the vapour are taken (common
+    practice, no source).
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+
+    Returns
+    -------
+    sigma : float
+        Relative standard uncertainty [-].
+    """
+    sigmas = setup.apparatus.sigmas
+    path, vapour = setup.path, setup.apparatus.vapour
+    radius = setup.apparatus.analysis.reference_radius
+    base = _rate(setup, radius, path.reference_temperature, setup.vapour_fraction)
+    floor = 0.05 * abs(base) + 1e-12
+    stated = [sigmas[key] for key in ("chamber.temperature_K", "growth.temperature_K")
+              if key in sigmas]
+    warm = stated[0] if stated else _TEMPERATURE
+    parts = [
+        _rate(setup, radius, path.reference_temperature + warm, setup.vapour_fraction) - base,
+    ]
+    wet = _vapour_sigma(sigmas, vapour)
+    parts.append(_rate(setup, radius, path.reference_temperature,
+                       setup.vapour_fraction * (1.0 + wet)) - base)
+    diffusion = matter.diffusivity(setup.substance, setup.gas).relative_uncertainty
+    conduction = setup.gas.conductivity.relative_uncertainty
+    relative = np.hypot(*(part / (abs(base) + floor) for part in parts))
+    share = 0.5
+    return float(np.clip(np.sqrt(
+        relative**2 + (share * diffusion) ** 2 + (share * conduction) ** 2 + _SATURATION**2
+    ), 0.02, 0.5))
+
+
+def _vapour_sigma(sigmas, vapour):
+    """Return the relative uncertainty of the vapour fraction."""
+    for key, field in (("mole_fraction", vapour.mole_fraction),
+                       ("partial_pressure_kPa", vapour.partial_pressure),
+                       ("saturation_ratio", vapour.saturation_ratio)):
+        if field and f"vapour.{key}" in sigmas:
+            return sigmas[f"vapour.{key}"] / field
+    if "vapour.dew_point_K" in sigmas:
+        return 0.07 * sigmas["vapour.dew_point_K"]
+    return _FRACTION
+
+
+def _rate(setup, radius, temperature, fraction):
+    """Return dr/dt of one droplet in the growth stage [m/s]."""
+    vapour = setup.apparatus.vapour
+    rate, _ = growth_rate(
+        setup.properties, np.array([radius]),
+        (np.array([temperature]), setup.path.reference_pressure, np.array([fraction])),
+        (vapour.mass_accommodation, vapour.thermal_accommodation),
+        np.array([temperature + 2.0]), steps=6,
+    )
+    return float(rate[0])

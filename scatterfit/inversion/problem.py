@@ -1,0 +1,231 @@
+"""Misfit of one pulse: residuals with the linear parameters projected out, and their derivatives."""
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from scatterfit.forward.model import Cloud, PulseModel, channel_signals
+from scatterfit.inversion.data import Bins
+
+# A change of each parameter that matters a little, so that all are of order one to the solver.
+SCALES = {
+    "number": 0.05, "scale": 0.01, "delay": 2e-5, "variance": 1e-5, "accommodation": 0.1,
+    "temperature": 3e-4, "vapour": 3e-3, "threshold": 3e-3, "angle": 1e-3,
+}
+LIMITS = {
+    "number": (np.log(1e2), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
+    "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
+    "threshold": (-0.25, 0.25), "delay": (-np.inf, np.inf), "angle": (-0.1, 0.1),
+}
+
+
+@dataclass(frozen=True)
+class Problem:
+    """What is fitted to what."""
+
+    model: PulseModel
+    bins: Bins
+    names: tuple[str, ...]
+    """Free parameters of the cloud."""
+    priors: dict[str, tuple[float, float]] = field(default_factory=dict)
+    """Parameter to mean and standard deviation."""
+    extras: tuple[np.ndarray, ...] = ()
+    """Per channel: more linear columns (drift, hum), each shape (k, m) [-]."""
+
+
+@dataclass(frozen=True)
+class Evaluation:
+    """The misfit at one cloud."""
+
+    cloud: Cloud
+    residual: np.ndarray
+    """Weighted, priors last, shape (n,) [-]."""
+    chi2: float
+    """Sum of squares, priors included [-]."""
+    jacobian: np.ndarray | None
+    """d(residual)/d(parameter), linear parameters projected out, shape (n, p)."""
+    coefficients: tuple[np.ndarray, ...]
+    """Linear parameters of each channel: amplitude (where it is free) first."""
+    fits: np.ndarray
+    """Model values in the bins, shape (channels, m) [V]."""
+    state: object = None
+    """The cloud at the samples (CloudState)."""
+    splits: dict = field(default_factory=dict)
+    """Projected derivatives by the number as each handle sees it, each of shape (n,)."""
+
+
+def family(name):
+    """Return the kind of a parameter: the name without its index.
+
+    Parameters
+    ----------
+    name : str
+        Parameter.
+
+    Returns
+    -------
+    kind : str
+        Key of ``SCALES`` and ``LIMITS``.
+
+    Examples
+    --------
+    >>> family("angle:1")
+    'angle'
+    """
+    return name.partition(":")[0]
+
+
+def value_of(cloud, name):
+    """Return a parameter of a cloud.
+
+    Parameters
+    ----------
+    cloud : Cloud
+        A cloud.
+    name : str
+        Parameter.
+
+    Returns
+    -------
+    value : float
+        Its value [any].
+    """
+    kind, _, index = name.partition(":")
+    return cloud.angles[int(index)] if kind == "angle" else getattr(cloud, kind)
+
+
+def shifted(cloud, names, values):
+    """Return a cloud with parameters set and kept within their limits.
+
+    Parameters
+    ----------
+    cloud : Cloud
+        Where to start.
+    names : sequence of str
+        Parameters.
+    values : sequence of float
+        New values [any].
+
+    Returns
+    -------
+    cloud : Cloud
+        The other cloud.
+    """
+    changes, angles = {}, list(cloud.angles)
+    for name, value in zip(names, values, strict=True):
+        kind, _, index = name.partition(":")
+        low, high = LIMITS[kind]
+        value = float(min(max(value, low), high))
+        if kind == "angle":
+            angles[int(index)] = value
+        else:
+            changes[kind] = value
+    return replace(cloud, angles=tuple(angles), **changes)
+
+
+def linear_columns(channel, signal, extra):
+    """Return the columns that enter a channel linearly and what has no free factor.
+
+    Parameters
+    ----------
+    channel : Channel
+        The channel.
+    signal : ndarray, shape (m,)
+        Its shape from the model.
+    extra : ndarray, shape (k, m)
+        Drift and hum [-].
+
+    Returns
+    -------
+    columns : ndarray, shape (q, m)
+        Columns to be fitted.
+    fixed : ndarray, shape (m,)
+        The part without a free factor.
+    """
+    ones = np.ones_like(signal)
+    if channel.kind == "transmission":
+        return np.vstack([signal, signal * extra]), np.zeros_like(signal)
+    if channel.gain is None:
+        return np.vstack([signal, ones, extra]), np.zeros_like(signal)
+    return np.vstack([ones, extra]), signal
+
+
+def evaluate(problem, cloud, derivatives=True):
+    """Return the misfit of a cloud.
+
+    Parameters
+    ----------
+    problem : Problem
+        Model, data and priors.
+    cloud : Cloud
+        Where to evaluate.
+    derivatives : bool
+        Whether the Jacobian is wanted.
+
+    Returns
+    -------
+    evaluation : Evaluation
+        Residuals, and what was found on the way.
+    """
+    names = problem.names if derivatives else ()
+    signals, state = channel_signals(problem.model, cloud, problem.bins.time, names)
+    residuals, jacobians, coefficients, fits = [], [], [], []
+    splits = {key: [] for key in ("number_gain", "number_extinction", "number_depletion")}
+    for i, (channel, signal) in enumerate(zip(problem.model.channels, signals, strict=True)):
+        weight = problem.bins.weights[i]
+        extra = problem.extras[i] if problem.extras else np.empty((0, weight.size))
+        columns, fixed = linear_columns(channel, signal.shape, extra)
+        weighted = (columns * weight).T
+        basis, triangle = np.linalg.qr(weighted)
+        target = (problem.bins.values[i] - fixed) * weight
+        shadow = basis.T @ target
+        factors = _solve(triangle, shadow)
+        coefficients.append(factors)
+        fits.append(fixed + factors @ columns)
+        residuals.append(target - basis @ shadow)
+        if not derivatives:
+            continue
+        amplitude = _amplitude(channel, factors, extra)
+        by = np.array([signal.by.get(name, np.zeros_like(weight)) for name in names])
+        parts = np.array([
+            signal.by.get(name, np.zeros_like(weight)) for name in splits
+        ])
+        both = -(np.vstack([by, parts]) * (amplitude * weight)).T
+        both = both - basis @ (basis.T @ both)
+        jacobians.append(both[:, : len(names)])
+        for k, key in enumerate(splits):
+            splits[key].append(both[:, len(names) + k])
+    rows, own = _prior_rows(problem, cloud)
+    residual = np.concatenate([*residuals, own])
+    jacobian = np.concatenate([*jacobians, rows]) if derivatives else None
+    return Evaluation(
+        cloud, residual, float(residual @ residual), jacobian, tuple(coefficients),
+        np.array(fits), state,
+        {key: np.concatenate(parts) for key, parts in splits.items()} if derivatives else {},
+    )
+
+
+def _solve(triangle, shadow):
+    """Return the solution of an upper triangular system that may be singular."""
+    size = np.abs(np.diag(triangle))
+    if size.size and size.min() > 1e-12 * max(size.max(), 1e-300):
+        return np.linalg.solve(triangle, shadow)
+    return np.linalg.lstsq(triangle, shadow, rcond=1e-12)[0]
+
+
+def _amplitude(channel, factors, extra):
+    """Return what multiplies the channel's shape: a factor, or a factor that drifts."""
+    if channel.kind == "transmission":
+        return factors[0] + (factors[1:] @ extra if extra.size else 0.0)
+    return factors[0] if channel.gain is None else 1.0
+
+
+def _prior_rows(problem, cloud):
+    """Return Jacobian rows, shape (q, p), and residuals, shape (q,), of the priors."""
+    rows = np.zeros((len(problem.priors), len(problem.names)))
+    own = np.zeros(len(problem.priors))
+    for k, (name, (mean, sigma)) in enumerate(problem.priors.items()):
+        own[k] = (value_of(cloud, name) - mean) / sigma
+        if name in problem.names:
+            rows[k, problem.names.index(name)] = 1.0 / sigma
+    return rows, own
