@@ -8,25 +8,15 @@ import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.errors import InvalidInputError
-from scatterfit.matter_gases import (
-    PURE_GASES,
-    binary_diffusivity,
-    blanc_diffusivity,
-    build_gas,
-    interaction,
-)
+from scatterfit.matter_diffusion import binary_diffusivity, blanc_diffusivity
+from scatterfit.matter_forms import anchored
+from scatterfit.matter_gases import PURE_GASES
+from scatterfit.matter_heavy_water import HEAVY_WATER
+from scatterfit.matter_mixtures import VAPOUR_COUPLING, build_gas, interaction
 from scatterfit.matter_organics import BUTANOL, ETHANOL, NONANE, OCTANE, PROPANOL
-from scatterfit.matter_records import (
-    OVERRIDABLE,
-    Gas,
-    Property,
-    PureGas,
-    RefractiveIndex,
-    Substance,
-    anchored,
-    unknown,
-)
-from scatterfit.matter_water import HEAVY_WATER, WATER, WATER_MOLAR_MASS
+from scatterfit.matter_records import Gas, Property, PureGas, RefractiveIndex
+from scatterfit.matter_substance import OVERRIDABLE, Substance, unknown
+from scatterfit.matter_water import WATER, WATER_MOLAR_MASS
 
 __all__ = [
     "OVERRIDABLE",
@@ -264,11 +254,13 @@ def moist_conductivity(gas: Gas, vapour: Substance, mole_fraction, temperature):
     ----------
     .. [1] E. A. Mason, S. C. Saxena, "Approximate formula for the thermal conductivity of gas
        mixtures", Phys. Fluids 1 (1958) 361-369. doi:10.1063/1.1724352
+    .. [2] P. K. Tondon, S. C. Saxena, "Calculation of thermal conductivity of polar-nonpolar gas
+       mixtures", Appl. Sci. Res. 19 (1968) 163-170 (the factor 0.85; cited from memory).
 
     Examples
     --------
     >>> float(moist_conductivity(carrier("argon"), substance("water"), 0.02, 280.0))
-    0.0168
+    0.0169
     """
     vapour_part = np.asarray(mole_fraction)[()]
     gas_part = 1.0 - vapour_part
@@ -276,9 +268,11 @@ def moist_conductivity(gas: Gas, vapour: Substance, mole_fraction, temperature):
     mass_ratio = gas.molar_mass / vapour.molar_mass
     of_gas = gas.conductivity(temperature) * gas_part
     of_vapour = vapour.vapour_conductivity(temperature) * vapour_part
-    crowd_of_gas = gas_part + vapour_part * interaction(ratio, mass_ratio)
-    crowd_of_vapour = vapour_part + gas_part * interaction(1.0 / ratio, 1.0 / mass_ratio)
-    return of_gas / crowd_of_gas + of_vapour / crowd_of_vapour
+    in_gas = VAPOUR_COUPLING * interaction(ratio, mass_ratio)
+    in_vapour = VAPOUR_COUPLING * interaction(1.0 / ratio, 1.0 / mass_ratio)
+    return of_gas / (gas_part + vapour_part * in_gas) + of_vapour / (
+        vapour_part + gas_part * in_vapour
+    )
 
 
 def mean_molecular_speed(temperature, molar_mass):

@@ -2,13 +2,88 @@
 
 import numpy as np
 
-from scatterfit.constants import GAS_CONSTANT, ICE_POINT
+from scatterfit.constants import GAS_CONSTANT
 
 REFERENCE_TEMPERATURE = 300.0
 """Where ``curved_power`` takes its leading coefficient [K]."""
 
 SODIUM_LINE = 589.3e-9
 """Wavelength of handbook refractive indices [m]."""
+
+
+def constant(temperature, *, value):
+    """Return one value for every temperature.
+
+    Parameters
+    ----------
+    temperature : array_like, shape (...)
+        Temperature [K].
+    value : float
+        The value, in any unit [-].
+
+    Returns
+    -------
+    value : ndarray, shape (...)
+        The same value everywhere, in its own unit [-].
+
+    Examples
+    --------
+    >>> constant(np.array([250.0, 300.0]), value=998.0)
+    array([998., 998.])
+    """
+    return value + 0.0 * temperature
+
+
+def constant_index(wavelength, temperature, *, value):
+    """Return one refractive index for every wavelength and temperature.
+
+    Parameters
+    ----------
+    wavelength : array_like, shape (...)
+        Vacuum wavelength [m].
+    temperature : array_like, shape (...)
+        Temperature [K].
+    value : complex
+        Refractive index against vacuum, n + ik [-].
+
+    Returns
+    -------
+    refractive_index : ndarray, shape (...)
+        The same value everywhere [-].
+
+    Examples
+    --------
+    >>> constant_index(532e-9, np.array([250.0, 300.0]), value=1.39)
+    array([1.39, 1.39])
+    """
+    return value + 0.0 * (wavelength + temperature)
+
+
+def anchored(temperature, *, function, value, anchor):
+    """Return a correlation scaled so that it passes through a stated value.
+
+    Parameters
+    ----------
+    temperature : array_like, shape (...)
+        Temperature [K].
+    function : callable
+        The correlation whose dependence on temperature is kept.
+    value : float
+        What it shall be at the anchor, in its own unit [-].
+    anchor : float
+        Temperature of the stated value [K].
+
+    Returns
+    -------
+    value : ndarray, shape (...)
+        Scaled correlation, in its own unit [-].
+
+    Examples
+    --------
+    >>> float(anchored(600.0, function=np.sqrt, value=2.0, anchor=150.0))
+    4.0
+    """
+    return function(temperature) * (value / float(function(np.float64(anchor))))
 
 
 def polynomial(temperature, *, coefficients, scale=1.0, shift=0.0):
@@ -182,31 +257,6 @@ def rackett_density(temperature, *, coefficients, molar_mass):
     c1, c2, c3, c4 = coefficients
     t = np.maximum(1.0 - temperature / c3, 0.0)
     return (molar_mass * c1) * np.exp(-np.log(c2) * (1.0 + t**c4))
-
-
-def celsius_line(temperature, *, intercept, slope):
-    """Return a straight line in degrees Celsius.
-
-    Parameters
-    ----------
-    temperature : array_like, shape (...)
-        Temperature [K].
-    intercept : float
-        Value at 0 degrees Celsius, in the unit of the result [-].
-    slope : float
-        Change with temperature, in that unit per kelvin [-].
-
-    Returns
-    -------
-    value : ndarray, shape (...)
-        The property, in the unit of ``intercept`` [-].
-
-    Examples
-    --------
-    >>> float(celsius_line(293.15, intercept=25.26e-3, slope=-0.0777e-3)) * 1e3
-    23.706
-    """
-    return intercept + slope * (temperature - ICE_POINT)
 
 
 def guggenheim_tension(temperature, *, scale, exponent, correction=0.0, critical_temperature):

@@ -1,35 +1,18 @@
-"""Ground floor: carrier gases, their mixtures, and how vapours diffuse in them."""
+"""Ground floor: the carrier gases, one record each."""
 
 from functools import partial
 
-import numpy as np
-
-from scatterfit.constants import GAS_CONSTANT, ICE_POINT, STANDARD_PRESSURE
+from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.errors import InvalidInputError
-from scatterfit.matter_forms import curved_power, polynomial
-from scatterfit.matter_records import (
-    Gas,
-    Property,
-    PureGas,
-    Refractivity,
-    constant,
-    unknown,
-)
-
-FRACTION_TOLERANCE = 1e-3
-"""How far mole fractions may be from summing to one before they are refused [-]."""
-
-FULLER_UNCERTAINTY = 0.05
-"""Of a diffusion coefficient by Fuller's rule, standard [-]; its authors state 4 percent mean."""
-
-FULLER_EXPONENT = 1.75
-"""Of temperature in Fuller's rule [-]."""
+from scatterfit.matter_forms import constant, curved_power, polynomial
+from scatterfit.matter_records import Property, PureGas, Refractivity
+from scatterfit.matter_substance import unknown
 
 _FIT = "own fit ({} percent) to {}"
 _LEMMON = "Lemmon and Jacobsen 2004"
 
 
-def _gas_property(kind, unit, function, source, uncertainty):
+def gas_property(kind, unit, function, source, uncertainty):
     """Return a property of a carrier gas."""
     return Property(kind, unit, function, source, (150.0, 340.0), uncertainty)
 
@@ -42,19 +25,19 @@ def _heat(coefficients, source="own fit (0.01 percent) to the reference equation
     else:
         function = partial(polynomial, coefficients=coefficients, shift=ICE_POINT)
         uncertainty = 1e-3
-    return _gas_property("heat capacity", "J/(mol K)", function, source, uncertainty)
+    return gas_property("heat capacity", "J/(mol K)", function, source, uncertainty)
 
 
 def _conductivity(value, exponent, curvature, source, uncertainty):
     """Return a thermal conductivity of the ``curved_power`` form."""
     function = partial(curved_power, value=value, exponent=exponent, curvature=curvature)
-    return _gas_property("conductivity", "W/(m K)", function, source, uncertainty)
+    return gas_property("conductivity", "W/(m K)", function, source, uncertainty)
 
 
 def _viscosity(value, exponent, curvature, source, uncertainty):
     """Return a viscosity of the ``curved_power`` form."""
     function = partial(curved_power, value=value, exponent=exponent, curvature=curvature)
-    return _gas_property("viscosity", "Pa s", function, source, uncertainty)
+    return gas_property("viscosity", "Pa s", function, source, uncertainty)
 
 
 PURE_GASES = (
@@ -144,8 +127,8 @@ PURE_GASES = (
             0.01,
         ),
         refractivity=Refractivity(
-            1.54489e-6 / 0.0584738,
-            ((8.309193e-2, 210.9241), (2.8764190e-3, 60.122959)),
+            0.0,
+            ((1.54489e-6, 0.0584738), (8.309193e-2, 210.9241), (2.8764190e-3, 60.122959)),
             273.15,
             "Old, Gentili and Peck 1971",
         ),
@@ -179,21 +162,6 @@ PURE_GASES = (
 
 _FOUND_BY = {key.casefold(): gas for gas in PURE_GASES for key in (gas.name, *gas.aliases)}
 
-_MEASURED = {
-    ("water", "air"): (0.2178e-4, 1.81, 0.025, "Massman 1998"),
-    ("water", "nitrogen"): (0.2178e-4, 1.81, 0.03, "as in air (Marrero and Mason 1972)"),
-    ("water", "oxygen"): (0.2200e-4, 1.81, 0.04, "1.01 times air (Marrero and Mason 1972)"),
-    (
-        "water",
-        "argon",
-    ): (0.2144e-4, 1.81, 0.04, "water in nitrogen times the ratio of Fuller's rule"),
-    (
-        "water",
-        "helium",
-    ): (0.735e-4, 1.75, 0.04, "0.902 cm2/s at 307.1 K, Schwertz and Brow 1951, from memory"),
-}
-"""Diffusivity at 273.15 K and 101325 Pa [m^2/s], exponent, uncertainty [-], source."""
-
 
 def pure_gas(name):
     """Return a carrier gas by name or formula.
@@ -222,314 +190,3 @@ def pure_gas(name):
     if gas is None:
         raise InvalidInputError(unknown("gas", name, [gas.name for gas in PURE_GASES]))
     return gas
-
-
-def checked_composition(composition):
-    """Return canonical gas names and mole fractions that sum to one.
-
-    Parameters
-    ----------
-    composition : str or mapping
-        One gas, or gas name to mole fraction of the dry gas [-].
-
-    Returns
-    -------
-    composition : dict
-        Canonical name to mole fraction [-].
-
-    Raises
-    ------
-    InvalidInputError
-        If a gas is unknown or named twice, a fraction is not positive, or their sum is off by
-        more than 0.001.
-
-    Examples
-    --------
-    >>> checked_composition({"Ar": 0.7, "He": 0.3})
-    {'argon': 0.7, 'helium': 0.3}
-    """
-    if isinstance(composition, str):
-        composition = {composition: 1.0}
-    fractions = {}
-    for name, fraction in composition.items():
-        gas = pure_gas(name).name
-        if gas in fractions:
-            message = f"carrier gas {gas!r} is named twice: add its mole fractions"
-            raise InvalidInputError(message)
-        if not 0 < fraction <= 1 + FRACTION_TOLERANCE:
-            message = f"mole fraction of {gas} must lie in 0 to 1, but it is {fraction!r}"
-            raise InvalidInputError(message)
-        fractions[gas] = float(fraction)
-    total = sum(fractions.values())
-    if not abs(total - 1) <= FRACTION_TOLERANCE:
-        message = f"mole fractions of the carrier gas must sum to 1, but they sum to {total:g}"
-        raise InvalidInputError(message)
-    return {gas: fraction / total for gas, fraction in fractions.items()}
-
-
-def weighted_sum(temperature, *, terms):
-    """Return a mole-fraction average.
-
-    Parameters
-    ----------
-    temperature : array_like, shape (...)
-        Temperature [K].
-    terms : tuple
-        Pairs of mole fraction [-] and callable of temperature.
-
-    Returns
-    -------
-    mean : ndarray, shape (...)
-        The average, in the unit of the callables [-].
-
-    Examples
-    --------
-    >>> float(weighted_sum(4.0, terms=((0.25, np.sqrt), (0.75, np.sqrt))))
-    2.0
-    """
-    return sum(fraction * function(temperature) for fraction, function in terms)
-
-
-def interaction(viscosity_ratio, mass_ratio):
-    """Return Wilke's factor for how gas j gets in the way of gas i.
-
-    Parameters
-    ----------
-    viscosity_ratio : array_like, shape (...)
-        Viscosity of i over that of j [-].
-    mass_ratio : float
-        Molar mass of i over that of j [-].
-
-    Returns
-    -------
-    factor : ndarray, shape (...)
-        Factor on the mole fraction of j in the mixture formula for i [-].
-
-    References
-    ----------
-    .. [1] E. A. Mason, S. C. Saxena, "Approximate formula for the thermal conductivity of gas
-       mixtures", Phys. Fluids 1 (1958) 361-369 (the same factor, for conductivities).
-       doi:10.1063/1.1724352
-
-    Examples
-    --------
-    >>> float(interaction(1.0, 1.0))
-    1.0
-    """
-    root = 1.0 + np.sqrt(viscosity_ratio) * mass_ratio**-0.25
-    return root * root / np.sqrt(8.0 * (1.0 + mass_ratio))
-
-
-def mixture_transport(temperature, *, parts, kind):
-    """Return the conductivity (Wassiljewa, Mason-Saxena) or viscosity (Wilke) of a gas mixture.
-
-    Parameters
-    ----------
-    temperature : array_like, shape (...)
-        Temperature [K].
-    parts : tuple
-        Pairs of mole fraction [-] and ``PureGas``.
-    kind : str
-        ``"conductivity"`` or ``"viscosity"``.
-
-    Returns
-    -------
-    value : ndarray, shape (...)
-        Conductivity [W/(m K)] or viscosity [Pa s].
-
-    Examples
-    --------
-    >>> half = ((0.5, pure_gas("argon")), (0.5, pure_gas("argon")))
-    >>> float(mixture_transport(300.0, parts=half, kind="conductivity"))
-    0.0178
-    """
-    viscosities = [gas.viscosity.function(temperature) for _, gas in parts]
-    total = 0.0
-    for (fraction, gas), viscosity in zip(parts, viscosities, strict=True):
-        crowd = sum(
-            other_fraction
-            * interaction(viscosity / other_viscosity, gas.molar_mass / other.molar_mass)
-            for (other_fraction, other), other_viscosity in zip(parts, viscosities, strict=True)
-        )
-        value = viscosity if kind == "viscosity" else gas.conductivity.function(temperature)
-        total = total + fraction * value / crowd
-    return total
-
-
-def build_gas(composition):
-    """Return the dry carrier gas of a composition.
-
-    Parameters
-    ----------
-    composition : str or mapping
-        One gas, or gas name to mole fraction of the dry gas [-].
-
-    Returns
-    -------
-    gas : Gas
-        The gas.
-
-    Raises
-    ------
-    InvalidInputError
-        If the composition does not describe a gas.
-
-    Examples
-    --------
-    >>> build_gas("helium").molar_mass
-    0.0040026
-    """
-    fractions = checked_composition(composition)
-    components = tuple(pure_gas(name) for name in fractions)
-    parts = tuple(zip(fractions.values(), components, strict=True))
-    molar_mass = sum(fraction * gas.molar_mass for fraction, gas in parts)
-    if len(parts) == 1:
-        (gas,) = components
-        return Gas(
-            fractions, components, molar_mass, gas.heat_capacity, gas.conductivity, gas.viscosity
-        )
-    heat = partial(
-        weighted_sum, terms=tuple((part, gas.heat_capacity.function) for part, gas in parts)
-    )
-    conductivity = partial(mixture_transport, parts=parts, kind="conductivity")
-    viscosity = partial(mixture_transport, parts=parts, kind="viscosity")
-    return Gas(
-        fractions,
-        components,
-        molar_mass,
-        _gas_property("heat capacity", "J/(mol K)", heat, "mean by mole fraction", 1e-3),
-        _gas_property(
-            "conductivity",
-            "W/(m K)",
-            conductivity,
-            "Wassiljewa's equation with the factors of Mason and Saxena 1958",
-            0.03,
-        ),
-        _gas_property("viscosity", "Pa s", viscosity, "Wilke 1950", 0.02),
-    )
-
-
-def reduced_mass(first, second):
-    """Return the harmonic mean of two molar masses, as Fuller's rule takes it.
-
-    Parameters
-    ----------
-    first, second : float
-        Molar masses [kg/mol].
-
-    Returns
-    -------
-    mass : float
-        2/(1/first + 1/second) [kg/mol].
-
-    Examples
-    --------
-    >>> reduced_mass(0.02, 0.02)
-    0.02
-    """
-    return 2.0 / (1.0 / first + 1.0 / second)
-
-
-def fuller_diffusivity(vapour, gas):
-    """Return a binary diffusion coefficient by the rule of Fuller, Schettler and Giddings.
-
-    Parameters
-    ----------
-    vapour : Substance
-        The vapour.
-    gas : PureGas
-        The gas.
-
-    Returns
-    -------
-    diffusivity : float
-        At 273.15 K and 101325 Pa; goes with T^1.75 [m^2/s].
-
-    References
-    ----------
-    .. [1] E. N. Fuller, P. D. Schettler, J. C. Giddings, "A new method for prediction of binary
-       gas-phase diffusion coefficients", Ind. Eng. Chem. 58 (1966) 18-27; constants of Poling
-       et al. 2001, equation 11-4.4 and table 11-1.
-
-    Examples
-    --------
-    Ethanol in air at 0 degrees Celsius (0.102 cm2/s in the International Critical Tables):
-
-    >>> from scatterfit.matter import substance
-    >>> fuller_diffusivity(substance("ethanol"), pure_gas("air")) * 1e4
-    0.105
-    """
-    mass = 1e3 * reduced_mass(vapour.molar_mass, gas.molar_mass)
-    width = np.cbrt(vapour.diffusion_volume) + np.cbrt(gas.diffusion_volume)
-    square_centimetres = (
-        0.00143 * ICE_POINT**FULLER_EXPONENT / (1e-5 * STANDARD_PRESSURE * mass**0.5 * width**2)
-    )
-    return float(1e-4 * square_centimetres)
-
-
-def binary_diffusivity(vapour, gas, water_mass):
-    """Return the power law of one vapour in one gas: measured where it was, else by rule.
-
-    Parameters
-    ----------
-    vapour : Substance
-        The vapour; heavy water diffuses as water, slower by the root of the reduced mass.
-    gas : PureGas
-        The gas.
-    water_mass : float
-        Molar mass of ordinary water [kg/mol].
-
-    Returns
-    -------
-    law : tuple
-        Diffusivity at 273.15 K and 101325 Pa [m^2/s], exponent of temperature [-], relative
-        standard uncertainty [-], source.
-
-    Examples
-    --------
-    >>> from scatterfit.matter import substance
-    >>> binary_diffusivity(substance("water"), pure_gas("air"), 0.018)[:2]
-    (2.178e-05, 1.81)
-    """
-    kind = "water" if vapour.name == "heavy water" else vapour.name
-    if (kind, gas.name) not in _MEASURED:
-        source = "Fuller, Schettler and Giddings 1966"
-        return fuller_diffusivity(vapour, gas), FULLER_EXPONENT, FULLER_UNCERTAINTY, source
-    value, exponent, uncertainty, source = _MEASURED[kind, gas.name]
-    if kind != vapour.name:
-        light = reduced_mass(water_mass, gas.molar_mass)
-        value *= (light / reduced_mass(vapour.molar_mass, gas.molar_mass)) ** 0.5
-        source = f"water ({source}) over the root of the reduced mass"
-    return value, exponent, uncertainty, source
-
-
-def blanc_diffusivity(temperature, *, laws):
-    r"""Return the diffusivity of a dilute vapour in a gas mixture by Blanc's law.
-
-    .. math:: 1/D = \sum x_i / D_i, \quad D_i = D_{0,i} (T/273.15)^{s_i}
-
-    Parameters
-    ----------
-    temperature : array_like, shape (...)
-        Temperature [K].
-    laws : tuple
-        Mole fraction [-], diffusivity at 273.15 K [m^2/s] and exponent [-] of each gas.
-
-    Returns
-    -------
-    diffusivity : ndarray, shape (...)
-        Diffusivity at the pressure of the laws [m^2/s].
-
-    Examples
-    --------
-    >>> blanc_diffusivity(273.15, laws=((0.5, 1e-5, 1.8), (0.5, 3e-5, 1.8))) * 1e5
-    1.50
-    """
-    log_ratio = np.log(temperature / ICE_POINT)
-    if len(laws) == 1:
-        ((_, value, exponent),) = laws
-        return value * np.exp(exponent * log_ratio)
-    slowness = sum(
-        fraction / value * np.exp(-exponent * log_ratio) for fraction, value, exponent in laws
-    )
-    return 1.0 / slowness

@@ -3,10 +3,9 @@
 from dataclasses import dataclass
 from functools import partial
 
-from scatterfit.constants import GAS_CONSTANT
+from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.matter_forms import (
     cauchy,
-    celsius_line,
     curved_power,
     guggenheim_tension,
     handbook_index,
@@ -16,7 +15,8 @@ from scatterfit.matter_forms import (
     wagner_latent_heat,
     wagner_pressure,
 )
-from scatterfit.matter_records import Property, RefractiveIndex, Substance
+from scatterfit.matter_records import Property, RefractiveIndex
+from scatterfit.matter_substance import Substance
 
 _LOW = 150.0
 _POLING = "Poling et al. 2001, appendix A"
@@ -64,21 +64,21 @@ def _tension(correlation, source, uncertainty):
 
 def _jasper(intercept, slope, uncertainty=0.01):
     """Return Jasper's line, given in mN/m and degrees Celsius."""
-    line = partial(celsius_line, intercept=1e-3 * intercept, slope=-1e-3 * slope)
+    line = partial(polynomial, coefficients=(intercept, -slope), scale=1e-3, shift=ICE_POINT)
     return _tension(line, _JASPER, uncertainty)
 
 
-def _index(shape, level, slope, celsius, source):
+def _index(shape, level, slope, celsius, source, book="CRC Handbook"):
     """Return a handbook index with a published shape of the dispersion."""
     function = partial(
         handbook_index,
         shape=shape,
         level=level,
         slope=slope,
-        level_temperature=273.15 + celsius,
+        level_temperature=ICE_POINT + celsius,
     )
     source = (
-        f"CRC Handbook n_D = {level} at {celsius} C, dispersion of {source}, "
+        f"{book} n_D = {level} at {celsius} C, dispersion of {source}, "
         f"dn/dT = {slope:g}/K; absorption taken as 0"
     )
     return RefractiveIndex(function, source, (230.0, 330.0), (0.4e-6, 0.8e-6), 8e-4)
@@ -286,7 +286,9 @@ OCTANE = _build(
         conductivity=(1.11047e-2, 1.9982, 0.3340),
         viscosity=(5.76151e-6, 0.9550, -0.0671),
         transport=_REFERENCE_FIT.format("Huber et al. 2004 and 2005"),
-        index=_index(_KERL, 1.3944, -4.9e-4, 25.0, "Kerl and Varchmin 1995"),
+        index=_index(
+            _KERL, 1.3974, -4.9e-4, 20.0, "Kerl and Varchmin 1995", "TRC tables (from memory)"
+        ),
     )
 )
 """n-octane."""
