@@ -1,0 +1,110 @@
+"""Kernel nodes on disk: one ``.npz`` without pickles a node, in the user's cache folder.
+
+A cache must never be in the way: what cannot be read is built again, what cannot be written is
+not kept, without a word.
+"""
+
+import contextlib
+import os
+import sys
+import tempfile
+import zipfile
+from collections.abc import Mapping
+from pathlib import Path
+
+import numpy as np
+
+
+class FolderStore:
+    """A folder of kernel nodes; several processes may use it at once.
+
+    Parameters
+    ----------
+    folder : path-like or None
+        Where files are kept; made when the first is written. ``None`` keeps nothing.
+    """
+
+    def __init__(self, folder: str | os.PathLike | None):
+        self.folder = None if folder is None else Path(folder)
+
+    def load(self, key: str) -> dict[str, np.ndarray] | None:
+        """Return the arrays saved under a key, or ``None`` where there is no sound file.
+
+        Parameters
+        ----------
+        key : str
+            Name made of letters and digits.
+
+        Returns
+        -------
+        arrays : dict of str to ndarray, or None
+            As they were saved.
+        """
+        if self.folder is None:
+            return None
+        try:
+            with np.load(self.folder / f"{key}.npz", allow_pickle=False) as file:
+                if str(file["key"]) != key:
+                    return None
+                return {name: file[name] for name in file.files if name != "key"}
+        except (OSError, ValueError, KeyError, EOFError, TypeError, zipfile.BadZipFile):
+            return None
+
+    def save(self, key: str, arrays: Mapping[str, np.ndarray]) -> None:
+        """Keep arrays under a key; a folder that cannot be written is left alone.
+
+        The file is written beside its place and moved there in one step, so that another process
+        sees a whole file or none.
+
+        Parameters
+        ----------
+        key : str
+            Name made of letters and digits.
+        arrays : mapping of str to ndarray
+            What to keep.
+        """
+        if self.folder is None:
+            return
+        written = None
+        try:
+            self.folder.mkdir(parents=True, exist_ok=True)
+            handle, written = tempfile.mkstemp(prefix=".writing-", dir=self.folder)
+            with os.fdopen(handle, "wb") as file:
+                np.savez(file, key=np.array(key), **arrays)
+            Path(written).replace(self.folder / f"{key}.npz")
+        except OSError:
+            if written is not None:
+                with contextlib.suppress(OSError):
+                    Path(written).unlink()
+
+
+def default_store() -> FolderStore:
+    """Return the user's store.
+
+    ``SCATTERFIT_CACHE`` names the folder; without it, it is ``scatterfit`` in the cache folder of
+    the system (``XDG_CACHE_HOME`` where that is set). Where no home is known nothing is kept.
+
+    Returns
+    -------
+    store : FolderStore
+        Ready to use; nothing is made on disk yet.
+    """
+    named = os.environ.get("SCATTERFIT_CACHE")
+    if named:
+        return FolderStore(Path(named))
+    base = _system_cache()
+    return FolderStore(None if base is None else base / "scatterfit")
+
+
+def _system_cache():
+    """Return the system's folder for caches, or ``None`` where no home is known."""
+    named = os.environ.get("XDG_CACHE_HOME") or (
+        os.environ.get("LOCALAPPDATA") if sys.platform == "win32" else None
+    )
+    if named:
+        return Path(named)
+    try:
+        home = Path.home()
+    except RuntimeError:
+        return None
+    return home / ("Library/Caches" if sys.platform == "darwin" else ".cache")
