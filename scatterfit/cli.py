@@ -231,9 +231,10 @@ def fit(
 
     Example: scatterfit fit bench.toml pulse.csv --out results
     """
+    exclude = _exclusions(exclude_ms)
     from scatterfit.cli_pulse import fit_files, result_text, write_result
 
-    pulse = fit_files(chamber, trace, settings or (), _exclusions(exclude_ms))
+    pulse = fit_files(chamber, trace, settings or (), exclude)
     result = pulse.to_dict()
     if out is not None:
         for path in write_result(out, trace.stem, pulse):

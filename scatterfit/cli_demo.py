@@ -5,7 +5,7 @@ from pathlib import Path
 import scatterfit
 from scatterfit.cli_pulse import fit_files, write_result
 from scatterfit.files import write_json, write_trace
-from scatterfit.files_kernel import kernel_store
+from scatterfit.files_kernel import default_store
 from scatterfit.report.comparison import comparison_text
 
 BENCH = """\
@@ -96,7 +96,7 @@ def _simulate(bench, path, number, seed):
     """Write one pulse and return what is in it."""
     (pulse,) = scatterfit.simulate(
         bench, count=1, number=number, duration=0.08, rate=5e4, noise=0.01, seed=seed,
-        store=kernel_store(),
+        store=default_store(),
     )
     write_trace(path, pulse.time, pulse.columns)
     return dict(pulse.truth)

@@ -6,7 +6,7 @@ from pathlib import Path
 import scatterfit
 from scatterfit.errors import TraceError
 from scatterfit.files import load_pulse, parse_assignment, write_json, write_trace
-from scatterfit.files_kernel import kernel_store
+from scatterfit.files_kernel import default_store
 
 
 def fit_files(chamber, trace, settings=(), exclude=()):
@@ -31,7 +31,7 @@ def fit_files(chamber, trace, settings=(), exclude=()):
     overrides = dict(parse_assignment(setting) for setting in settings)
     try:
         bench, record, used = load_pulse(chamber, trace, overrides)
-        return scatterfit.fit(bench, record, overrides=used, exclude=exclude, store=kernel_store())
+        return scatterfit.fit(bench, record, overrides=used, exclude=exclude, store=default_store())
     except TraceError as error:
         from scatterfit.measured_pulse import failed_pulse
 
@@ -102,7 +102,7 @@ def simulate_to_folder(chamber, folder, settings):
     """
     bench = scatterfit.read_chamber(chamber)
     folder = Path(folder)
-    pulses = scatterfit.simulate(bench, store=kernel_store(), **settings)
+    pulses = scatterfit.simulate(bench, store=default_store(), **settings)
     folder.mkdir(parents=True, exist_ok=True)
     copy = folder / Path(chamber).name
     if not (copy.exists() and copy.samefile(chamber)):

@@ -8,8 +8,10 @@ from pathlib import Path
 import pytest
 
 from scatterfit import cli
+from scatterfit.apparatus.keys import key_table
 from scatterfit.cli import main
 from scatterfit.errors import ChamberFileError, ScatterfitError, TraceError
+from scatterfit.report.template import chamber_template
 
 
 def run(capsys, *words):
@@ -105,6 +107,121 @@ def test_new_names_the_file_that_it_cannot_write(capsys, tmp_path):
     assert code == 1
     assert_one_plain_line(err)
     assert "no-such-folder" in err
+
+
+NO_GAUGE = """
+[beam]
+wavelength_nm = 635.0
+polarization = "unpolarized"
+[[detector]]
+column = "side_V"
+angle_deg = 60.0
+half_angle_deg = 1.0
+dark_V = 0.01
+full_scale_V = 2.0
+[vapour]
+substance = "water"
+saturation_ratio = 0.5
+[gas]
+carrier = {argon = 0.5, helium = 0.5}
+[chamber]
+temperature_K = 295.0
+pressure_kPa = 90.0
+[growth]
+temperature_K = 268.0
+pressure_kPa = 70.0
+[pulse]
+hold_ms = 1.2
+temperature_K = 243.0
+pressure_kPa = 54.0
+"""
+
+
+@pytest.fixture
+def bench(tmp_path):
+    """Return the path of a small bench without a pressure gauge."""
+    path = tmp_path / "bench.toml"
+    path.write_text(NO_GAUGE, encoding="utf-8")
+    return path
+
+
+def write_rows(path, rows, header="time_ms,side_V"):
+    path.write_text("\n".join([header, *rows]) + "\n", encoding="utf-8")
+    return path
+
+
+def test_the_file_that_new_writes_passes_check(capsys, tmp_path):
+    path = tmp_path / "bench.toml"
+    assert run(capsys, "new", path)[0] == 0
+    code, out, err = run(capsys, "check", path)
+    assert (code, err) == (0, "")
+    assert "saturation ratio            0.39" in out
+
+
+def test_every_key_of_the_new_file_is_known_once_uncommented():
+    lines = chamber_template().splitlines()
+    keys = [line.removeprefix("# ").partition(" = ")[0] for line in lines
+            if " = " in line.partition("#  ")[0] and not line.startswith("# The ")]
+    plain = [key for key in keys if not key.endswith("_sigma")]
+    assert plain == [key.name for key in key_table()]
+
+
+def test_check_shows_states_properties_and_sources(capsys, bench):
+    code, out, err = run(capsys, "check", bench)
+    assert (code, err) == (0, "")
+    for expected in ("635 nm", "unpolarized", "60 ± 1 degrees", "243 K", "1.2 ms", "268 K",
+                     "helium 0.5", "IAPWS", "Murphy and Koop", "Fuller"):
+        assert expected in out
+    lines = [line for line in out.splitlines() if str(bench) not in line]
+    assert max(map(len, lines)) <= 80
+
+
+def test_check_tells_how_a_trace_was_understood(capsys, bench, tmp_path):
+    rows = [f"{0.1 * i:.1f},{0.01 + 0.001 * (i % 7):.3f},{i}" for i in range(200)]
+    rows[70:73] = ["7.0,2.0,0", "7.1,2.0,0", "7.2,,0"]
+    trace = write_rows(tmp_path / "a.csv", rows, "time_ms,side_V,room_V")
+    code, out, _ = run(capsys, "check", bench, trace, "--set", "chamber.temperature_K=296")
+    assert code == 0
+    for expected in ("200, from 0 ms to 19.9 ms, every 0.1 ms", "0.013 V", "1 samples, left out",
+                     "2 samples of 2 V", "stated dark level           0.01 V", "ignored: room_V",
+                     "chamber.temperature_K       296"):
+        assert expected in out
+
+
+@pytest.mark.parametrize(("header", "rows", "expected"), [
+    ("time_ms,other_V", [f"{i},0" for i in range(30)], "side_V"),
+    ("time_ms,side_V", [f"{i},0" for i in range(30)] + ["29,0"], "29"),
+    ("time_ms,side_V", [f"{i},0" for i in range(30)] + ["30,zero"], "zero"),
+    ("time_ms,side_V", ["0,0"], "20"),
+])
+def test_an_unusable_trace_is_exit_1_and_says_why(capsys, bench, tmp_path, header, rows, expected):
+    trace = write_rows(tmp_path / "a.csv", rows, header)
+    code, out, err = run(capsys, "check", bench, trace)
+    assert (code, out) == (1, "")
+    assert_one_plain_line(err)
+    assert expected in err
+
+
+@pytest.mark.parametrize(("old", "new", "expected"), [
+    ("wavelength_nm", "wavelenght_nm", "wavelength_nm"), ('"water"', '"watr"', "water"),
+    ("= 0.5\n", "= 1.5\n", "saturation"), ("[beam]", "[beam", "TOML"),
+    ("635.0", '"red"', "beam.wavelength_nm"),
+])
+@pytest.mark.parametrize("command", ["check", "fit"])
+def test_a_wrong_chamber_file_is_one_line_and_exit_2(capsys, bench, command, old, new, expected):
+    bench.write_text(NO_GAUGE.replace(old, new, 1), encoding="utf-8")
+    code, out, err = run(capsys, command, bench, *(["trace.csv"] if command == "fit" else []))
+    assert (code, out) == (2, "")
+    assert_one_plain_line(err)
+    assert str(bench) in err
+    assert expected in err
+
+
+@pytest.mark.parametrize("setting", ["chamber.temprature_K=297", "chamber.temperature_K=warm", "x"])
+def test_a_wrong_setting_is_exit_2(capsys, bench, setting):
+    code, _, err = run(capsys, "check", bench, "--set", setting)
+    assert code == 2
+    assert_one_plain_line(err)
 
 
 @pytest.mark.skipif(os.name == "nt", reason="pipes close differently there")

@@ -1,0 +1,47 @@
+"""The pages say what the program does: generated parts are fresh, every key and code is there."""
+
+import importlib.util
+import re
+from pathlib import Path
+
+import pytest
+
+from scatterfit.apparatus.keys import key_table
+
+ROOT = Path(__file__).resolve().parents[1]
+DOCS = ROOT / "docs"
+PAGES = [ROOT / "README.md", ROOT / "DEVELOPERS.md", *sorted(DOCS.glob("*.md"))]
+
+
+def generate():
+    spec = importlib.util.spec_from_file_location("generate", DOCS / "generate.py")
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
+
+
+@pytest.mark.parametrize("page", ["command-line.md", "chamber-file.md"])
+def test_generated_parts_are_fresh(page):
+    fresh = generate().renewed(page)
+    assert (DOCS / page).read_text(encoding="utf-8") == fresh, "run docs/generate.py"
+
+
+def test_every_key_of_the_chamber_file_is_documented():
+    text = (DOCS / "chamber-file.md").read_text(encoding="utf-8")
+    keys = key_table()
+    assert len(keys) > 40
+    for key in keys:
+        assert f"| `{key.name}` | " in text
+
+
+@pytest.mark.parametrize("path", PAGES, ids=lambda path: path.name)
+def test_links_lead_somewhere(path):
+    links = re.findall(r"\]\(([^)#]+)\)", path.read_text(encoding="utf-8"))
+    for link in links:
+        assert link.startswith("http") or (path.parent / link).exists(), link
+
+
+def test_cautions_stand_where_a_newcomer_looks():
+    readme = (ROOT / "README.md").read_text(encoding="utf-8")
+    for word in ("Laser", "pressure", "burn", "local codes", "licensed"):
+        assert word in readme
