@@ -33,9 +33,9 @@ def fit_files(chamber, trace, settings=(), exclude=()):
         bench, record, used = load_pulse(chamber, trace, overrides)
         return scatterfit.fit(bench, record, overrides=used, exclude=exclude, store=default_store())
     except TraceError as error:
-        from scatterfit.measured_pulse import failed_pulse
+        from scatterfit.measured_pulse.record import MeasuredPulse, Reason
 
-        return failed_pulse(str(trace), str(error))
+        return MeasuredPulse(str(trace), "failed", (Reason("trace-unusable", str(error)),))
 
 
 def result_text(result):

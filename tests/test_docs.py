@@ -7,6 +7,7 @@ from pathlib import Path
 import pytest
 
 from scatterfit.apparatus.keys import key_table
+from scatterfit.measured_pulse.record import MeasuredPulse
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"
@@ -32,6 +33,13 @@ def test_every_key_of_the_chamber_file_is_documented():
     assert len(keys) > 40
     for key in keys:
         assert f"| `{key.name}` | " in text
+
+
+def test_every_key_of_a_result_is_documented():
+    result = MeasuredPulse("pulse.csv", "failed").to_dict()
+    text = (DOCS / "result.md").read_text(encoding="utf-8")
+    for key in (*result, *result["nucleation"], *result["concentration_by"], *result["curve"]):
+        assert f"`{key}`" in text
 
 
 @pytest.mark.parametrize("path", PAGES, ids=lambda path: path.name)

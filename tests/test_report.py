@@ -12,6 +12,7 @@ from matplotlib.colors import to_hex
 from uncertainties import ufloat
 
 from scatterfit.errors import InvalidInputError
+from scatterfit.measured_pulse.record import MeasuredPulse
 from scatterfit.report.figures import WIDTH_INCH, pulse_figure, save_pulse_figure
 from scatterfit.report.rounding import format_number, format_quantity, pretty_unit
 from scatterfit.report.summary import WIDTH, summary_text
@@ -50,7 +51,8 @@ def accepted():
                        "pressure_kPa": quantity(54.42, 0.06),
                        "saturation_ratio": quantity(10.01, 0.19),
                        "effective_ms": quantity(1.221, 0.05),
-                       "rate_per_cm3_s": quantity(4.11e6, 2.1e5)},
+                       "rate_per_cm3_s": quantity(4.11e6, 2.1e5),
+                       "temperature_saturation_covariance_K": -0.03},
         "curve": {"time_ms": time.tolist(), "radius_um": radius.tolist(),
                   "sigma_um": np.full(200, 0.0013).tolist()},
         "extrema": [{"time_ms": 30.0, "radius_um": 0.86, "kind": kind, "column": "scatter1_V"}
@@ -74,6 +76,16 @@ def rejected():
         "chi2_reduced": None, "residual_lag1": None, "budget": [], "optical_depth": None,
         "nucleation": dict.fromkeys(accepted()["nucleation"]), "provenance": {},
     }
+
+
+def test_the_invented_results_have_the_keys_of_real_ones():
+    empty = MeasuredPulse("pulse.csv", "rejected").to_dict()
+    for result in (accepted(), rejected()):
+        assert result.keys() == empty.keys()
+        assert result["nucleation"].keys() == empty["nucleation"].keys()
+        assert result["concentration_by"].keys() == empty["concentration_by"].keys()
+    assert "not determined" in summary_text(empty)
+    assert "±" not in summary_text(empty)
 
 
 def channel(column="scatter1_V", label="scattered, 30°", *, fitted=True):
