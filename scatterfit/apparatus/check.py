@@ -157,15 +157,16 @@ def _detectors(tables, where, sigmas):
     detectors = []
     for number, content in enumerate(tables, start=1):
         column = content.get("column")
-        prefix = f"detector.{column}" if isinstance(column, str) else f"detector[{number}]"
+        named = isinstance(column, str) and column.strip()
+        prefix = f"detector.{column.strip()}" if named else f"detector[{number}]"
         detectors.append(Detector(**_read_table("detector", content, prefix, where, sigmas)))
     return tuple(detectors)
 
 
 def _vapour(content, where, sigmas):
     fields = _read_table("vapour", content, "vapour", where, sigmas)
-    properties = {key.field for key in KEYS_OF["vapour"].values() if key.property_name}
-    overrides = {name: fields.pop(name) for name in properties & fields.keys()}
+    overrides = {key.property_name: fields.pop(key.field) for key in KEYS_OF["vapour"].values()
+                 if key.property_name and key.field in fields}
     try:
         substance = matter.substance(fields.pop("substance"))
     except InvalidInputError as error:

@@ -184,7 +184,7 @@ def _detector(mapping, path, value, where):
     tables = [table for table in mapping.get("detector", []) if isinstance(table, dict)]
     column = split_path(path)[1]
     for table in tables:
-        if table.get("column") == column:
+        if str(table.get("column")).strip() == column:
             return table
     columns = [str(table.get("column")) for table in tables]
     remedy = f"no detector fills column {column}; " + (

@@ -175,5 +175,7 @@ class Apparatus:
     """Key path as the contract spells it, without ``_sigma``, to standard uncertainty in SI.
 
     For example ``{"chamber.temperature_K": 0.15, "detector.scatter1_V.angle_deg": 0.0026}``
-    (kelvin, radian): the unit is that of the record's field, not of the key's suffix.
+    (kelvin, radian): the unit is that of the record's field, not of the key's suffix. A sigma of
+    zero is left out, as it says nothing. ``vapour.refractive_index_k`` is that of the absorbing
+    part where the file gives two, ``gas.carrier.helium`` that of a mole fraction.
     """
