@@ -269,7 +269,7 @@ def moist_conductivity(gas: Gas, vapour: Substance, mole_fraction, temperature):
     of_gas = gas.conductivity(temperature) * gas_part
     of_vapour = vapour.vapour_conductivity(temperature) * vapour_part
     in_gas = VAPOUR_COUPLING * interaction(ratio, mass_ratio)
-    in_vapour = VAPOUR_COUPLING * interaction(1.0 / ratio, 1.0 / mass_ratio)
+    in_vapour = in_gas * (mass_ratio / ratio)  # Wilke's factors of a pair are tied so
     return of_gas / (gas_part + vapour_part * in_gas) + of_vapour / (
         vapour_part + gas_part * in_vapour
     )

@@ -4,8 +4,8 @@ import numpy as np
 
 from scatterfit.constants import ICE_POINT, STANDARD_PRESSURE
 
-FULLER_UNCERTAINTY = 0.05
-"""Of a diffusion coefficient by Fuller's rule, standard [-]; its authors state 4 percent mean."""
+FULLER_UNCERTAINTY = 0.06
+"""Of a diffusion coefficient by Fuller's rule, standard [-]; high for organic vapours in air."""
 
 FULLER_EXPONENT = 1.75
 """Of temperature in Fuller's rule [-]."""
@@ -21,7 +21,7 @@ _MEASURED = {
     (
         "water",
         "helium",
-    ): (0.735e-4, 1.75, 0.04, "0.902 cm2/s at 307.1 K, Schwertz and Brow 1951, from memory"),
+    ): (0.735e-4, 1.75, 0.05, "0.902 cm2/s at 307.1 K, Schwertz and Brow 1951, from memory"),
 }
 """Diffusivity at 273.15 K and 101325 Pa [m^2/s], exponent, uncertainty [-], source."""
 
@@ -31,8 +31,10 @@ def reduced_mass(first, second):
 
     Parameters
     ----------
-    first, second : float
-        Molar masses [kg/mol].
+    first : float
+        Molar mass [kg/mol].
+    second : float
+        Molar mass [kg/mol].
 
     Returns
     -------

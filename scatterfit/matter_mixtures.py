@@ -199,7 +199,7 @@ def build_gas(composition):
             "W/(m K)",
             conductivity,
             "Wassiljewa's equation with the factors of Mason and Saxena 1958",
-            0.03,
+            0.04,
         ),
         gas_property("viscosity", "Pa s", viscosity, "Wilke 1950", 0.02),
     )

@@ -121,7 +121,7 @@ def _build(organic):
             ),
             _PERRY.format("32 (DIPPR 105)"),
             liquid,
-            0.005,
+            0.006,
         ),
         surface_tension=organic.tension,
         latent_heat=Property(

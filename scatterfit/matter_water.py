@@ -259,7 +259,7 @@ WATER = Substance(
         "kg/m^3",
         water_density,
         "own fit to IAPWS G12-15 and IAPWS-95 at 101325 Pa",
-        (230.0, 373.0),
+        (232.0, 373.0),
         0.0005,
     ),
     surface_tension=Property(
@@ -295,8 +295,8 @@ WATER = Substance(
         "J/(mol K)",
         water_heat_capacity,
         "own fit to IAPWS G12-15 and IAPWS-95 at 101325 Pa",
-        (235.0, 373.0),
-        0.01,
+        (245.0, 373.0),
+        0.006,
     ),
     vapour_conductivity=dilute_vapour(
         "vapour conductivity",
