@@ -13,7 +13,31 @@ _LEMMON = "Lemmon and Jacobsen 2004"
 
 
 def gas_property(kind, unit, function, source, uncertainty):
-    """Return a property of a carrier gas."""
+    """Return a property of a carrier gas, good from 150 to 340 K.
+
+    Parameters
+    ----------
+    kind : str
+        What it is.
+    unit : str
+        SI unit.
+    function : callable
+        Vectorised, temperature [K] to value.
+    source : str
+        Where it is from.
+    uncertainty : float
+        Standard uncertainty over the value [-].
+
+    Returns
+    -------
+    prop : Property
+        The record.
+
+    Examples
+    --------
+    >>> gas_property("root", "K^0.5", abs, "arithmetic", 0.0).range
+    (150.0, 340.0)
+    """
     return Property(kind, unit, function, source, (150.0, 340.0), uncertainty)
 
 

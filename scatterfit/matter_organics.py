@@ -17,10 +17,10 @@ from scatterfit.matter_forms import (
 )
 from scatterfit.matter_records import Property, RefractiveIndex
 from scatterfit.matter_substance import Substance
+from scatterfit.matter_water import LATENT_SOURCE, dilute_vapour
 
 _LOW = 150.0
 _POLING = "Poling et al. 2001, appendix A"
-_PERRY = "Perry's Handbook, 8th ed. 2008, table 2-{}"
 _JASPER = "Jasper 1972, as in Lange's Handbook, extrapolated below 273 K"
 
 
@@ -84,87 +84,60 @@ def _index(shape, level, slope, celsius, source, book="CRC Handbook"):
     return RefractiveIndex(function, source, (230.0, 330.0), (0.4e-6, 0.8e-6), 8e-4)
 
 
-def _build(organic):
-    """Return the full record of one organic liquid."""
+def _liquid_properties(organic):
+    """Return the fields of the liquid in equilibrium with its vapour."""
     critical_temperature, critical_pressure = organic.critical
-    c1, *rest = organic.density
-    wagner = {"coefficients": organic.wagner, "critical_temperature": critical_temperature}
     liquid = (max(organic.melting, _LOW), critical_temperature)
-    vapour = (200.0, 400.0)
+    wagner = {"coefficients": organic.wagner, "critical_temperature": critical_temperature}
+    pressure = partial(wagner_pressure, critical_pressure=critical_pressure, **wagner)
+    c1, *rest = organic.density
+    density = partial(
+        rackett_density, coefficients=(1e3 * c1, *rest), molar_mass=organic.molar_mass
+    )
+    heat = partial(polynomial, coefficients=organic.liquid_heat, scale=1e-3)
+    slope = partial(wagner_latent_heat, **wagner)
+    perry = "Perry's Handbook, 8th ed. 2008, table 2-{}"
+    wagner_source, spread = f"{_POLING} (Wagner 2.5-5)", organic.pressure_uncertainty
+    density_source, heat_source = perry.format("32 (DIPPR 105)"), perry.format("153 (DIPPR 100)")
+    cold = (organic.melting, 320.0)
+    rows = (
+        ("saturation pressure", "Pa", pressure, wagner_source, liquid, spread),
+        ("density", "kg/m^3", density, density_source, liquid, 0.006),
+        ("latent heat", "J/mol", slope, LATENT_SOURCE, liquid, 0.015),
+        ("liquid heat capacity", "J/(mol K)", heat, heat_source, cold, 0.02),
+    )
+    return {row[0].replace(" ", "_"): Property(*row) for row in rows}
+
+
+def _vapour_properties(organic):
+    """Return the fields of the dilute vapour."""
 
     def power(triple):
         value, exponent, curvature = triple
         return partial(curved_power, value=value, exponent=exponent, curvature=curvature)
 
+    heat = partial(polynomial, coefficients=organic.vapour_heat, scale=GAS_CONSTANT)
+    rows = (
+        ("vapour heat capacity", "J/(mol K)", heat, _POLING, 0.02),
+        ("vapour conductivity", "W/(m K)", power(organic.conductivity), organic.transport, 0.1),
+        ("vapour viscosity", "Pa s", power(organic.viscosity), organic.transport, 0.05),
+    )
+    return {row[0].replace(" ", "_"): dilute_vapour(*row) for row in rows}
+
+
+def _build(organic):
+    """Return the full record of one organic liquid."""
     return Substance(
         name=organic.name,
         cas=organic.cas,
         aliases=organic.aliases,
         molar_mass=organic.molar_mass,
-        critical_temperature=critical_temperature,
+        critical_temperature=organic.critical[0],
         diffusion_volume=organic.diffusion_volume,
-        saturation_pressure=Property(
-            "saturation pressure",
-            "Pa",
-            partial(wagner_pressure, critical_pressure=critical_pressure, **wagner),
-            f"{_POLING} (Wagner 2.5-5)",
-            liquid,
-            organic.pressure_uncertainty,
-        ),
-        density=Property(
-            "density",
-            "kg/m^3",
-            partial(
-                rackett_density,
-                coefficients=(1e3 * c1, *rest),
-                molar_mass=organic.molar_mass,
-            ),
-            _PERRY.format("32 (DIPPR 105)"),
-            liquid,
-            0.006,
-        ),
         surface_tension=organic.tension,
-        latent_heat=Property(
-            "latent heat",
-            "J/mol",
-            partial(wagner_latent_heat, **wagner),
-            "R T^2 d(ln p)/dT of the saturation pressure used",
-            liquid,
-            0.015,
-        ),
-        vapour_heat_capacity=Property(
-            "vapour heat capacity",
-            "J/(mol K)",
-            partial(polynomial, coefficients=organic.vapour_heat, scale=GAS_CONSTANT),
-            _POLING,
-            (200.0, 1000.0),
-            0.02,
-        ),
-        liquid_heat_capacity=Property(
-            "liquid heat capacity",
-            "J/(mol K)",
-            partial(polynomial, coefficients=organic.liquid_heat, scale=1e-3),
-            _PERRY.format("153 (DIPPR 100)"),
-            (organic.melting, 320.0),
-            0.02,
-        ),
-        vapour_conductivity=Property(
-            "vapour conductivity",
-            "W/(m K)",
-            power(organic.conductivity),
-            organic.transport,
-            vapour,
-            0.1,
-        ),
-        vapour_viscosity=Property(
-            "vapour viscosity",
-            "Pa s",
-            power(organic.viscosity),
-            organic.transport,
-            vapour,
-            0.05,
-        ),
         refractive_index=organic.index,
+        **_liquid_properties(organic),
+        **_vapour_properties(organic),
     )
 
 

@@ -232,7 +232,31 @@ def liquid_water_index(wavelength, temperature, *, density, factor=1.0):
 
 
 def dilute_vapour(kind, unit, correlation, source, uncertainty):
-    """Return a property of a dilute vapour."""
+    """Return a property of a dilute vapour, good from 200 to 400 K.
+
+    Parameters
+    ----------
+    kind : str
+        What it is.
+    unit : str
+        SI unit.
+    correlation : callable
+        Vectorised, temperature [K] to value.
+    source : str
+        Where it is from.
+    uncertainty : float
+        Standard uncertainty over the value [-].
+
+    Returns
+    -------
+    prop : Property
+        The record.
+
+    Examples
+    --------
+    >>> dilute_vapour("root", "K^0.5", abs, "arithmetic", 0.0).range
+    (200.0, 400.0)
+    """
     return Property(kind, unit, correlation, source, (200.0, 400.0), uncertainty)
 
 
