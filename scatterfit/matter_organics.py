@@ -19,7 +19,6 @@ from scatterfit.matter_records import Property, RefractiveIndex
 from scatterfit.matter_substance import Substance
 from scatterfit.matter_water import LATENT_SOURCE, dilute_vapour
 
-_LOW = 150.0
 _POLING = "Poling et al. 2001, appendix A"
 _JASPER = "Jasper 1972, as in Lange's Handbook, extrapolated below 273 K"
 
@@ -87,7 +86,7 @@ def _index(shape, level, slope, celsius, source, book="CRC Handbook"):
 def _liquid_properties(organic):
     """Return the fields of the liquid in equilibrium with its vapour."""
     critical_temperature, critical_pressure = organic.critical
-    liquid = (max(organic.melting, _LOW), critical_temperature)
+    liquid = (organic.melting, critical_temperature)
     wagner = {"coefficients": organic.wagner, "critical_temperature": critical_temperature}
     pressure = partial(wagner_pressure, critical_pressure=critical_pressure, **wagner)
     c1, *rest = organic.density
