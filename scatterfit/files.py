@@ -15,7 +15,7 @@ from scatterfit.apparatus.keys import HUMIDITY
 from scatterfit.apparatus.saturation import check_saturation
 from scatterfit.apparatus.values import printable
 from scatterfit.errors import ChamberFileError
-from scatterfit.files_pulses import PULSES_NAME, pulse_row
+from scatterfit.files_pulses import PULSES_NAME, pulse_rows
 from scatterfit.files_text import parse_assignment
 from scatterfit.files_trace import TRACE_SUFFIXES, Trace, check_columns, read_trace
 from scatterfit.files_write import write_json, write_trace
@@ -86,7 +86,7 @@ def read_chamber(path):
     return apparatus_from_mapping(read_chamber_mapping(path), str(path))
 
 
-def load_pulse(chamber_path, trace_path, overrides=None):
+def load_pulse(chamber_path, trace_path, overrides=None, *, folder=None):
     """Read a chamber file and a trace, with all that is said about this pulse.
 
     Parameters
@@ -97,6 +97,8 @@ def load_pulse(chamber_path, trace_path, overrides=None):
         The trace.
     overrides : Mapping of str to object, optional
         Key path to value, above all other sources.
+    folder : str or Path, optional
+        Folder above the trace's own whose ``pulses.csv`` counts too, the nearer one more.
 
     Returns
     -------
@@ -119,7 +121,7 @@ def load_pulse(chamber_path, trace_path, overrides=None):
     bench = apparatus_from_mapping(mapping, where)
     trace = read_trace(trace_path)
     layers = {
-        str(Path(trace_path).parent / PULSES_NAME): pulse_row(trace_path),
+        **pulse_rows(trace_path, folder),
         trace.source: trace.overrides,
         "--set": overrides,
     }

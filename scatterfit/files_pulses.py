@@ -13,32 +13,45 @@ PULSES_NAME = "pulses.csv"
 """Name of the file."""
 
 
-def pulse_row(trace_path):
-    """Return what ``pulses.csv`` in a trace's folder says about it.
+def pulse_rows(trace_path, folder=None):
+    """Return what the ``pulses.csv`` around a trace say about it.
 
     Parameters
     ----------
     trace_path : str or Path
-        The trace; its row is found by the file's name, with or without its ending.
+        The trace; its row is found by its path from where ``pulses.csv`` is, with ``/`` between
+        folders, with or without its ending.
+    folder : str or Path, optional
+        Folder that holds the trace's own folder: its ``pulses.csv`` counts too.
 
     Returns
     -------
-    overrides : dict
-        Key path to value in the key's unit; empty where the file or the row is not there.
+    rows : dict
+        Path of each ``pulses.csv`` that has a row for the trace, the nearest last, to key path
+        and value in the key's unit.
 
     Raises
     ------
     ChamberFileError
-        If ``pulses.csv`` cannot be understood; the message is one line with file and row.
+        If a ``pulses.csv`` cannot be understood; the message is one line with file and row.
     """
     path = Path(trace_path)
-    source = path.parent / PULSES_NAME
-    try:
-        state = source.stat()
-    except OSError:
-        return {}
-    table = _table(str(source), state.st_mtime_ns, state.st_size)
-    return dict(table.get(path.name) or table.get(path.stem) or {})
+    places = [path.parent]
+    if folder is not None and Path(folder) in path.parent.parents:
+        places.insert(0, Path(folder))
+    rows = {}
+    for place in places:
+        source = place / PULSES_NAME
+        try:
+            state = source.stat()
+        except OSError:
+            continue
+        table = _table(str(source), state.st_mtime_ns, state.st_size)
+        name = path.relative_to(place)
+        row = table.get(name.as_posix()) or table.get(name.with_suffix("").as_posix())
+        if row:
+            rows[str(source)] = dict(row)
+    return rows
 
 
 @lru_cache(maxsize=8)

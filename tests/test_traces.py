@@ -339,6 +339,20 @@ def test_a_pulse_that_pulses_csv_does_not_know_and_an_empty_cell(night):
     assert load(night)[2] == {}
 
 
+def test_pulses_csv_of_a_folder_above_counts_less_than_the_nearest(tmp_path):
+    night = tmp_path / "night"
+    night.mkdir()
+    (night / "bench.toml").write_text(GAUGE, encoding="utf-8")
+    (night / "pulse.csv").write_text(text_of(), encoding="utf-8")
+    header = "trace,chamber.temperature_K,chamber.path_mm\n"
+    (tmp_path / PULSES_NAME).write_text(header + "pulse.csv,280,1\nnight/pulse.csv,290,2\n",
+                                        encoding="utf-8")
+    (night / PULSES_NAME).write_text(header + "pulse,,3\n", encoding="utf-8")
+    assert load(night)[2] == {"chamber.path_mm": 3.0}
+    _, _, used = load_pulse(night / "bench.toml", night / "pulse.csv", folder=tmp_path)
+    assert used == {"chamber.temperature_K": 290.0, "chamber.path_mm": 3.0}
+
+
 def test_pulses_csv_is_read_again_when_it_changes(night):
     path = night / PULSES_NAME
     for number, temperature in enumerate((290.0, 291.0)):
@@ -484,8 +498,18 @@ def test_json_is_written_whole_or_not_at_all(tmp_path):
     for bad in (math.nan, np.inf, np.array([1.0, np.nan])):
         with pytest.raises(InvalidInputError, match=r"result\.json: not written"):
             write_json(path, {"a": {"b": bad}})
+    with pytest.raises(TypeError, match="Path cannot be written as JSON"):
+        write_json(path, {"a": path})
     assert json.loads(path.read_text(encoding="utf-8"))["n"] == 3
     assert list(tmp_path.iterdir()) == [path]
+
+
+def test_nothing_is_left_behind_where_writing_fails(tmp_path):
+    place = tmp_path / "result.json"
+    place.mkdir()
+    with pytest.raises(OSError, match=r"result\.json"):
+        write_json(place, {"a": 1})
+    assert list(tmp_path.iterdir()) == [place]
 
 
 # --- any file at all ------------------------------------------------------------------------------
