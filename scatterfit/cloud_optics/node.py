@@ -18,6 +18,7 @@ import numpy as np
 from scatterfit.cloud_optics.aperture import ConeQuadrature, cone_quadrature
 from scatterfit.cloud_optics.single_droplet import (
     AngularMatrix,
+    add_product,
     angular_matrix,
     intensities,
     series_sums,
@@ -31,11 +32,11 @@ STEPS_A_SPREAD = 0.3
 """Spacing of the table in ln x over its spread; cubic splines on it are good to 1e-4 [-]."""
 
 _REACH = 18
-_FINEST = 24
-_RESOLUTION = 0.7
+_FINEST = 20
+_RESOLUTION = 0.85
 _TERMS = 3.5
 _LAST_SMOOTH_SIZE = 10.0
-_BLOCK = 4000
+_BLOCK = 2000
 _COUNT_LATTICE = 64
 
 
@@ -210,7 +211,7 @@ def _subdivision(recipe):
     """Return the evaluations in each interval of the table, from 18 before it to 18 after it."""
     interval = np.arange(-_REACH, recipe.count + _REACH)
     size = LOWEST_SIZE * np.exp(recipe.step * interval)
-    return np.clip(np.ceil(1.5 * size), 1, _FINEST).astype(int)
+    return np.clip(np.ceil(size) + 2, 3, _FINEST).astype(int)
 
 
 def _fine_sizes(recipe, subdivision):
@@ -251,14 +252,16 @@ def _curves(x, relative_index, collector, resolution):
         resolution = None
     terms = min(term_count(x[-1], **margin), collector.matrix.plus.shape[1])
     sums = series_sums(x, relative_index, collector.matrix, terms, resolution)
-    curves = np.empty((collector.perpendicular.shape[0] + 1, relative_index.size, x.size))
-    i1, i2 = intensities(sums)
-    curves[:-1] = np.tensordot(collector.perpendicular, i1, 1)
-    curves[:-1] += np.tensordot(collector.parallel, i2, 1)
+    curves = np.zeros((collector.perpendicular.shape[0] + 1, relative_index.size, x.size))
+    pairs = zip((collector.perpendicular, collector.parallel), intensities(sums), strict=True)
+    pairs = list(pairs)
     if sums.apart.size:
         last = slice(terms - sums.apart.shape[0], terms)
-        curves[:-1] += np.tensordot(collector.electric_apart[:, last], sums.apart[:, 0], 1)
-        curves[:-1] += np.tensordot(collector.magnetic_apart[:, last], sums.apart[:, 1], 1)
+        pairs.append((collector.electric_apart[:, last], sums.apart[:, 0]))
+        pairs.append((collector.magnetic_apart[:, last], sums.apart[:, 1]))
+    light = curves[:-1].reshape(curves.shape[0] - 1, -1)
+    for weights, values in pairs:
+        add_product(light, weights, values.reshape(values.shape[0], -1))
     curves[-1] = 2 * np.pi * sums.extinction
     return curves
 
@@ -273,9 +276,11 @@ def _averaged(fine, subdivision, recipe):
         values = fine[..., start : start + (last - first) * parts]
         start += (last - first) * parts
         values = values.reshape(*fine.shape[:-1], last - first, parts)
-        shares = values @ _shares(parts)
-        for back in range(2 * _REACH + 1):
-            total[..., first + back : last + back] += shares[..., back]
+        shares = np.zeros((2 * _REACH + 1, values.size // parts))
+        add_product(shares, _shares(parts).T, values.reshape(-1, parts).T)
+        shares = shares.reshape(-1, *values.shape[:-1])
+        for back, share in enumerate(shares):
+            total[..., first + back : last + back] += share
     return total[..., 2 * _REACH : 2 * _REACH + recipe.count]
 
 

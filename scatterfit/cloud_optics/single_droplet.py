@@ -22,6 +22,7 @@ FULL_TERMS = 6.0
 _BLOCK = 2000
 _BLOCK_RATIO = 1.2
 _CHUNK = 32
+_SERIAL_PRODUCT = 250_000
 
 
 @dataclass(frozen=True)
@@ -208,9 +209,9 @@ def series_sums(
     absorption adds x k / n to the width that counts here.
     """
     shape = (2, relative_index.size, size_parameter.size)
-    plus = np.zeros((matrix.plus.shape[0], *shape))
-    minus = np.zeros_like(plus)
-    extinction, scattering = np.zeros(shape[1:]), np.zeros(shape[1:])
+    angular = np.vstack([matrix.plus[:, :terms], 2 * np.arange(1, terms + 1) + 1.0])
+    plus, minus = np.zeros((angular.shape[0], *shape)), np.zeros((angular.shape[0] - 1, *shape))
+    scattering = np.zeros(shape[1:])
     sums, differences = np.empty((_CHUNK, *shape)), np.empty((_CHUNK, *shape))
     lost = []
     filled = _CHUNK
@@ -218,25 +219,52 @@ def series_sums(
         filled -= 1
         np.add(a, b, out=sums[filled])
         np.subtract(a, b, out=differences[filled])
-        extinction += (2 * n + 1) * sums[filled, 0]
         if np.iscomplexobj(relative_index):
             scattering += (2 * n + 1) * (a * a + b * b).sum(axis=0)
         if apart is not None:
             lost.append(apart)
         if filled == 0 or n == 1:
             columns = slice(n - 1, n - 1 + _CHUNK - filled)
-            _fold(plus, matrix.plus[:, columns], sums[filled:])
+            _fold(plus, angular[:, columns], sums[filled:])
             _fold(minus, matrix.minus[:, columns], differences[filled:])
             filled = _CHUNK
+    extinction = plus[-1, 0]
     if not np.iscomplexobj(relative_index):
         scattering = extinction
-    return SeriesSums(plus, minus, extinction, scattering, np.array(lost[::-1]))
+    return SeriesSums(plus[:-1], minus, extinction, scattering, np.array(lost[::-1]))
 
 
 def _fold(total, weights, rows):
     """Add the matrix product of angular weights and a chunk of coefficient rows."""
-    product = weights @ rows.reshape(rows.shape[0], -1)
-    total += product.reshape(total.shape)
+    add_product(total.reshape(total.shape[0], -1), weights, rows.reshape(rows.shape[0], -1))
+
+
+def add_product(total: np.ndarray, left: np.ndarray, right: np.ndarray) -> None:
+    """Add a matrix product to ``total`` in place, cut so that no library starts threads for it.
+
+    Blocks run in threads of their own already, and linear-algebra threads that wait for each other
+    on a busy machine make the whole three times slower.
+
+    Parameters
+    ----------
+    total : ndarray, shape (n, m)
+        Changed in place, in the unit of the product.
+    left : ndarray, shape (n, k)
+        First factor, in any unit.
+    right : ndarray, shape (k, m)
+        Second factor, in any unit.
+
+    Examples
+    --------
+    >>> total = np.ones((1, 2))
+    >>> add_product(total, np.array([[2.0]]), np.array([[1.0, 3.0]]))
+    >>> total
+    array([[3., 7.]])
+    """
+    columns = max(16, _SERIAL_PRODUCT // left.size)
+    for start in range(0, right.shape[1], columns):
+        part = slice(start, start + columns)
+        total[:, part] += left @ right[:, part]
 
 
 def _coefficient_rows(x, m, terms, resolution=None) -> Iterator[tuple]:
@@ -254,17 +282,20 @@ def _coefficient_rows(x, m, terms, resolution=None) -> Iterator[tuple]:
     log_derivative = _log_derivative_above(m, x, terms)
     rows = np.empty((2, 2, m.size, x.size))
     pq = np.empty((2, 2, m.size, x.size), dtype=m.dtype)
-    step = np.empty_like(log_derivative)
+    step, scaled = np.empty_like(log_derivative), np.empty(pq.shape[1:], dtype=m.dtype)
     work = _real_coefficients if pq.dtype.kind == "f" else _complex_coefficients
+    first_narrow = terms + 1 if resolution is None else int(x[0] + np.cbrt(x[0]))
     for n in range(terms, 0, -1):
         values, slopes = outside[n]
-        np.multiply(factor, log_derivative * values[:, None], out=pq)
+        np.multiply(log_derivative, values[:, None], out=scaled)
+        np.multiply(factor, scaled, out=pq)
         pq -= slopes[:, None]
-        widened, apart = 0.0, None
-        if resolution is not None and n >= x[0]:
+        denominator, apart = pq[:, 0], None
+        if n >= first_narrow:
             widened, ratio = _widening(n, x, m, outside[n, :, 1], resolution)
-        work(pq, widened, rows)
-        if resolution is not None and n >= x[0]:
+            denominator = denominator + widened
+        work(pq, denominator, rows)
+        if n >= first_narrow:
             apart = ratio * (rows * rows).sum(axis=1)
         yield n, rows, apart
         np.multiply(inverse, n, out=step)
@@ -274,23 +305,24 @@ def _coefficient_rows(x, m, terms, resolution=None) -> Iterator[tuple]:
 
 
 def _widening(n, x, m, chi, resolution):
-    """Return what to add to p in the denominator, and W/w - 1; shape (2, n_indices, n_sizes)."""
-    index, absorption = m.real[:, None], x * (m.imag / m.real)[:, None]
+    """Return what to add to p in the denominator, and W/w - 1; shape (2, n_indices, n_sizes).
+
+    Indices come from a narrow lattice: one width, that of their mean, serves all.
+    """
+    index, absorption = m.real.mean(), m.imag.mean() / m.real.mean()
     value, slope = chi
-    width = np.empty((2, m.size, x.size))
-    width[0] = (1 - index**-2) * (n * (n + 1) * (value / x) ** 2 + (index * slope) ** 2)
-    width[1] = (index**2 - 1) * value**2
-    np.divide(1.0, width, out=width)
-    total = width + absorption
-    extra = np.hypot(total, resolution) - total
-    extra[..., x > n] = 0.0
-    return -extra / (width * value), extra / total
+    strength = np.empty((2, 1, x.size))
+    strength[0, 0] = (1 - index**-2) * (n * (n + 1) * (value / x) ** 2 + (index * slope) ** 2)
+    strength[1, 0] = (index**2 - 1) * value**2
+    total = 1 / strength + x * absorption
+    extra = np.sqrt(np.sqrt(total**4 + resolution**4)) - total
+    extra[..., int(np.searchsorted(x + np.cbrt(x), n, side="right")) :] = 0.0
+    return -extra * strength / value, extra / total
 
 
-def _real_coefficients(pq, widened, rows):
-    """Write p / (p + widened - i q) for real p and q."""
+def _real_coefficients(pq, denominator, rows):
+    """Write p / (denominator - i q) for real p and q."""
     p, q = pq[:, 0], pq[:, 1]
-    denominator = p + widened
     weight = denominator * denominator
     weight += q * q
     np.divide(p, weight, out=weight)
@@ -298,10 +330,10 @@ def _real_coefficients(pq, widened, rows):
     np.multiply(q, weight, out=rows[:, 1])
 
 
-def _complex_coefficients(pq, widened, rows):
-    """Write p / (p + widened - i q) for complex p and q."""
+def _complex_coefficients(pq, denominator, rows):
+    """Write p / (denominator - i q) for complex p and q."""
     p, q = pq[:, 0], pq[:, 1]
-    coefficient = p / (p + widened - 1j * q)
+    coefficient = p / (denominator - 1j * q)
     rows[:, 0], rows[:, 1] = coefficient.real, coefficient.imag
 
 
@@ -332,18 +364,19 @@ def _outside_functions(x, terms):
     """
     inverse = 1 / x
     functions = np.empty((terms + 1, 2, 2, x.size))
-    values = functions[:, 0]
     ratio = _psi_ratios(x, terms)
-    values[0, 0], values[0, 1] = np.sin(x), np.cos(x)
+    functions[0, 0] = np.sin(x), np.cos(x)
     before = np.stack([np.cos(x), -np.sin(x)])
+    over = np.empty_like(before)
     for n in range(1, terms + 1):
-        np.multiply((2 * n - 1) * inverse, values[n - 1], out=values[n])
-        values[n] -= before
+        last, (value, slope) = functions[n - 1, 0], functions[n]
+        np.multiply((2 * n - 1) * inverse, last, out=value)
+        value -= before
         small = slice(0, int(np.searchsorted(x, n)))
-        values[n, 0, small] = ratio[n, small] * values[n - 1, 0, small]
-        before = values[n - 1]
-    order = np.arange(1, terms + 1)[:, None, None]
-    functions[1:, 1] = values[:-1] - order * inverse * values[1:]
+        np.multiply(ratio[n, small], last[0, small], out=value[0, small])
+        np.multiply(n * inverse, value, out=over)
+        np.subtract(last, over, out=slope)
+        before = last
     return functions
 
 

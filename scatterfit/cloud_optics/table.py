@@ -17,7 +17,7 @@ INDEX_STEP = 1e-3
 _TILT = 4.0
 _RAYLEIGH_POWER = 6.0
 _POLE = np.sqrt(3.0) - 2.0
-_TAPS = 24
+_TAPS = 14
 
 
 @dataclass(frozen=True)
@@ -113,13 +113,13 @@ class OpticalKernel:
         Cubic Lagrange interpolation between the four nearest indices, of fourth order between
         the five angles.
         """
-        index_weights = self._index_weights(relative_index)
+        nodes, weights = self._nearest(relative_index)
         shifts = np.zeros(len(self.recipe.views)) if angle_shifts is None else angle_shifts
         angle_weights = self._angle_weights(np.asarray(shifts, dtype=float))
         orders = [(0, 0), (1, 0), (0, 1)] if derivatives else [(0, 0)]
-        rows = [self._collected(index_weights[:, i], angle_weights, j) for i, j in orders]
-        rows.append(self._single("extinction", index_weights[:, : len(orders[:2])]))
-        rows.append(self._single("forward", index_weights[:, :1]))
+        rows = [self._collected(nodes, weights[:, i], angle_weights, j) for i, j in orders]
+        rows.append(weights[:, : len(orders[:2])].T @ [node.extinction for node in nodes])
+        rows.append(weights[:, :1].T @ [node.forward for node in nodes])
         stacked = np.concatenate(rows) / self.wavenumber**2
         stacked = widen(stacked, self.recipe.step, self.recipe.spread, spread)
         return self._named(stacked, max(spread, self.recipe.spread), derivatives)
@@ -135,8 +135,8 @@ class OpticalKernel:
         extinction, by_index_too, forward = stacked[3 * count :]
         return KernelTable(*head, extinction, forward, by_index, by_index_too, by_angle)
 
-    def _index_weights(self, relative_index):
-        """Return weights of all nodes for value and derivative, shape (n_nodes, 2)."""
+    def _nearest(self, relative_index):
+        """Return the four nodes to use and their weights for value and derivative, (4, 2)."""
         real = complex(relative_index).real
         low, high = self.index_range
         if not low - 1e-9 <= real <= high + 1e-9:
@@ -147,10 +147,9 @@ class OpticalKernel:
             raise InvalidInputError(message)
         position = real / INDEX_STEP - self.first_index
         first = min(max(int(np.floor(position)) - 1, 0), len(self.nodes) - 4)
-        weights = np.zeros((len(self.nodes), 2))
-        weights[first : first + 4] = lagrange_weights(np.arange(4.0), position - first)
+        weights = lagrange_weights(np.arange(4.0), position - first)
         weights[:, 1] /= INDEX_STEP
-        return weights
+        return self.nodes[first : first + 4], weights
 
     def _angle_weights(self, shifts):
         """Return for each detector the weights of its axes, a list of shape (n_axes, 2)."""
@@ -171,19 +170,15 @@ class OpticalKernel:
             found.append(weights)
         return found
 
-    def _collected(self, index_weights, angle_weights, angle_order):
+    def _collected(self, nodes, index_weights, angle_weights, angle_order):
         """Return collected light combined over nodes and axes, shape (n_detectors, n)."""
         rows = np.zeros((len(angle_weights), self.recipe.count))
-        for node, share in zip(self.nodes, index_weights, strict=True):
-            if share:
-                for i, axes in enumerate(node.collected):
-                    rows[i] += (share * angle_weights[i][:, angle_order]) @ axes
+        for share, node in zip(index_weights, nodes, strict=True):
+            for i, axes in enumerate(node.collected):
+                for weight, axis in zip(angle_weights[i][:, angle_order], axes, strict=True):
+                    if weight:
+                        rows[i] += share * weight * axis
         return rows
-
-    def _single(self, name, index_weights):
-        """Return extinction or forward light and, with two columns, its derivative."""
-        used = [i for i, share in enumerate(index_weights) if share.any()]
-        return index_weights[used].T @ np.stack([getattr(self.nodes[i], name) for i in used])
 
 
 @dataclass(frozen=True)
@@ -195,13 +190,13 @@ class Curves:
     step: float
     """Spacing in ln(radius) [-]."""
     cells: np.ndarray
-    """Polynomial coefficients of each interval, constant term first, shape (n - 1, 4, n_rows),
+    """Polynomial coefficients of each interval, constant term first, shape (4, n_rows, n - 1),
     in the unit of the rows."""
 
     @property
     def log_radius_end(self) -> float:
         """Return ln of the largest radius in metres; beyond it values stand still [-]."""
-        return self.log_radius_start + self.step * self.cells.shape[0]
+        return self.log_radius_start + self.step * self.cells.shape[-1]
 
 
 def curves(table: KernelTable, rows: np.ndarray) -> Curves:
@@ -223,13 +218,16 @@ def curves(table: KernelTable, rows: np.ndarray) -> Curves:
     rows = np.atleast_2d(rows)
     taps = np.sqrt(3.0) * _POLE ** np.abs(np.arange(-_TAPS, _TAPS + 1))
     padded = np.pad(rows, ((0, 0), (_TAPS + 1, _TAPS + 1)), mode="reflect", reflect_type="odd")
-    c = np.stack([np.convolve(row, taps, mode="valid") for row in padded], axis=1)
-    before, here, after, beyond = c[:-3], c[1:-2], c[2:-1], c[3:]
-    cells = np.empty((rows.shape[1] - 1, 4, rows.shape[0]))
-    cells[:, 0] = rows.T[:-1]
-    cells[:, 1] = (after - before) / 2
-    cells[:, 2] = (before - 2 * here + after) / 2
-    cells[:, 3] = (beyond - before + 3 * (here - after)) / 6
+    c = np.stack([np.convolve(row, taps, mode="valid") for row in padded])
+    before, here, after, beyond = c[:, :-3], c[:, 1:-2], c[:, 2:-1], c[:, 3:]
+    cells = np.stack(
+        [
+            rows[:, :-1],
+            (after - before) / 2,
+            (before - 2 * here + after) / 2,
+            (beyond - before + 3 * (here - after)) / 6,
+        ]
+    )
     return Curves(table.log_radius_start, table.step, cells)
 
 
@@ -260,20 +258,36 @@ def interpolate(curves: Curves, log_radius: np.ndarray) -> tuple[np.ndarray, np.
     (array([[2.5]]), array([[10.]]))
     """
     position = (log_radius - curves.log_radius_start) / curves.step
-    last = curves.cells.shape[0]
-    inside = np.clip(position, 0.0, last)
-    cell = np.minimum(inside.astype(np.intp), last - 1)
-    t = (inside - cell)[:, None]
-    p0, p1, p2, p3 = np.moveaxis(curves.cells[cell], 1, 0)
-    values = ((p3 * t + p2) * t + p1) * t + p0
-    slopes = ((3 * t * p3 + 2 * p2) * t + p1) / curves.step
-    values, slopes = values.T, slopes.T
+    last = curves.cells.shape[-1]
+    t = np.clip(position, 0.0, last)
+    cell = np.minimum(t.astype(np.intp), last - 1)
+    t -= cell
+    constant, linear, square, cube = curves.cells.take(cell, axis=-1)
+    values = cube * t
+    slopes = 2 * values
+    values += square
+    slopes += values
+    slopes += square
+    values *= t
+    values += linear
+    values *= t
+    values += constant
+    slopes *= t
+    slopes += linear
+    slopes /= curves.step
+    _beyond_the_ends(position, last, curves.step, values, slopes)
+    return values, slopes
+
+
+def _beyond_the_ends(position, last, step, values, slopes):
+    """Correct values and slopes in place where radii lie outside the table."""
     below = position < 0
     if below.any():
-        values[:, below] *= np.exp(_RAYLEIGH_POWER * curves.step * position[below])
+        values[:, below] *= np.exp(_RAYLEIGH_POWER * step * position[below])
         slopes[:, below] = _RAYLEIGH_POWER * values[:, below]
-    slopes[:, position > last] = 0.0
-    return values, slopes
+    above = position > last
+    if above.any():
+        slopes[:, above] = 0.0
 
 
 def widen(rows: np.ndarray, step: float, present: float, wanted: float) -> np.ndarray:
