@@ -1,15 +1,20 @@
 """What the bench implies, and how a trace was understood."""
 
+from scatterfit import matter
 from scatterfit.apparatus.check import apparatus_from_mapping, apply_overrides
 from scatterfit.apparatus.saturation import saturation_before
+from scatterfit.cloud_optics.build import build_kernel
+from scatterfit.constants import STANDARD_PRESSURE
 from scatterfit.droplet_growth.setup import growth_setup
 from scatterfit.files import load_pulse, parse_assignment, read_chamber_mapping
+from scatterfit.files_kernel import default_store
 from scatterfit.report.bench import (
     after_section,
     light_section,
     properties_section,
     start_section,
 )
+from scatterfit.report.lobes import SPREAD, lobes_section
 from scatterfit.report.recording import recording_section
 
 
@@ -44,6 +49,7 @@ def check_text(chamber, trace=None, settings=()):
                      f"scatterfit check {chamber} TRACE")
     else:
         parts.append(after_section(setup))
+    parts.append(lobes_section(bench, _kernel_table(bench, setup)))
     parts.append(properties_section(bench, _temperatures(bench, setup)))
     if record is not None:
         parts.append(recording_section(bench, record, used))
@@ -57,6 +63,22 @@ def _setup(bench, record):
     if record is None:
         return None
     return growth_setup(bench, record.time, record.columns[bench.pressure.column])
+
+
+def _kernel_table(bench, setup):
+    """Return the bench's cross sections at the state of growth, or before the expansion."""
+    temperature, pressure = bench.chamber.temperature, bench.chamber.pressure
+    if setup is not None:
+        temperature = setup.path.reference_temperature
+        pressure = setup.path.reference_pressure
+    wavelength = bench.beam.wavelength
+    gas = matter.carrier(bench.carrier)
+    gas_index = float(gas.refractive_index(wavelength, temperature, pressure or STANDARD_PRESSURE))
+    liquid = bench.vapour.refractive_index
+    if liquid is None:
+        liquid = matter.substance(bench.vapour.substance).refractive_index(wavelength, temperature)
+    relative = complex(liquid) / gas_index
+    return build_kernel(bench, gas_index, relative, default_store()).at(relative, spread=SPREAD)
 
 
 def _start(bench, setup):

@@ -134,6 +134,8 @@ pressure_kPa = 70.0
 hold_ms = 1.2
 temperature_K = 243.0
 pressure_kPa = 54.0
+[analysis]
+max_radius_um = 3.0
 """
 
 
@@ -170,7 +172,7 @@ def test_check_shows_states_properties_and_sources(capsys, bench):
     code, out, err = run(capsys, "check", bench)
     assert (code, err) == (0, "")
     for expected in ("635 nm", "unpolarized", "60 ± 1 degrees", "243 K", "1.2 ms", "268 K",
-                     "helium 0.5", "IAPWS", "Murphy and Koop", "Fuller"):
+                     "helium 0.5", "IAPWS", "Murphy and Koop", "Fuller", "maxima", "lobes of"):
         assert expected in out
     lines = [line for line in out.splitlines() if str(bench) not in line]
     assert max(map(len, lines)) <= 80
