@@ -21,7 +21,7 @@ class Births:
     """When the birth rate is highest [s]."""
 
 
-def births_from_rate(time, log_rate, classes=4):
+def births_from_rate(time, log_rate, classes=8):
     """Return the classes that stand for births along a nucleation rate.
 
     The classes are the nodes and weights of the Gauss rule whose weight function is the rate,

@@ -19,6 +19,9 @@ from scatterfit.droplet_growth.single_droplet import growth_rate
 _ROUNDS = 30
 _TOLERANCE = 2e-6
 _SMALLEST_FRACTION = 1e-9
+_MICROMETRE = 1e-6
+_BENT_FROM = 5e-8
+_LARGEST_EXPONENT = 40.0
 
 
 @dataclass(frozen=True)
@@ -37,6 +40,8 @@ class CloudParameters:
     """Mole fraction of vapour before condensation [-]."""
     temperature_factor: np.ndarray
     """Undisturbed temperature over that of the gas path [-]."""
+    growth_bend: np.ndarray | float = 0.0
+    """Exponent b of a further factor (r / 1 um)^b on dr/dt: error in the law's shape [-]."""
 
     def columns(self):
         """Return the fields as arrays of shape (v,)."""
@@ -44,6 +49,7 @@ class CloudParameters:
             *(np.atleast_1d(np.asarray(value, dtype=float)) for value in (
                 self.droplets_per_mole, self.growth_scale, self.mass_accommodation,
                 self.thermal_accommodation, self.vapour_fraction, self.temperature_factor,
+                self.growth_bend,
             ))
         )
 
@@ -114,7 +120,7 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
     cloud : CloudGrowth
         The solution for all variants.
     """
-    number, scale, mass, thermal, fraction, factor = parameters.columns()
+    number, scale, mass, thermal, fraction, factor, bend = parameters.columns()
     times, weights = births
     times = np.broadcast_to(times, (number.size, weights.size))
     length = _typical_length(properties, path, mass)
@@ -140,6 +146,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
             steps=3 if turn == 0 else 1,
         )
         rate *= (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
+        if bend.any():
+            rate *= np.exp(bend[:, None, None] * np.log(np.maximum(radius, _BENT_FROM) / _MICROMETRE))
         grown = np.maximum(_since_birth(rate, step, place), 0.0)
         new_square = floor + grown
         new_radius = np.sqrt(new_square) - length[:, None, None]
@@ -252,8 +260,13 @@ def _coupled(error, gain, response, step):
     drive = response * error
     inner = np.zeros_like(error)
     half = 0.5 * step
-    if np.max(np.abs(error)) == 0.0:
-        return inner
+    faded = np.zeros_like(error)
+    np.cumsum(half * (damping[:, 1:] + damping[:, :-1]), axis=1, out=faded[:, 1:])
+    if faded.min() > -_LARGEST_EXPONENT:
+        scaled = drive * np.exp(-faded)
+        np.cumsum(half * (scaled[:, 1:] + scaled[:, :-1]), axis=1, out=inner[:, 1:])
+        return inner * np.exp(faded)
+    # Clouds that relax many times over would overflow that way: node by node instead.
     for j in range(step.size):
         top = inner[:, j] * (1.0 + half[j] * np.maximum(damping[:, j], -1.0 / half[j]))
         top = top + half[j] * (drive[:, j] + drive[:, j + 1])

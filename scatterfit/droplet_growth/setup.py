@@ -10,6 +10,7 @@ from scatterfit.constants import GAS_CONSTANT, STANDARD_PRESSURE
 from scatterfit.droplet_growth.births import Births, births_at_once, births_from_rate
 from scatterfit.droplet_growth.classical_rate import classical_log_rate
 from scatterfit.droplet_growth.gas_path import GasPath, adiabatic_temperature, choose_nodes
+from scatterfit.droplet_growth.hold import settle_hold
 from scatterfit.droplet_growth.pressure import smooth, undo_lag
 from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
 
@@ -54,6 +55,8 @@ class GrowthSetup:
     """Over the liquid, undisturbed, at the reference pressure of growth [-]."""
     start_radius: float
     """Of droplets at birth [m]."""
+    droplet_temperature: float
+    """What a droplet has in the growth stage, by the linear law [K]."""
     clock_known: bool
     """Whether births are timed by a pressure trace."""
     threshold: float | None = None
@@ -92,7 +95,7 @@ def vapour_mole_fraction(apparatus, substance, pressure):
     return float(substance.saturation_pressure(vapour.dew_point)) / pressure
 
 
-def growth_setup(apparatus, time=None, pressure=None, duration=0.1, classes=4):
+def growth_setup(apparatus, time=None, pressure=None, duration=0.1, classes=8):
     """Return what growth needs, from the pressure trace or from the stated states.
 
     Parameters
@@ -125,8 +128,9 @@ def _measured(apparatus, substance, gas, record, classes):
     """Return the setup of a pulse with a pressure trace."""
     time, recorded = record
     gauge = apparatus.pressure
+    recorded = np.asarray(recorded, dtype=float) + gauge.offset
     smoothed, noise = smooth(recorded)
-    smoothed = undo_lag(time, smoothed + gauge.offset, gauge.time_constant)
+    smoothed = undo_lag(time, smoothed, gauge.time_constant)
     plateau = _plateau(smoothed, noise)
     start = apparatus.chamber.pressure or plateau
     warnings = _pressure_warnings(apparatus, start, plateau, noise)
@@ -137,14 +141,18 @@ def _measured(apparatus, substance, gas, record, classes):
     reference, heat_capacity = _expanded(
         gas, substance, fraction, apparatus.chamber.temperature, (start, settled)
     )
-    temperature = adiabatic_temperature(
-        smoothed, apparatus.chamber.temperature, start, heat_capacity
-    )
-    saturation = fraction * smoothed / substance.saturation_pressure(temperature)
-    liquid_at = _liquid(substance)
-    log_rate = classical_log_rate(
-        temperature, fraction * smoothed, saturation, liquid_at(temperature)
-    )
+    def gas_at(values):
+        warmth = adiabatic_temperature(
+            values, apparatus.chamber.temperature, start, heat_capacity
+        )
+        ratio = fraction * values / substance.saturation_pressure(warmth)
+        rate = classical_log_rate(warmth, fraction * values, ratio, _liquid(substance)(warmth))
+        return warmth, ratio, rate
+
+    temperature, saturation, log_rate = gas_at(smoothed)
+    if apparatus.seed is None and not gauge.time_constant and np.isfinite(log_rate).any():
+        smoothed = settle_hold(time, recorded, smoothed, log_rate, noise)
+        temperature, saturation, log_rate = gas_at(smoothed)
     threshold, ramp = None, None
     if apparatus.seed is not None:
         threshold = _threshold(apparatus, substance, reference)
@@ -233,7 +241,7 @@ def _finish(bench, path, births, hold, fraction, start, low, **more):
         ),)
     return GrowthSetup(
         apparatus, substance, gas, properties, path, births, hold, fraction, start,
-        growth_ratio, radius, warnings=warnings, **more,
+        growth_ratio, radius, droplet, warnings=warnings, **more,
     )
 
 

@@ -13,7 +13,7 @@ from scatterfit.forward.low_pass import low_pass
 # Steps of the numerical derivatives of growth; growth is smooth to far below them.
 STEPS = {
     "number": 0.02, "scale": 0.01, "accommodation": 0.05, "temperature": 3e-4,
-    "vapour": 2e-3, "threshold": 2e-3,
+    "vapour": 2e-3, "threshold": 2e-3, "bend": 5e-3,
 }
 
 
@@ -56,6 +56,10 @@ class Cloud:
     """ln of the vapour fraction over the chamber file's."""
     threshold: float = 0.0
     """ln of the seeds' threshold over the setup's."""
+    bend: float = 0.0
+    """Exponent of a further factor (r / 1 um)^bend on the growth rate [-]."""
+    depletion: float = 0.0
+    """ln of the droplets that share the vapour over those that shine: error in the depletion."""
     angles: tuple[float, ...] = ()
     """Shift of each detector's angle [rad]."""
 
@@ -110,7 +114,7 @@ def _parameters(setup, cloud, names):
     vapour = setup.apparatus.vapour
     values = {
         "number": cloud.number, "scale": cloud.scale, "accommodation": cloud.accommodation,
-        "temperature": cloud.temperature, "vapour": cloud.vapour,
+        "temperature": cloud.temperature, "vapour": cloud.vapour, "bend": cloud.bend,
     }
     rows = {key: np.full(len(names) + 1, value) for key, value in values.items()}
     for i, name in enumerate(names):
@@ -118,12 +122,13 @@ def _parameters(setup, cloud, names):
             rows[name][i + 1] += STEPS[name]
     mass = np.minimum(vapour.mass_accommodation * np.exp(rows["accommodation"]), 5.0)
     return CloudParameters(
-        droplets_per_mole=per_mole(setup, rows["number"]),
+        droplets_per_mole=per_mole(setup, rows["number"] + cloud.depletion),
         growth_scale=np.exp(rows["scale"]),
         mass_accommodation=mass,
         thermal_accommodation=np.full(mass.size, vapour.thermal_accommodation),
         vapour_fraction=setup.vapour_fraction * np.exp(rows["vapour"]),
         temperature_factor=np.exp(rows["temperature"]),
+        growth_bend=rows["bend"],
     )
 
 
@@ -201,7 +206,7 @@ def cloud_state(model, cloud, time, names=()):
         other = np.sqrt(square[i + 1]) - growth.length[i + 1]
         other = np.where(born, np.maximum(other, growth.start_radius), growth.start_radius)
         log_radius_by[name] = (np.log(other) - log_radius) / STEPS[name]
-    density = growth.number_density
+    density = growth.number_density * np.exp(-cloud.depletion)
     at = density[:, index] + t * (density[:, index + 1] - density[:, index])
     log_density_by = {
         name: np.log(at[i + 1] / at[0]) / STEPS[name] for i, name in enumerate(moving)
@@ -329,6 +334,7 @@ def _one_channel(model, position, channel, state, mean, mean_by, time, names):
     by = dict(zip(order, filtered[1:], strict=True))
     if "number" in names:
         by["number"] = by["number_depletion"] + by["number_gain"] + by["number_extinction"]
+        by["depletion"] = by["number_depletion"]
     return ChannelSignal(filtered[0], by)
 
 

@@ -158,6 +158,8 @@ def bin_channels(time, channels, edges):
     """
     total = np.add.reduceat(np.ones(time.size), edges)
     middle = np.add.reduceat(time, edges) / total
+    # A last bin without weight asks the model for the cloud at the very last sample.
+    closing = 1 if middle[-1] < time[-1] else 0
     values, weights, counts = [], [], []
     for data in channels:
         inverse = np.where(data.used, data.sigma**-2.0, 0.0)
@@ -174,4 +176,8 @@ def bin_channels(time, channels, edges):
         values.append(mean + shifted)
         weights.append(np.sqrt(strength))
         counts.append(full)
-    return Bins(middle, np.array(values), np.array(weights), np.array(counts))
+    end = ((0, 0), (0, closing))
+    return Bins(
+        np.append(middle, time[-1:]) if closing else middle,
+        np.pad(values, end, mode="edge"), np.pad(weights, end), np.pad(counts, end),
+    )

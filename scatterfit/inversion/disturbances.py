@@ -3,7 +3,8 @@
 import numpy as np
 
 MAINS = (50.0, 60.0)
-_WORTH = 30.0
+_HARMONICS = (1, 2, 3)
+_WORTH = 40.0
 _GLITCH = 6.0
 
 
@@ -21,61 +22,86 @@ def candidate_columns(time):
         Name to columns, each shape (k, m) [-].
     """
     place = 2.0 * (time - time[0]) / (time[-1] - time[0]) - 1.0
-    groups = {"drift": place[None, :]}
+    groups = {"drift": place[None, :], "curved drift": place[None, :] ** 2}
     for mains in MAINS:
-        for harmonic in (1, 2, 3):
+        for harmonic in _HARMONICS:
             phase = 2.0 * np.pi * mains * harmonic * time
             groups[f"hum {mains * harmonic:g} Hz"] = np.stack([np.sin(phase), np.cos(phase)])
     return groups
 
 
-def find_disturbances(time, residual, weight, columns, allowed=None):
-    """Return the names of disturbances that a channel's residuals show.
+def find_disturbances(problem, evaluation, known=None):
+    """Return the disturbances that the residuals show beyond what droplets could explain.
 
-    Each group of columns is tried on what the others leave; the best is taken while it lowers
-    chi-square by more than chance and model error would.
+    Each group of columns is judged by how much it would lower chi-square if the cloud were
+    fitted anew with it (the score test): what the fit can already do is projected out of it.
+    The best group is taken as long as it is worth more than chance and model error.
 
     Parameters
     ----------
-    time : ndarray, shape (m,)
-        Times [s].
-    residual : ndarray, shape (m,)
-        Unweighted residuals of the channel [V].
-    weight : ndarray, shape (m,)
-        One over the standard deviations [1/V].
-    columns : ndarray, shape (k, m)
-        What is fitted already and may be traded [any].
-    allowed : sequence of str, optional
-        Groups to try; all by default.
+    problem : Problem
+        What was fitted, with the disturbances known so far.
+    evaluation : Evaluation
+        At the best cloud, with its Jacobian.
+    known : sequence of sequence of str, optional
+        Names already in the problem, by channel.
 
     Returns
     -------
-    names : list of str
-        Groups worth adding.
+    names : tuple of tuple of str
+        By channel: the known ones and those found.
     """
-    groups = candidate_columns(time)
-    if allowed is not None:
-        groups = {name: groups[name] for name in allowed}
-    target = residual * weight
-    base = np.linalg.qr((columns * weight).T)[0]
-    scale = max(float(target @ target) / max(target.size, 1), 1.0)
-    chosen = []
-    while groups:
-        left = target - base @ (base.T @ target)
+    chosen = [list(names) for names in known] if known else [[] for _ in problem.model.channels]
+    rows = evaluation.residual.size
+    base = np.linalg.qr(evaluation.jacobian)[0]
+    left = evaluation.residual - base @ (base.T @ evaluation.residual)
+    scale = max(float(left @ left) / rows, 1.0)
+    while groups := _stacked_groups(problem, evaluation, chosen):
         gains = {}
-        for name, group in groups.items():
-            own = (group * weight).T
-            own = own - base @ (base.T @ own)
+        for key, columns in groups.items():
+            own = columns - base @ (base.T @ columns)
+            size = np.sqrt(np.sum(own**2, axis=0))
+            if np.any(size < 1e-3 * np.sqrt(np.sum(columns**2, axis=0))):
+                continue
             shape = np.linalg.qr(own)[0]
-            gains[name] = float(np.sum((shape.T @ left) ** 2)), shape
-        name = max(gains, key=lambda key: gains[key][0])
-        gain, shape = gains[name]
+            gains[key] = float(np.sum((shape.T @ left) ** 2)), shape
+        if not gains:
+            break
+        key = max(gains, key=lambda k: gains[k][0])
+        gain, shape = gains[key]
         if gain < _WORTH * scale:
             break
-        chosen.append(name)
+        chosen[key[0]].append(key[1])
         base = np.hstack([base, shape])
-        del groups[name]
-    return chosen
+        left = left - shape @ (shape.T @ left)
+    return tuple(tuple(names) for names in chosen)
+
+
+def _stacked_groups(problem, evaluation, chosen):
+    """Return every group not chosen yet as weighted columns over all channels' residuals."""
+    time = problem.bins.time
+    groups, start = {}, 0
+    for i, channel in enumerate(problem.model.channels):
+        weight, basis = problem.bins.weights[i], evaluation.bases[i]
+        full = evaluation.fits[i] if channel.kind == "transmission" else np.ones_like(weight)
+        for name, group in candidate_columns(time).items():
+            if name in chosen[i] or _needs_fundamental(name, chosen[i]):
+                continue
+            own = (group * full * weight).T
+            columns = np.zeros((evaluation.residual.size, own.shape[1]))
+            columns[start:start + weight.size] = own - basis @ (basis.T @ own)
+            groups[i, name] = columns
+        start += weight.size
+    return groups
+
+
+def _needs_fundamental(name, chosen):
+    """Return whether a group is a harmonic of a hum that has not been found."""
+    if not name.startswith("hum"):
+        return False
+    frequency = float(name.split()[1])
+    mains = next(m for m in MAINS if frequency / m in _HARMONICS)
+    return frequency != mains and f"hum {mains:g} Hz" not in chosen
 
 
 def stack_columns(time, names):

@@ -4,12 +4,12 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.forward.model import Cloud, PulseModel, channel_signals
+from scatterfit.forward.model import channel_signals
 from scatterfit.inversion.data import ChannelData, bin_channels, bin_edges, without
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
-from scatterfit.inversion.problem import Evaluation, Problem, evaluate, linear_columns
-from scatterfit.inversion.search import renamed, search
-from scatterfit.inversion.solve import Solution, covariance, descend, polish
+from scatterfit.inversion.problem import Evaluation, Problem, linear_columns
+from scatterfit.inversion.search import search
+from scatterfit.inversion.solve import Solution, descend, polish
 
 _COARSE = 260
 _FINE = 1400
@@ -23,8 +23,6 @@ class Fit:
 
     problem: Problem
     best: Evaluation
-    covariance: np.ndarray
-    """Of ``problem.names``, from the noise and the priors, shape (p, p)."""
     channels: tuple[ChannelData, ...]
     """With glitches left out."""
     model: np.ndarray
@@ -74,11 +72,11 @@ def fit_pulse(model, time, channels, options):
         key=lambda s: s.best.chi2,
     )
     found = _distinct(found)
-    disturbances = _disturbances(problem, found[0].best)
+    disturbances = find_disturbances(problem, found[0].best)
     fine = bin_channels(time, channels, bin_edges(time, start, _FINE))
     problem = _with(problem, fine, disturbances)
     best = descend(problem, found[0].best.cloud, iterations=10, tolerance=0.05)
-    again = _disturbances(problem, best.best, disturbances)
+    again = find_disturbances(problem, best.best, disturbances)
     if again != disturbances:
         disturbances = again
         problem = _with(problem, fine, disturbances)
@@ -96,12 +94,44 @@ def fit_pulse(model, time, channels, options):
         rivals = sorted([best, *rivals], key=lambda s: s.best.chi2)
         best, rivals = rivals[0], rivals[1:]
     best = polish(problem, best)
+    return _finished(problem, best, time, (channels, rivals, disturbances, count))
+
+
+def _finished(problem, best, time, more):
+    """Return the fit with its residuals at every sample."""
+    channels, rivals, disturbances, count = more
     whole, residual = full_residual(problem, best.best, time, channels)
-    chi2, lag1 = whiteness(residual, channels, len(options.names))
+    chi2, lag1 = whiteness(residual, channels, len(problem.names))
     return Fit(
-        problem, best.best, covariance(problem, best.best), channels, whole, residual, chi2, lag1,
+        problem, best.best, channels, whole, residual, chi2, lag1,
         null_chi2(problem), tuple(r.best for r in rivals), disturbances, count, best.converged,
     )
+
+
+def refine(fit, model, time, priors):
+    """Return a fit continued with another model of the same pulse, from where it ended.
+
+    Parameters
+    ----------
+    fit : Fit
+        To start from.
+    model : PulseModel
+        With tables at other angles; the cloud's angle shifts start again at zero.
+    time : ndarray, shape (n,)
+        Samples [s].
+    priors : dict
+        For the new model.
+
+    Returns
+    -------
+    fit : Fit
+        The continued fit; rivals are carried over.
+    """
+    problem = replace(fit.problem, model=model, priors=priors)
+    start = replace(fit.best.cloud, angles=(0.0,) * len(fit.best.cloud.angles))
+    best = polish(problem, descend(problem, start, iterations=6, tolerance=0.02))
+    rivals = [Solution(rival, 0, True) for rival in fit.rivals]
+    return _finished(problem, best, time, (fit.channels, rivals, fit.disturbances, fit.glitches))
 
 
 @dataclass(frozen=True)
@@ -122,24 +152,6 @@ def _with(problem, bins, disturbances):
     """Return the problem with other bins and disturbances."""
     extras = tuple(stack_columns(bins.time, names) for names in disturbances)
     return replace(problem, bins=bins, extras=extras)
-
-
-def _disturbances(problem, evaluation, known=None):
-    """Return the names of disturbances in each channel."""
-    signals, _ = channel_signals(problem.model, evaluation.cloud, problem.bins.time)
-    names = []
-    for i, (channel, signal) in enumerate(zip(problem.model.channels, signals, strict=True)):
-        extra = np.empty((0, problem.bins.time.size))
-        columns, _ = linear_columns(channel, signal.shape, extra)
-        already = known[i] if known else ()
-        residual = problem.bins.values[i] - evaluation.fits[i]
-        # What is fitted already is put back, so that each group stands on its own feet.
-        if already:
-            full, _ = linear_columns(channel, signal.shape, problem.extras[i])
-            residual = residual + evaluation.coefficients[i][columns.shape[0]:] @ full[columns.shape[0]:]
-        names.append(tuple(sorted(find_disturbances(
-            problem.bins.time, residual, problem.bins.weights[i], columns))))
-    return tuple(names)
 
 
 def _distinct(solutions, apart=2e-3):
@@ -255,4 +267,3 @@ def null_chi2(problem):
     return total
 
 
-__all__ = ["Cloud", "Fit", "FitOptions", "PulseModel", "Solution", "evaluate", "fit_pulse", "renamed"]

@@ -8,9 +8,10 @@ from scatterfit import matter
 _TEMPERATURE = 0.3
 _FRACTION = 0.01
 _SATURATION = 0.005
+_CLOSURE = 0.015
 
 
-def growth_scale_sigma(setup):
+def growth_scale_sigma(setup, free=()):
     """Return the relative standard uncertainty of the computed growth rate.
 
     From the uncertainties of the start temperature, the vapour, the diffusivity, the conductivity
@@ -22,6 +23,8 @@ def growth_scale_sigma(setup):
     ----------
     setup : GrowthSetup
         Of the pulse.
+    free : sequence of str
+        ``"temperature"`` and ``"vapour"`` where the fit varies them itself: not counted here.
 
     Returns
     -------
@@ -35,11 +38,11 @@ def growth_scale_sigma(setup):
     floor = 0.05 * abs(base) + 1e-12
     stated = [sigmas[key] for key in ("chamber.temperature_K", "growth.temperature_K")
               if key in sigmas]
-    warm = stated[0] if stated else _TEMPERATURE
+    warm = 0.0 if "temperature" in free else stated[0] if stated else _TEMPERATURE
     parts = [
         _rate(setup, radius, path.reference_temperature + warm, setup.vapour_fraction) - base,
     ]
-    wet = _vapour_sigma(sigmas, vapour)
+    wet = 0.0 if "vapour" in free else _vapour_sigma(sigmas, vapour)
     parts.append(_rate(setup, radius, path.reference_temperature,
                        setup.vapour_fraction * (1.0 + wet)) - base)
     diffusion = matter.diffusivity(setup.substance, setup.gas).relative_uncertainty
@@ -73,3 +76,29 @@ def _rate(setup, radius, temperature, fraction):
         np.array([temperature + 2.0]), steps=6,
     )
     return float(rate[0])
+
+
+def depletion_sigma(setup):
+    """Return the relative standard uncertainty of how strongly droplets deplete the vapour.
+
+    What a droplet takes is known by the density of the liquid; what is left to take, the vapour
+    beyond saturation, carries the uncertainty of the vapour pressure. One and a half percent stands for the
+    closures: constant heat capacity, one molar volume (common practice, no source).
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+
+    Returns
+    -------
+    sigma : float
+        Relative standard uncertainty [-].
+    """
+    substance = setup.substance
+    excess = max(setup.growth_saturation_ratio - 1.0, 0.05)
+    pressure = substance.saturation_pressure.relative_uncertainty / excess
+    return float(np.clip(np.sqrt(
+        _CLOSURE**2 + pressure**2 + substance.density.relative_uncertainty**2
+        + substance.latent_heat.relative_uncertainty**2
+    ), 0.01, 0.3))

@@ -11,11 +11,13 @@ from scatterfit.inversion.data import Bins
 SCALES = {
     "number": 0.05, "scale": 0.01, "delay": 2e-5, "variance": 1e-5, "accommodation": 0.1,
     "temperature": 3e-4, "vapour": 3e-3, "threshold": 3e-3, "angle": 1e-3,
+    "bend": 5e-3, "depletion": 1e-2,
 }
 LIMITS = {
     "number": (np.log(1e2), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
     "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
     "threshold": (-0.25, 0.25), "delay": (-np.inf, np.inf), "angle": (-0.1, 0.1),
+    "bend": (-0.3, 0.3), "depletion": (-0.5, 0.5),
 }
 
 
@@ -50,6 +52,8 @@ class Evaluation:
     """Model values in the bins, shape (channels, m) [V]."""
     state: object = None
     """The cloud at the samples (CloudState)."""
+    bases: tuple[np.ndarray, ...] = ()
+    """Per channel: orthonormal weighted linear columns, shape (m, q)."""
     splits: dict = field(default_factory=dict)
     """Projected derivatives by the number as each handle sees it, each of shape (n,)."""
 
@@ -150,7 +154,7 @@ def linear_columns(channel, signal, extra):
     return np.vstack([ones, extra]), signal
 
 
-def evaluate(problem, cloud, derivatives=True):
+def evaluate(problem, cloud, derivatives=True, more=()):
     """Return the misfit of a cloud.
 
     Parameters
@@ -161,6 +165,8 @@ def evaluate(problem, cloud, derivatives=True):
         Where to evaluate.
     derivatives : bool
         Whether the Jacobian is wanted.
+    more : sequence of (str, sequence of ndarray)
+        Further columns of the Jacobian: a name, and per channel the derivative of its shape.
 
     Returns
     -------
@@ -169,7 +175,7 @@ def evaluate(problem, cloud, derivatives=True):
     """
     names = problem.names if derivatives else ()
     signals, state = channel_signals(problem.model, cloud, problem.bins.time, names)
-    residuals, jacobians, coefficients, fits = [], [], [], []
+    residuals, jacobians, coefficients, fits, bases = [], [], [], [], []
     splits = {key: [] for key in ("number_gain", "number_extinction", "number_depletion")}
     for i, (channel, signal) in enumerate(zip(problem.model.channels, signals, strict=True)):
         weight = problem.bins.weights[i]
@@ -183,24 +189,24 @@ def evaluate(problem, cloud, derivatives=True):
         coefficients.append(factors)
         fits.append(fixed + factors @ columns)
         residuals.append(target - basis @ shadow)
+        bases.append(basis)
         if not derivatives:
             continue
         amplitude = _amplitude(channel, factors, extra)
-        by = np.array([signal.by.get(name, np.zeros_like(weight)) for name in names])
-        parts = np.array([
-            signal.by.get(name, np.zeros_like(weight)) for name in splits
-        ])
-        both = -(np.vstack([by, parts]) * (amplitude * weight)).T
+        none = np.zeros_like(weight)
+        by = [signal.by.get(name, none) for name in names] + [parts[i] for _, parts in more]
+        by += [signal.by.get(name, none) for name in splits]
+        both = -(np.array(by) * (amplitude * weight)).T
         both = both - basis @ (basis.T @ both)
-        jacobians.append(both[:, : len(names)])
+        jacobians.append(both[:, : len(names) + len(more)])
         for k, key in enumerate(splits):
-            splits[key].append(both[:, len(names) + k])
-    rows, own = _prior_rows(problem, cloud)
+            splits[key].append(both[:, len(names) + len(more) + k])
+    rows, own = _prior_rows(problem, cloud, tuple(name for name, _ in more))
     residual = np.concatenate([*residuals, own])
     jacobian = np.concatenate([*jacobians, rows]) if derivatives else None
     return Evaluation(
         cloud, residual, float(residual @ residual), jacobian, tuple(coefficients),
-        np.array(fits), state,
+        np.array(fits), state, tuple(bases),
         {key: np.concatenate(parts) for key, parts in splits.items()} if derivatives else {},
     )
 
@@ -220,12 +226,13 @@ def _amplitude(channel, factors, extra):
     return factors[0] if channel.gain is None else 1.0
 
 
-def _prior_rows(problem, cloud):
+def _prior_rows(problem, cloud, more):
     """Return Jacobian rows, shape (q, p), and residuals, shape (q,), of the priors."""
-    rows = np.zeros((len(problem.priors), len(problem.names)))
+    names = (*problem.names, *more)
+    rows = np.zeros((len(problem.priors), len(names)))
     own = np.zeros(len(problem.priors))
     for k, (name, (mean, sigma)) in enumerate(problem.priors.items()):
-        own[k] = (value_of(cloud, name) - mean) / sigma
-        if name in problem.names:
-            rows[k, problem.names.index(name)] = 1.0 / sigma
+        own[k] = 0.0 if name in more else (value_of(cloud, name) - mean) / sigma
+        if name in names:
+            rows[k, names.index(name)] = 1.0 / sigma
     return rows, own

@@ -1,0 +1,119 @@
+"""What the bench's stated uncertainties do to the trace, as further columns of the fit."""
+
+import numpy as np
+
+from scatterfit.forward.model import channel_signals
+
+
+
+def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
+    """Return what is let loose, within its sigma, when the fit's uncertainty is worked out.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The pulse.
+    problem : Problem
+        What was fitted.
+    cloud : Cloud
+        The solution.
+    index_shift : float
+        By how much the index model is off [-].
+
+    Returns
+    -------
+    inputs : dict
+        ``"names"``, ``"more"`` and ``"priors"`` for :func:`posterior`.
+    """
+    priors, columns = {}, []
+    for name, sigma, parts in _signal_inputs(prepared, problem, cloud, index_shift):
+        priors[name] = (0.0, sigma)
+        columns.append((name, parts))
+    return {"names": (), "more": columns, "priors": priors}
+
+
+def vapour_relative_sigma(apparatus):
+    """Return the stated relative uncertainty of the vapour fraction, zero if none is [-].
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+
+    Returns
+    -------
+    sigma : float
+        Relative standard uncertainty [-].
+    """
+    vapour, sigmas = apparatus.vapour, apparatus.sigmas
+    for key, field in (("mole_fraction", vapour.mole_fraction),
+                       ("partial_pressure_kPa", vapour.partial_pressure),
+                       ("saturation_ratio", vapour.saturation_ratio)):
+        if field:
+            return sigmas.get(f"vapour.{key}", 0.0) / field
+    # A dew point: 7 percent of vapour pressure a kelvin for water near room temperature.
+    return 0.07 * sigmas.get("vapour.dew_point_K", 0.0)
+
+
+def temperature_relative_sigma(apparatus):
+    """Return the stated relative uncertainty of the undisturbed temperature, zero if none is [-].
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+
+    Returns
+    -------
+    sigma : float
+        Relative standard uncertainty [-].
+    """
+    sigmas = apparatus.sigmas
+    if apparatus.growth is not None:
+        return sigmas.get("growth.temperature_K", 0.0) / apparatus.growth.temperature
+    return sigmas.get("chamber.temperature_K", 0.0) / apparatus.chamber.temperature
+
+
+def _signal_inputs(prepared, problem, cloud, index_shift):
+    """Return (name, sigma, derivative of each channel's shape) of inputs that act on the light."""
+    time = problem.bins.time
+    apparatus, model = prepared.setup.apparatus, problem.model
+    signals, _ = channel_signals(model, cloud, time, ("number",))
+    none = np.zeros_like(time)
+    found = []
+    for i, channel in enumerate(model.channels):
+        parts = [none] * len(model.channels)
+        if channel.kind == "scatter" and channel.gain is not None:
+            sigma = apparatus.sigmas.get(f"detector.{channel.column}.gain_V_m", 0.0)
+            if sigma:
+                parts[i] = signals[i].shape
+                found.append((f"detector.{channel.column}.gain_V_m", sigma / channel.gain, parts))
+        if channel.kind == "transmission":
+            sigma = apparatus.sigmas.get("transmission.path_mm", 0.0)
+            if sigma and channel.path:
+                parts[i] = signals[i].by["number_extinction"]
+                found.append(("transmission.path_mm", sigma / channel.path, parts))
+    sigma = apparatus.sigmas.get("chamber.path_mm", 0.0)
+    if sigma and apparatus.chamber.path:
+        parts = [s.by["number_extinction"] if c.kind == "scatter" else none
+                 for s, c in zip(signals, model.channels, strict=True)]
+        found.append(("chamber.path_mm", sigma / apparatus.chamber.path, parts))
+    sigma = _index_sigma(prepared)
+    if sigma:
+        # The two index models share their angles' base; the difference is the index alone.
+        plain, _ = channel_signals(prepared.model, cloud, time)
+        shifted, _ = channel_signals(prepared.index_model, cloud, time)
+        parts = [(b.shape - a.shape) / index_shift for a, b in zip(plain, shifted, strict=True)]
+        found.append(("vapour.refractive_index", sigma, parts))
+    return found
+
+
+def _index_sigma(prepared):
+    """Return the standard uncertainty of the liquid's index [-]."""
+    apparatus = prepared.setup.apparatus
+    stated = apparatus.sigmas.get("vapour.refractive_index")
+    if stated is not None:
+        return float(stated)
+    if apparatus.vapour.refractive_index is not None:
+        return 0.0
+    return float(prepared.setup.substance.refractive_index.uncertainty)

@@ -1,0 +1,330 @@
+"""One pulse through all stages: prepare, fit, weigh, judge."""
+
+from dataclasses import replace
+
+import numpy as np
+
+from scatterfit.forward.light import spread_table
+from scatterfit.inversion.extrema import find_turns, match_turns
+from scatterfit.inversion.fit import fit_pulse, refine
+from scatterfit.inversion.uncertainty import posterior
+from scatterfit.inversion.verdict import (
+    Finding,
+    describes,
+    growth_findings,
+    residual_findings,
+    rivals_left,
+    sample_findings,
+    visible,
+)
+from scatterfit.measured_pulse import quantities as q
+from scatterfit.measured_pulse.bench_inputs import bench_inputs
+from scatterfit.measured_pulse.limit import upper_limit
+from scatterfit.measured_pulse.number import number_results
+from scatterfit.measured_pulse.prepare import optical_columns, prepare, reangled
+from scatterfit.measured_pulse.record import (
+    Alternative,
+    BudgetLine,
+    ChannelView,
+    Extremum,
+    MeasuredPulse,
+    Quantity,
+    Reason,
+)
+from scatterfit.measured_pulse.settings import fit_options
+
+_RADIUS_FLOOR = 2e-4
+_RATE_FLOOR = 2e-3
+_ANGLE_SETTLED = 2e-5
+_BASE_SPREAD = 0.003
+_LARGEST = 0.98
+_FEW = 3
+_DISAGREE = 0.015
+_INPUTS = {
+    "scale": "computed growth rate", "bend": "shape of the growth law",
+    "depletion": "computed depletion", "accommodation": "vapour.mass_accommodation",
+    "delay": "clock of the births", "temperature": "chamber.temperature_K",
+    "vapour": "vapour", "threshold": "threshold of the seeds",
+}
+
+
+def measure(apparatus, time, columns, *, trace="", store=None, exclude=(), provenance=None):
+    """Return what one pulse says.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,)
+        Samples [s].
+    columns : dict of str to ndarray
+        Trace columns, volts and pascal.
+    trace : str
+        Name of the trace.
+    store : object, optional
+        Where kernel tables are kept.
+    exclude : sequence of tuple of float
+        Ranges of time to leave out [s].
+    provenance : dict, optional
+        What is known about the files.
+
+    Returns
+    -------
+    pulse : MeasuredPulse
+        Result with verdict and reasons.
+
+    Raises
+    ------
+    TraceError
+        If too few samples can be used.
+    """
+    provenance = dict(provenance or {})
+    flat = _flat_columns(apparatus, columns)
+    if flat:
+        return MeasuredPulse(trace, "rejected", flat, provenance=provenance)
+    prepared = prepare(apparatus, time, columns, store, exclude)
+    given = apparatus.vapour.refractive_index is not None
+    provenance["properties"] = q.property_sources(prepared.setup, given)
+    provenance["refractive_index"] = prepared.index
+    temperature, saturation = q.gas_quantities(prepared.setup)
+    gas = {
+        "growth_temperature": temperature, "growth_saturation_ratio": saturation,
+        "nucleation": q.nucleation_conditions(prepared.setup, None),
+        "provenance": provenance, "trace": trace,
+    }
+    warnings = tuple(Reason(*w) for w in prepared.setup.warnings)
+    if _dry(prepared.setup):
+        reason = Reason("never-supersaturated", (
+            f"the vapour's saturation ratio stays below one (growth: {saturation.value:.3f}): no "
+            "droplet can grow; check [vapour], chamber.temperature_K and the pressure"
+        ))
+        return MeasuredPulse(verdict="rejected", reasons=(reason, *warnings), **gas)
+    base = (0.0,) * len(apparatus.detectors)
+    options = fit_options(prepared, base)
+    fit = fit_pulse(prepared.model, prepared.time, prepared.channels, options)
+    if not visible(fit):
+        return _nothing(prepared, fit, gas, warnings)
+    prepared, fit = _settle_angles(prepared, fit, base)
+    return _result(prepared, fit, gas, warnings)
+
+
+def _flat_columns(apparatus, columns):
+    """Return a reason for each optical column that never changes."""
+    found = []
+    for name, _, _ in optical_columns(apparatus):
+        values = np.asarray(columns[name], dtype=float)
+        values = values[np.isfinite(values)]
+        if values.size and np.ptp(values) == 0.0:
+            found.append(Reason("flat-channel", (
+                f"column {name} is {values[0]:g} V throughout: is the detector connected and the "
+                "range right?"
+            )))
+    return tuple(found)
+
+
+def _dry(setup):
+    """Return whether no droplet could grow at any time."""
+    held = setup.hold.saturation_ratio if setup.hold is not None else 0.0
+    return max(setup.growth_saturation_ratio, held) <= 1.0
+
+
+def _settle_angles(prepared, fit, base):
+    """Return the pulse and its fit with tables made at the angles that the fit found."""
+    for _ in range(3):
+        shifts = fit.best.cloud.angles
+        if not any(abs(shift) > _ANGLE_SETTLED for shift in shifts):
+            break
+        base = tuple(b + s for b, s in zip(base, shifts, strict=True))
+        prepared = reangled(prepared, base)
+        fit = refine(fit, prepared.model, prepared.time, fit_options(prepared, base).priors)
+    return prepared, fit
+
+
+def _views(prepared, fit):
+    """Return the channels for figures."""
+    labels = {"scatter": "scattered light", "transmission": "transmitted light"}
+    return tuple(
+        ChannelView(d.column, labels[d.kind], prepared.time, d.signal, fit.model[i],
+                    fit.residual[i], d.used)
+        for i, d in enumerate(fit.channels)
+    )
+
+
+def _nothing(prepared, fit, gas, warnings):
+    """Return the result of a pulse without a cloud."""
+    limit = upper_limit(prepared, fit.problem)
+    text = "no rise of the light that growing droplets would explain"
+    text += (f": fewer than {limit * 1e-6:.3g} per cm3 (95 percent)" if limit is not None
+             else "; without a gain or a transmission there is no limit on their number")
+    return MeasuredPulse(
+        verdict="rejected", reasons=(Reason("no-cloud", text), *warnings),
+        upper_limit=limit, channels=_views(prepared, fit), chi2_reduced=fit.chi2_reduced,
+        residual_lag1=fit.lag1, **gas,
+    )
+
+
+def _result(prepared, fit, gas, warnings):
+    """Return the result of a pulse with a cloud."""
+    setup, problem = prepared.setup, fit.problem
+    inputs = bench_inputs(prepared, problem, fit.best.cloud)
+    after = posterior(problem, fit.best, inputs)
+    curve, (final, noise, parts) = q.radius_curve(setup, problem, after.state, after)
+    floor = _RADIUS_FLOOR * final.value
+    final = Quantity(final.value, float(np.hypot(final.sigma, floor)))
+    curve = replace(curve, sigma=np.hypot(curve.sigma, _RADIUS_FLOOR * curve.radius))
+    budget = _budget("final_radius_um", 1e6, noise, parts, floor, fit)
+    number = number_results(prepared, fit, after)
+    budget += _budget("concentration_per_cm3", 1e-6, number.noise, number.parts, number.floor, fit)
+    reference = setup.apparatus.analysis.reference_radius
+    rates, more = _rates(setup, fit, after, reference)
+    budget += more
+    scale = q.quantity(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
+    turns = _matched(prepared, fit, curve)
+    left = rivals_left(fit, after.inflation, _final_radius)
+    findings = _findings(prepared, fit, scale, turns, left)
+    reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
+    verdict = ("rejected" if not describes(fit) else "ambiguous" if left else "accepted")
+    gas = {**gas, "nucleation": q.nucleation_conditions(setup, number.concentration)}
+    return MeasuredPulse(
+        verdict=verdict, reasons=(*reasons, *warnings), final_radius=final,
+        final_time=float(problem.bins.time[-1]), growth_scale=scale,
+        concentration=number.concentration, concentration_by=number.by_handle,
+        birth_time=q.birth_time(setup, fit.best.cloud, after), optical_depth=_depth(prepared, fit),
+        curve=curve, extrema=tuple(e for e in turns if e.radius > 0.0),
+        alternatives=_alternatives(fit, number), chi2_reduced=fit.chi2_reduced,
+        residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
+        **rates, **gas,
+    )
+
+
+def _final_radius(evaluation):
+    """Return the mean radius of the classes at the last sample [m]."""
+    return max(float(evaluation.state.radius[:, -1].mean()), 1e-9)
+
+
+def _rates(setup, fit, after, reference):
+    """Return what is quoted at the reference radius, and the budget of the growth rate."""
+    found = q.at_reference(setup, fit.best.cloud, after, reference)
+    intrinsic = _BASE_SPREAD**2 + fit.best.cloud.variance
+    shift, noise, parts = after.propagate({"variance": 1.0})
+    spread_sigma = np.sqrt(noise + sum(parts.values())) / (2.0 * np.sqrt(intrinsic))
+    births = found.get("spread", 0.0)
+    spread = float(np.sqrt(max(intrinsic + shift, 0.0) + births**2))
+    rates = {"radius_spread": Quantity(spread, float(min(spread_sigma, 1.0)))}
+    if not found:
+        return rates, []
+    rate, noise, parts = q.quantity(found["rate"], after)
+    floor = _RATE_FLOOR * rate.value
+    rate = Quantity(rate.value, float(np.hypot(rate.sigma, floor)))
+    warm = q.quantity(found["warmth"], after, floor=0.05)[0]
+    rates |= {
+        "growth_rate": rate, "droplet_temperature": warm,
+        "area_rate": Quantity(2.0 * reference * rate.value, 2.0 * reference * rate.sigma),
+    }
+    return rates, _budget("growth_rate_um_per_s", 1e6, noise, parts, floor, fit)
+
+
+def _budget(name, factor, noise, parts, floor, fit):
+    """Return the lines of one quantity's budget, largest first."""
+    columns = {f"angle:{i}": f"detector.{d.column}.angle_deg"
+               for i, d in enumerate(fit.problem.model.setup.apparatus.detectors)}
+    variances = {"noise": noise, "model": floor**2}
+    variances |= {columns.get(key, _INPUTS.get(key, key)): value for key, value in parts.items()}
+    total = sum(variances.values())
+    if not total > 0.0 or not np.isfinite(total):
+        return []
+    lines = [
+        BudgetLine(key, name, float(np.sqrt(value)) * factor, float(value / total))
+        for key, value in variances.items() if value > 1e-6 * total
+    ]
+    return sorted(lines, key=lambda line: -line.share)
+
+
+def _matched(prepared, fit, curve):
+    """Return the extrema of all channels and the kernel's that they match."""
+    table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
+    log_radius = table.start + table.step * np.arange(table.values.shape[1])
+    start = prepared.setup.births.median + fit.best.cloud.delay
+    found = []
+
+    def radius_at(time):
+        return float(np.interp(time, curve.time, curve.radius))
+
+    for i, channel in enumerate(fit.problem.model.channels):
+        if channel.kind != "scatter":
+            continue
+        bins = fit.problem.bins
+        turns = find_turns(bins.time, bins.values[i], bins.weights[i], start)
+        for turn, radius in match_turns(turns, radius_at, log_radius, table.values[channel.row]):
+            found.append(Extremum(turn.time, radius or 0.0, turn.kind, channel.column))
+    return found
+
+
+def _findings(prepared, fit, scale, turns, left):
+    """Return the reasons of a pulse with a cloud."""
+    setup = prepared.setup
+    prior = fit.problem.priors["scale"][1]
+    found = residual_findings(fit) + sample_findings(fit)
+    found += growth_findings(fit, (scale.value, prior), setup)
+    if left:
+        radii = ", ".join(f"{_final_radius(r) * 1e6:.3f}" for r in left)
+        found.append(Finding("ambiguous-lobe", (
+            f"a final radius of {radii} um cannot be excluded: a second detector at another "
+            "angle, a longer record, or a better known temperature would settle it"
+        )))
+    found += _extrema_findings(turns, fit)
+    table_end = np.exp(fit.problem.model.light.start) * np.exp(
+        fit.problem.model.light.step * (fit.problem.model.light.count - 1))
+    largest = min(setup.apparatus.analysis.max_radius, table_end)
+    if _final_radius(fit.best) > _LARGEST * largest:
+        found.append(Finding("largest-radius", (
+            f"droplets reach {largest * 1e6:.1f} um, the largest radius considered: raise "
+            "analysis.max_radius_um"
+        )))
+    return found
+
+
+def _extrema_findings(turns, fit):
+    """Return what the peaks and troughs say about the fit."""
+    if not any(c.kind == "scatter" for c in fit.problem.model.channels):
+        return []
+    matched = sum(1 for turn in turns if turn.radius > 0.0)
+    if len(turns) >= _FEW and matched < 0.6 * len(turns):
+        return [Finding("extrema-disagree", (
+            f"of {len(turns)} peaks and troughs found without the fit only {matched} lie where "
+            "the fitted radius puts them: look at the figure before using this radius"
+        ))]
+    if len(turns) < _FEW:
+        return [Finding("few-extrema", (
+            f"{len(turns)} peaks and troughs stand out: the radius rests on the computed growth "
+            "rate as much as on the light; a longer record or a larger angle would show more"
+        ))]
+    return []
+
+
+def _alternatives(fit, number):
+    """Return the rivals as numbers."""
+    return tuple(
+        Alternative(
+            _final_radius(rival),
+            float(np.exp(rival.cloud.number)) if number.concentration is not None else None,
+            float(rival.chi2 - fit.best.chi2),
+        )
+        for rival in fit.rivals
+    )
+
+
+def _depth(prepared, fit):
+    """Return the optical depth at the last sample, over the transmission's path or the chamber's."""
+    apparatus = prepared.setup.apparatus
+    path = apparatus.transmission.path if apparatus.transmission else apparatus.chamber.path
+    if not path:
+        return None
+    state = fit.best.state
+    table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
+    place = (np.log(np.maximum(state.radius[:, -1], 1e-9)) - table.start) / table.step
+    row = table.values[fit.problem.model.extinction_row]
+    mean = float(state.growth.weights @ np.interp(place, np.arange(row.size), row))
+    return float(state.number_density[-1] * mean * path)
+
+

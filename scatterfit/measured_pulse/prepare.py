@@ -1,0 +1,273 @@
+"""From a bench and a trace to a problem that can be fitted."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from scatterfit.cloud_optics.build import build_kernel
+from scatterfit.droplet_growth.setup import GrowthSetup, growth_setup
+from scatterfit.errors import TraceError
+from scatterfit.forward.light import cloud_light
+from scatterfit.forward.model import Channel, PulseModel
+from scatterfit.inversion.data import channel_data
+
+_FEWEST = 20
+_REACH = 3.0
+INDEX_STEP = 2e-4
+"""By how much the index of the second model is higher [-]."""
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A pulse ready for the fit."""
+
+    setup: GrowthSetup
+    model: PulseModel
+    index_model: PulseModel
+    """The model with the liquid's index a little higher, for derivatives."""
+    kernel: object
+    """The bench's kernel (OpticalKernel)."""
+    relative_index: complex
+    """Of the liquid against the gas [-]."""
+    index: float
+    """Of the liquid at the droplets' typical temperature, real part [-]."""
+    time: np.ndarray
+    """Every sample, shape (n,) [s]."""
+    channels: tuple
+    """ChannelData of the optical columns."""
+    window: np.ndarray
+    """Samples that may be fitted, shape (n,) [bool]."""
+
+
+def optical_columns(apparatus):
+    """Return the optical columns of a bench and what they are.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+
+    Returns
+    -------
+    columns : list of tuple
+        Column name, ``"scatter"`` or ``"transmission"``, and its record.
+    """
+    columns = [(d.column, "scatter", d) for d in apparatus.detectors]
+    if apparatus.transmission is not None:
+        columns.append((apparatus.transmission.column, "transmission", apparatus.transmission))
+    return columns
+
+
+def prepare_setup(apparatus, time, columns):
+    """Return the growth setup of a pulse.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,)
+        Samples [s].
+    columns : dict of str to ndarray
+        Trace columns, volts and pascal.
+
+    Returns
+    -------
+    setup : GrowthSetup
+        Gas path, births, properties.
+    """
+    pressure = columns[apparatus.pressure.column] if apparatus.pressure is not None else None
+    return growth_setup(apparatus, time, pressure, duration=float(time[-1] - time[0]))
+
+
+def pulse_kernel(setup, store=None):
+    """Return the kernel of a pulse's bench and the index to use it at.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    store : object, optional
+        Where kernel tables are kept.
+
+    Returns
+    -------
+    kernel : OpticalKernel
+        Of the bench.
+    relative : complex
+        Index of the liquid over that of the gas [-].
+    index : float
+        Of the liquid, real part [-].
+    """
+    apparatus = setup.apparatus
+    path, wavelength = setup.path, apparatus.beam.wavelength
+    gas_index = setup.gas.refractive_index(
+        wavelength, path.reference_temperature, path.reference_pressure
+    )
+    liquid = apparatus.vapour.refractive_index
+    if liquid is None:
+        liquid = setup.substance.refractive_index(wavelength, setup.droplet_temperature)
+    relative = complex(liquid) / float(gas_index)
+    reach = [_REACH * apparatus.sigmas.get(f"detector.{d.column}.angle_deg", 0.0)
+             for d in apparatus.detectors]
+    kernel = build_kernel(
+        apparatus, float(gas_index), [relative, relative + INDEX_STEP], store, angle_reach=reach
+    )
+    return kernel, relative, float(complex(liquid).real)
+
+
+def pulse_model(setup, kernel, relative, angles):
+    """Return the forward model at one relative index and at shifted angles.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    kernel : OpticalKernel
+        Of the bench.
+    relative : complex
+        Index of the liquid over that of the gas [-].
+    angles : sequence of float
+        Shift of each detector's angle [rad].
+
+    Returns
+    -------
+    model : PulseModel
+        The forward model.
+    """
+    apparatus = setup.apparatus
+    turning = any(f"detector.{d.column}.angle_deg" in apparatus.sigmas
+                  for d in apparatus.detectors)
+    table = kernel.at(relative, np.array(angles) if any(angles) else None, derivatives=turning)
+    rows = [*table.collected, table.extinction, table.extinction - table.forward]
+    count = len(apparatus.detectors)
+    if turning:
+        rows += list(table.d_collected_d_angle)
+    channels = [
+        Channel(d.column, "scatter", i, apparatus.chamber.path, d.gain, d.time_constant,
+                angle_row=count + 2 + i if turning else None)
+        for i, d in enumerate(apparatus.detectors)
+    ]
+    if apparatus.transmission is not None:
+        t = apparatus.transmission
+        channels.append(Channel(t.column, "transmission", count + 1, t.path, None, 0.0))
+    light = cloud_light(np.array(rows), table.log_radius_start, table.step)
+    return PulseModel(setup, light, tuple(channels), extinction_row=count)
+
+
+def reangled(prepared, angles):
+    """Return a pulse with its tables at shifted angles.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        A pulse.
+    angles : sequence of float
+        Shift of each detector's angle from the chamber file's [rad].
+
+    Returns
+    -------
+    prepared : Prepared
+        The same pulse.
+    """
+    relative = prepared.relative_index
+    return replace(
+        prepared,
+        model=pulse_model(prepared.setup, prepared.kernel, relative, angles),
+        index_model=pulse_model(prepared.setup, prepared.kernel, relative + INDEX_STEP, angles),
+    )
+
+
+def prepare(apparatus, time, columns, store=None, exclude=()):
+    """Return a pulse ready for the fit.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,)
+        Samples [s].
+    columns : dict of str to ndarray
+        Trace columns, volts and pascal.
+    store : object, optional
+        Where kernel tables are kept.
+    exclude : sequence of tuple of float
+        Ranges of time to leave out [s].
+
+    Returns
+    -------
+    prepared : Prepared
+        Setup, model and samples.
+
+    Raises
+    ------
+    TraceError
+        If fewer than 20 samples of a column can be used.
+    """
+    setup = prepare_setup(apparatus, time, columns)
+    kept = _span(apparatus, time)
+    time, columns = time[kept], {name: np.asarray(v)[kept] for name, v in columns.items()}
+    window = np.ones(time.size, dtype=bool)
+    if apparatus.analysis.window is not None:
+        low, high = apparatus.analysis.window
+        window &= (time >= low) & (time <= high)
+    for low, high in exclude:
+        window &= (time < low) | (time > high)
+    baseline = _baseline(apparatus, setup, time)
+    optical = _normalised(apparatus, time, columns, baseline)
+    channels = []
+    for column, kind, record in optical_columns(apparatus):
+        full_scale = getattr(record, "full_scale", None)
+        data = channel_data(column, kind, optical[column], window, baseline, full_scale)
+        if data.used.sum() < _FEWEST:
+            message = (
+                f"column {column} has {int(data.used.sum())} usable samples, fewer than "
+                f"{_FEWEST}: widen analysis.window_ms or look at the recording"
+            )
+            raise TraceError(message)
+        channels.append(data)
+    kernel, relative, index = pulse_kernel(setup, store)
+    straight = (0.0,) * len(apparatus.detectors)
+    return Prepared(
+        setup, pulse_model(setup, kernel, relative, straight),
+        pulse_model(setup, kernel, relative + INDEX_STEP, straight),
+        kernel, relative, index, time, tuple(channels), window,
+    )
+
+
+def _span(apparatus, time):
+    """Return the samples up to the end of the window: later ones play no part."""
+    if apparatus.analysis.window is None:
+        return slice(0, time.size)
+    end = int(np.searchsorted(time, apparatus.analysis.window[1], side="right"))
+    return slice(0, max(end, min(_FEWEST, time.size)))
+
+
+def _baseline(apparatus, setup, time):
+    """Return which samples show no droplets yet, shape (n,) [bool]."""
+    if apparatus.analysis.baseline is not None:
+        low, high = apparatus.analysis.baseline
+        return (time >= low) & (time <= high)
+    if setup.clock_known:
+        before = time < setup.births.times[0]
+        if before.sum() >= 5:
+            return before
+    first = np.zeros(time.size, dtype=bool)
+    first[: max(time.size // 50, 5)] = True
+    return first
+
+
+def _normalised(apparatus, time, columns, baseline):
+    """Return the optical columns divided by the laser-power monitor where there is one [V]."""
+    names = [name for name, _, _ in optical_columns(apparatus)]
+    found = {name: np.asarray(columns[name], dtype=float) for name in names}
+    darks = {t.column: t.dark for t in apparatus.detectors if t.dark}
+    if apparatus.transmission is not None and apparatus.transmission.dark:
+        darks[apparatus.transmission.column] = apparatus.transmission.dark
+    if apparatus.reference is None:
+        return {name: values - darks.get(name, 0.0) for name, values in found.items()}
+    monitor = np.asarray(columns[apparatus.reference.column], dtype=float)
+    monitor = monitor - apparatus.reference.dark
+    rest = float(np.nanmedian(monitor[baseline]))
+    relative = monitor / rest if rest else np.full(time.size, np.nan)
+    relative = np.where(relative > 0.02, relative, np.nan)
+    return {name: (values - darks.get(name, 0.0)) / relative for name, values in found.items()}

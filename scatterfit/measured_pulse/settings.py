@@ -1,0 +1,85 @@
+"""What is free in a pulse's fit, and how far it may stray."""
+
+import numpy as np
+
+from scatterfit.forward.model import Cloud, grow
+from scatterfit.inversion.data import bin_channels, bin_edges
+from scatterfit.inversion.fit import FitOptions
+from scatterfit.inversion.onset import find_onset
+from scatterfit.inversion.prior import depletion_sigma, growth_scale_sigma
+from scatterfit.measured_pulse.bench_inputs import (
+    temperature_relative_sigma,
+    vapour_relative_sigma,
+)
+
+_STICKING = 0.7
+_BEND = 0.01
+_CLOCK = 2e-4
+_LOOSE_CLOCK = 5e-3
+_THRESHOLD = 0.02
+_WIDEST_SIGMAS = 4.0
+_WIDEST = 0.6
+_VISIBLE = 0.6e-6
+_ONSET_BINS = 700
+
+
+def fit_options(prepared, angle_base):
+    """Return what is free in a pulse's fit.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The pulse.
+    angle_base : sequence of float
+        Angle shift that the model's tables already hold, one a detector [rad].
+
+    Returns
+    -------
+    options : FitOptions
+        Names, priors, onset and delays to search.
+    """
+    setup = prepared.setup
+    apparatus = setup.apparatus
+    names = ["number", "scale", "delay", "variance", "accommodation", "bend", "depletion"]
+    priors = {
+        "accommodation": (0.0, _STICKING), "bend": (0.0, _BEND),
+        "depletion": (0.0, depletion_sigma(setup)),
+    }
+    for i, detector in enumerate(apparatus.detectors):
+        sigma = apparatus.sigmas.get(f"detector.{detector.column}.angle_deg")
+        if sigma:
+            names.append(f"angle:{i}")
+            priors[f"angle:{i}"] = (-angle_base[i], sigma)
+    stated = {"temperature": temperature_relative_sigma(apparatus),
+              "vapour": vapour_relative_sigma(apparatus)}
+    free = [name for name, sigma in stated.items() if sigma]
+    for name in free:
+        names.append(name)
+        priors[name] = (0.0, stated[name])
+    priors["scale"] = (0.0, growth_scale_sigma(setup, free))
+    if setup.threshold is not None:
+        names.append("threshold")
+        priors["threshold"] = (0.0, _THRESHOLD)
+    widest = min(_WIDEST_SIGMAS * growth_scale_sigma(setup), _WIDEST)
+    if setup.clock_known:
+        priors["delay"] = (0.0, _CLOCK)
+        return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest)
+    bins = bin_channels(
+        prepared.time, prepared.channels,
+        bin_edges(prepared.time, float(prepared.time[0]), _ONSET_BINS),
+    )
+    onset = find_onset(bins, [c.kind for c in prepared.channels])
+    lag = _visible_after(prepared)
+    priors["delay"] = (onset - 0.3 * lag, _LOOSE_CLOCK + lag)
+    delays = tuple(onset - lag * np.linspace(0.0, 1.0, 5))
+    return FitOptions(tuple(names), priors, onset, delays, widest)
+
+
+def _visible_after(prepared):
+    """Return how long a droplet grows before it is surely seen [s]."""
+
+    growth = grow(prepared.setup, Cloud(number=np.log(1e6)))
+    radius = growth.radius[0].mean(axis=0)
+    if radius[-1] < _VISIBLE:
+        return 0.3 * float(growth.time[-1])
+    return float(np.interp(_VISIBLE, np.maximum.accumulate(radius), growth.time))
