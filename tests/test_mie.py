@@ -9,7 +9,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from scatterfit.cloud_optics.aperture import cone_quadrature
-from scatterfit.cloud_optics.single_droplet import amplitudes, coefficients, scatter, size_blocks
+from scatterfit.cloud_optics.series import size_blocks
+from scatterfit.cloud_optics.single_droplet import amplitudes, coefficients, scatter
 from scatterfit.errors import InvalidInputError
 
 REFERENCE = Path(__file__).parents[2] / "shared" / "mie-reference.json"

@@ -21,7 +21,7 @@ from scatterfit.cloud_optics.node import (
 from scatterfit.cloud_optics.table import INDEX_STEP, OpticalKernel
 from scatterfit.errors import InvalidInputError, KernelError
 
-KERNEL_VERSION = 1
+KERNEL_VERSION = 2
 """Raised whenever nodes would come out differently; part of every key."""
 BASE_SPREAD = 0.003
 """Standard deviation of ln(radius) that every table has at least [-]."""
@@ -67,7 +67,7 @@ def build_kernel(
         Where nodes are looked up and kept.
     angle_reach : float or sequence of float
         How far the fit may shift each detector's angle (one for all, or one each): 0, or rounded
-        up to 0.4, 0.8 or 1.6 degrees [rad].
+        up to 0.4, 0.8 or 1.6 degrees, of which the last is the limit [rad].
     spread : float
         Standard deviation of ln(radius) built into the tables [-].
 
@@ -224,16 +224,14 @@ def _recipe(apparatus, wavenumber, angle_reach, spread):
 
 
 def _angle_step(reach):
-    """Return the spacing of five angles that reach as far as wanted."""
+    """Return the spacing of five angles that reach as far as wanted, at most 1.6 degrees."""
+    if not reach >= 0:
+        message = f"angle reach is {reach:g} rad, must be 0 or positive"
+        raise InvalidInputError(message)
     if reach == 0:
         return 0.0
     fitting = _ANGLE_STEPS[2 * _ANGLE_STEPS - reach > -1e-9]
-    if reach < 0 or not fitting.size:
-        message = (
-            f"angle reach is {reach:g} rad, must lie between 0 and {2 * _ANGLE_STEPS[-1]:.4f} rad"
-        )
-        raise InvalidInputError(message)
-    return float(fitting[0])
+    return float(fitting[0] if fitting.size else _ANGLE_STEPS[-1])
 
 
 def _arrays(node):

@@ -92,9 +92,7 @@ def kernel_extrema(
         rising = 1.0 if level[stop] > level[start] else -1.0
         found += _shoulders(rising * slope[start : stop + 1], start, flatness)
     grid = table.log_radius_start + table.step * inside
-    return tuple(
-        _refined(grid, table.step, level, slope, found_one) for found_one in sorted(found)
-    )
+    return tuple(_refined(grid, table.step, level, slope, found_one) for found_one in sorted(found))
 
 
 def _turning_points(level, least_depth):

@@ -16,14 +16,14 @@ from itertools import pairwise
 import numpy as np
 
 from scatterfit.cloud_optics.aperture import ConeQuadrature, cone_quadrature
-from scatterfit.cloud_optics.single_droplet import (
+from scatterfit.cloud_optics.coefficients import term_count
+from scatterfit.cloud_optics.series import (
     AngularMatrix,
     add_product,
     angular_matrix,
     intensities,
     series_sums,
     size_blocks,
-    term_count,
 )
 
 LOWEST_SIZE = 0.05
@@ -163,10 +163,11 @@ def build_nodes(recipe: Recipe, relative_index: np.ndarray, threads: int = 2) ->
 
     Notes
     -----
-    Below each point of the table lie up to 24 evaluations. Resonances narrower than 0.7 of their
-    spacing are widened to it with their area kept (see `series_sums`), so that a chance hit or
-    miss of a narrow one does not matter. Against evaluations that resolve every resonance the
-    averages are right to 3e-4 at 15 to 90 degrees and 1e-3 near 180 degrees, to x = 100.
+    Below each interval of the table lie up to 20 evaluations. Resonances narrower than 0.85 of
+    their spacing are widened to it with their area kept (see `coefficient_rows`), so that a chance
+    hit or miss of a narrow one does not matter. Against evaluations that resolve every resonance,
+    averages over the spread of 0.003 are right to 5e-4 up to 120 degrees and to 3e-3 near 180
+    degrees, for x to 100.
     """
     subdivision = _subdivision(recipe)
     x, spacing = _fine_sizes(recipe, subdivision)
