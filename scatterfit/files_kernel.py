@@ -9,10 +9,14 @@ import os
 import sys
 import tempfile
 import zipfile
+import zlib
 from collections.abc import Mapping
 from pathlib import Path
 
 import numpy as np
+
+_UNSOUND = (OSError, ValueError, KeyError, EOFError, AttributeError, zipfile.BadZipFile, zlib.error)
+"""What reading a damaged or foreign file may raise."""
 
 
 class FolderStore:
@@ -43,12 +47,12 @@ class FolderStore:
         if self.folder is None:
             return None
         try:
-            with np.load(self.folder / f"{key}.npz", allow_pickle=False) as file:
-                if str(file["key"]) != key:
-                    return None
-                return {name: file[name] for name in file.files if name != "key"}
-        except (OSError, ValueError, KeyError, EOFError, TypeError, zipfile.BadZipFile):
+            with (self.folder / f"{key}.npz").open("rb") as opened:
+                file = np.load(opened, allow_pickle=False)
+                arrays = {name: file[name] for name in file.files}
+        except _UNSOUND:
             return None
+        return arrays if str(arrays.pop("key", "")) == key else None
 
     def save(self, key: str, arrays: Mapping[str, np.ndarray]) -> None:
         """Keep arrays under a key; a folder that cannot be written is left alone.

@@ -29,7 +29,7 @@ BASE_SPREAD = 0.003
 _MARGIN = 1.03
 _ANGLE_STEPS = np.radians([0.2, 0.4, 0.8])
 _CHECKED_SIZES = 24
-_AVERAGED_SIZES = (0.3, 1.7, 4.3, 9.1)
+_LARGEST_AVERAGED = 10.0
 _TOLERANCE = 1e-5
 
 
@@ -154,10 +154,10 @@ def check_node(recipe: Recipe, node: Node, relative_index: complex) -> None:
     rows = np.concatenate([*node.collected, node.forward[None], node.extinction[None]])
     if not recipe.forward_half_angle:
         rows = np.delete(rows, -2, axis=0)
-    points = np.searchsorted(grid, _AVERAGED_SIZES)
-    points = points[points < grid.size]
-    spots = np.sqrt(3.0) * recipe.spread * np.array([-1.0, 0.0, 1.0])
-    near = (grid[points, None] * np.exp(spots)).ravel()
+    spots = np.geomspace(grid[0], min(grid[-1], _LARGEST_AVERAGED), 4)
+    points = np.minimum(np.searchsorted(grid, spots), grid.size - 1)
+    three = np.sqrt(3.0) * recipe.spread * np.array([-1.0, 0.0, 1.0])
+    near = (grid[points, None] * np.exp(three)).ravel()
     theirs = _independent_curves(recipe, relative_index, near)
     theirs = theirs.reshape(-1, points.size, 3) @ (np.array([1.0, 4.0, 1.0]) / 6)
     _compare(rows[:, points], theirs, grid[points], "averages")

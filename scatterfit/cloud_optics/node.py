@@ -254,15 +254,15 @@ def _curves(x, relative_index, collector, resolution):
     terms = min(term_count(x[-1], **margin), collector.matrix.plus.shape[1])
     sums = series_sums(x, relative_index, collector.matrix, terms, resolution)
     curves = np.zeros((collector.perpendicular.shape[0] + 1, relative_index.size, x.size))
-    pairs = zip((collector.perpendicular, collector.parallel), intensities(sums), strict=True)
-    pairs = list(pairs)
+    perpendicular, parallel = intensities(sums)
+    pairs = [(collector.perpendicular, perpendicular), (collector.parallel, parallel)]
     if sums.apart.size:
         last = slice(terms - sums.apart.shape[0], terms)
         pairs.append((collector.electric_apart[:, last], sums.apart[:, 0]))
         pairs.append((collector.magnetic_apart[:, last], sums.apart[:, 1]))
-    light = curves[:-1].reshape(curves.shape[0] - 1, -1)
+    light = curves[:-1].reshape(curves.shape[0] - 1, relative_index.size * x.size)
     for weights, values in pairs:
-        add_product(light, weights, values.reshape(values.shape[0], -1))
+        add_product(light, weights, values.reshape(values.shape[0], light.shape[1]))
     curves[-1] = 2 * np.pi * sums.extinction
     return curves
 

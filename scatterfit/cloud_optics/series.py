@@ -197,7 +197,7 @@ def add_product(total: np.ndarray, left: np.ndarray, right: np.ndarray) -> None:
     >>> total
     array([[3., 7.]])
     """
-    columns = max(16, _SERIAL_PRODUCT // left.size)
+    columns = max(16, _SERIAL_PRODUCT // max(left.size, 1))
     for start in range(0, right.shape[1], columns):
         part = slice(start, start + columns)
         total[:, part] += left @ right[:, part]

@@ -42,6 +42,8 @@ class CloudParameters:
     """Undisturbed temperature over that of the gas path [-]."""
     growth_bend: np.ndarray | float = 0.0
     """Exponent b of a further factor (r / 1 um)^b on dr/dt: error in the law's shape [-]."""
+    growth_creep: np.ndarray | float = 0.0
+    """c of a further factor exp(c s), s from 0 to 1 along the path: conditions that creep [-]."""
 
     def columns(self):
         """Return the fields as arrays of shape (v,)."""
@@ -49,7 +51,7 @@ class CloudParameters:
             *(np.atleast_1d(np.asarray(value, dtype=float)) for value in (
                 self.droplets_per_mole, self.growth_scale, self.mass_accommodation,
                 self.thermal_accommodation, self.vapour_fraction, self.temperature_factor,
-                self.growth_bend,
+                self.growth_bend, self.growth_creep,
             ))
         )
 
@@ -120,7 +122,7 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
     cloud : CloudGrowth
         The solution for all variants.
     """
-    number, scale, mass, thermal, fraction, factor, bend = parameters.columns()
+    number, scale, mass, thermal, fraction, factor, bend, creep = parameters.columns()
     times, weights = births
     times = np.broadcast_to(times, (number.size, weights.size))
     length = _typical_length(properties, path, mass)
@@ -137,6 +139,7 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
     place = _birth_cells(path.time, times)
     floor = (start_radius + length[:, None, None]) ** 2
     step = np.diff(path.time)
+    along = (path.time - path.time[0]) / (path.time[-1] - path.time[0])
     converged, slope = False, None
     for turn in range(_ROUNDS):
         radius = np.sqrt(square) - length[:, None, None]
@@ -146,6 +149,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
             steps=3 if turn == 0 else 1,
         )
         rate *= (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
+        if creep.any():
+            rate *= np.exp(creep[:, None, None] * along)
         if bend.any():
             rate *= np.exp(bend[:, None, None] * np.log(np.maximum(radius, _BENT_FROM) / _MICROMETRE))
         grown = np.maximum(_since_birth(rate, step, place), 0.0)

@@ -14,6 +14,7 @@ from scatterfit.forward.low_pass import low_pass
 STEPS = {
     "number": 0.02, "scale": 0.01, "accommodation": 0.05, "temperature": 3e-4,
     "vapour": 2e-3, "threshold": 2e-3, "bend": 5e-3,
+    "creep": 5e-3,
 }
 
 
@@ -58,6 +59,8 @@ class Cloud:
     """ln of the seeds' threshold over the setup's."""
     bend: float = 0.0
     """Exponent of a further factor (r / 1 um)^bend on the growth rate [-]."""
+    creep: float = 0.0
+    """ln of a further factor on the growth rate at the end, growing evenly with time [-]."""
     depletion: float = 0.0
     """ln of the droplets that share the vapour over those that shine: error in the depletion."""
     angles: tuple[float, ...] = ()
@@ -115,6 +118,7 @@ def _parameters(setup, cloud, names):
     values = {
         "number": cloud.number, "scale": cloud.scale, "accommodation": cloud.accommodation,
         "temperature": cloud.temperature, "vapour": cloud.vapour, "bend": cloud.bend,
+        "creep": cloud.creep,
     }
     rows = {key: np.full(len(names) + 1, value) for key, value in values.items()}
     for i, name in enumerate(names):
@@ -129,6 +133,7 @@ def _parameters(setup, cloud, names):
         vapour_fraction=setup.vapour_fraction * np.exp(rows["vapour"]),
         temperature_factor=np.exp(rows["temperature"]),
         growth_bend=rows["bend"],
+        growth_creep=rows["creep"],
     )
 
 

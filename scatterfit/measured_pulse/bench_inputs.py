@@ -6,6 +6,10 @@ from scatterfit.forward.model import channel_signals
 
 
 
+_CREEP = 0.01
+"""One percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
+
+
 def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
     """Return what is let loose, within its sigma, when the fit's uncertainty is worked out.
 
@@ -29,7 +33,8 @@ def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
     for name, sigma, parts in _signal_inputs(prepared, problem, cloud, index_shift):
         priors[name] = (0.0, sigma)
         columns.append((name, parts))
-    return {"names": (), "more": columns, "priors": priors}
+    priors["creep"] = (0.0, _CREEP)
+    return {"names": ("creep",), "more": columns, "priors": priors}
 
 
 def vapour_relative_sigma(apparatus):

@@ -33,7 +33,7 @@ from scatterfit.measured_pulse.record import (
 )
 from scatterfit.measured_pulse.settings import fit_options
 
-_RADIUS_FLOOR = 2e-4
+_RADIUS_FLOOR = 3e-4
 _RATE_FLOOR = 2e-3
 _ANGLE_SETTLED = 2e-5
 _BASE_SPREAD = 0.003
@@ -42,7 +42,7 @@ _FEW = 3
 _DISAGREE = 0.015
 _INPUTS = {
     "scale": "computed growth rate", "bend": "shape of the growth law",
-    "depletion": "computed depletion", "accommodation": "vapour.mass_accommodation",
+    "creep": "creep of the gas during growth", "depletion": "computed depletion", "accommodation": "vapour.mass_accommodation",
     "delay": "clock of the births", "temperature": "chamber.temperature_K",
     "vapour": "vapour", "threshold": "threshold of the seeds",
 }

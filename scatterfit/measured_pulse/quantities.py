@@ -383,10 +383,12 @@ def birth_time(setup, cloud, posterior):
     Returns
     -------
     birth : Quantity
-        Median time of birth; 0.05 ms are added for the first steps of growth [s].
+        Median time of birth [s]. 0.05 ms are added for the first steps of growth; without a
+        pressure trace, three tenths of the hold, whose beginning and end are not seen.
     """
     derived = Derived(setup.births.median + cloud.delay, {"delay": 1.0})
-    return quantity(derived, posterior, _BIRTH_CLOCK)[0]
+    held = setup.births.effective
+    return quantity(derived, posterior, _BIRTH_CLOCK if setup.clock_known else 0.3 * held)[0]
 
 
 def property_sources(setup, index_given):
