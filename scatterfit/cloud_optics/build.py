@@ -195,10 +195,10 @@ def _independent_curves(recipe, relative_index, sizes):
 
 def _lattice(indices):
     """Return the first and last node needed, and the absorption."""
-    bad = indices[~((indices.real > 1) & (indices.imag >= 0) & np.isfinite(indices))]
+    bad = indices[~((indices.real >= 1.01) & (indices.imag >= 0) & np.isfinite(indices))]
     if bad.size or not indices.size:
         shown = f"{bad[0]:g}" if bad.size else "missing"
-        message = f"relative index is {shown}, must be n + ik with n > 1 and k >= 0"
+        message = f"relative index is {shown}, must be n + ik with n >= 1.01 and k >= 0"
         raise InvalidInputError(message)
     low, high = indices.real.min() / INDEX_STEP, indices.real.max() / INDEX_STEP
     first = int(np.floor(low + 1e-6)) - 1
