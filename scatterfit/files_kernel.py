@@ -6,6 +6,7 @@ not kept, without a word.
 
 import contextlib
 import os
+import re
 import sys
 import tempfile
 import zipfile
@@ -15,12 +16,24 @@ from pathlib import Path
 
 import numpy as np
 
-_UNSOUND = (OSError, ValueError, KeyError, EOFError, AttributeError, zipfile.BadZipFile, zlib.error)
+_UNSOUND = (
+    OSError,
+    ValueError,
+    KeyError,
+    EOFError,
+    AttributeError,
+    RuntimeError,
+    MemoryError,
+    zipfile.BadZipFile,
+    zlib.error,
+)
 """What reading a damaged or foreign file may raise."""
+_MOST_FILES = 500
+_NAME = re.compile(r"[0-9a-f]{40}\.npz")
 
 
 class FolderStore:
-    """A folder of kernel nodes; several processes may use it at once.
+    """A folder of kernel nodes, at most 500; several processes may use it at once.
 
     Parameters
     ----------
@@ -69,17 +82,26 @@ class FolderStore:
         """
         if self.folder is None:
             return
-        written = None
+        written: str | None = None
         try:
             self.folder.mkdir(parents=True, exist_ok=True)
             handle, written = tempfile.mkstemp(prefix=".writing-", dir=self.folder)
             with os.fdopen(handle, "wb") as file:
-                np.savez(file, key=np.array(key), **arrays)
+                np.savez(file, **{**arrays, "key": np.array(key)})
             Path(written).replace(self.folder / f"{key}.npz")
+            self._forget_oldest()
         except OSError:
             if written is not None:
                 with contextlib.suppress(OSError):
                     Path(written).unlink()
+
+    def _forget_oldest(self):
+        """Keep the folder from growing without end: about 150 MB."""
+        ours = [path for path in self.folder.iterdir() if _NAME.fullmatch(path.name)]
+        if len(ours) > _MOST_FILES:
+            ours.sort(key=lambda path: path.stat().st_mtime)
+            for path in ours[: len(ours) - _MOST_FILES]:
+                path.unlink(missing_ok=True)
 
 
 def default_store() -> FolderStore:

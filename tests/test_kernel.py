@@ -1,5 +1,6 @@
 """Kernel tables: averages, interpolation, spread, scale, store and extrema."""
 
+import os
 import subprocess
 import sys
 from dataclasses import FrozenInstanceError, replace
@@ -506,6 +507,31 @@ def test_disk_that_fills_up_leaves_nothing(tmp_path, monkeypatch):
     monkeypatch.setattr(np, "savez", full)
     FolderStore(tmp_path).save("a" * 40, {"extinction": np.zeros(3)})
     assert not list(tmp_path.iterdir())
+
+
+@settings(max_examples=150, deadline=None)
+@given(place=st.floats(0, 1, exclude_max=True), flip=st.integers(1, 255), cut=st.booleans())
+def test_no_damage_to_a_file_stops_the_program(tmp_path_factory, place, flip, cut):
+    store, key = FolderStore(tmp_path_factory.getbasetemp() / "damage"), "a" * 40
+    store.save(key, {"extinction": np.arange(9.0), "forward": np.arange(9.0)})
+    path = store.folder / f"{key}.npz"
+    damaged = bytearray(path.read_bytes())
+    spot = int(place * len(damaged))
+    damaged[spot] ^= flip
+    path.write_bytes(bytes(damaged[:spot] if cut else damaged))
+    found = store.load(key)
+    assert found is None or all(np.array_equal(array, np.arange(9.0)) for array in found.values())
+
+
+def test_old_files_make_room(tmp_path, monkeypatch):
+    monkeypatch.setattr("scatterfit.files_kernel._MOST_FILES", 3)
+    store = FolderStore(tmp_path)
+    (tmp_path / "notes.npz").write_bytes(b"not ours")
+    for number in range(5):
+        store.save(f"{number:040x}", {"extinction": np.zeros(1)})
+        os.utime(tmp_path / f"{number:040x}.npz", (number, number))
+    kept = {path.name for path in tmp_path.iterdir()}
+    assert kept == {"notes.npz", *(f"{number:040x}.npz" for number in (2, 3, 4))}
 
 
 def test_place_of_the_store(tmp_path, monkeypatch):
