@@ -101,7 +101,7 @@ class CloudGrowth:
         return self.droplets_per_mole[:, None] * moles
 
 
-def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
+def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=None):
     """Return how a cloud grows.
 
     Parameters
@@ -116,6 +116,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
         One or more variants.
     start_radius : float
         Radius at birth [m].
+    start : CloudGrowth, optional
+        A solution nearby on the same nodes, to start from.
 
     Returns
     -------
@@ -127,17 +129,13 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
     times = np.broadcast_to(times, (number.size, weights.size))
     length = _typical_length(properties, path, mass)
     gas = _Gas(properties, path, fraction, factor)
-    square = np.maximum(
-        (start_radius + length[:, None, None]) ** 2
-        + 4e-11 * np.maximum(path.time - times[:, :, None], 0.0), 0.0,
-    )
-    condensed = np.zeros((number.size, path.time.size))
+    floor = (start_radius + length[:, None, None]) ** 2
+    square, condensed, warmth = _first_guess(path, times, floor, length, start)
     moles = (4.0 * np.pi / 3.0 / properties.molar_volume) * number
     temperature, share = gas.state(condensed)
-    droplet_temperature = np.repeat(temperature[:, None, :], weights.size, axis=1)
+    droplet_temperature = temperature[:, None, :] + warmth
     accommodation = (mass[:, None, None], thermal[:, None, None])
     place = _birth_cells(path.time, times)
-    floor = (start_radius + length[:, None, None]) ** 2
     step = np.diff(path.time)
     along = (path.time - path.time[0]) / (path.time[-1] - path.time[0])
     converged, slope = False, None
@@ -146,7 +144,7 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
         surroundings = (temperature[:, None, :], path.pressure, share[:, None, :])
         rate, droplet_temperature = growth_rate(
             properties, radius, surroundings, accommodation, droplet_temperature,
-            steps=3 if turn == 0 else 1,
+            steps=3 if turn == 0 and start is None else 1,
         )
         rate *= (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
         if creep.any():
@@ -180,6 +178,23 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9):
         temperature=temperature, vapour_fraction=share, droplet_temperature=droplet_temperature,
         pressure=path.pressure, droplets_per_mole=number, converged=converged,
     )
+
+
+def _first_guess(path, times, floor, length, start):
+    """Return where to start: (r + l)^2, what has condensed, and how warm the droplets are."""
+    shape = (*times.shape, path.time.size)
+    if start is None:
+        square = floor + 4e-11 * np.maximum(path.time - times[:, :, None], 0.0)
+        return square, np.zeros((shape[0], shape[2])), np.zeros(shape)
+    warmth = start.droplet_temperature[0] - start.temperature[0]
+    radius = start.radius[0]
+    if start.weights.size != shape[1]:
+        # Other classes: each takes the nearest in time of birth.
+        nearest = np.argmin(np.abs(start.birth_times[0] - times[0][:, None]), axis=1)
+        radius, warmth = radius[nearest], warmth[nearest]
+    square = np.maximum((radius + length[:, None, None]) ** 2, floor)
+    condensed = np.broadcast_to(start.condensed[0], (shape[0], shape[2])).copy()
+    return square, condensed, np.broadcast_to(warmth, shape)
 
 
 class _Gas:

@@ -14,7 +14,7 @@ from scatterfit.droplet_growth.hold import settle_hold
 from scatterfit.droplet_growth.pressure import smooth, undo_lag
 from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
 
-_RESAMPLED = 20_000
+_FEW = 3
 _BIRTH_RADIUS = 3e-9
 _SEED_RADIUS = 25e-9
 _CRITICAL_FREEZING = 235.0
@@ -46,6 +46,8 @@ class GrowthSetup:
     properties: GrowthProperties
     path: GasPath
     births: Births
+    few_births: Births
+    """The same births in three classes, for first looks."""
     hold: Hold | None
     vapour_fraction: float
     """Mole fraction of vapour before the expansion [-]."""
@@ -156,12 +158,13 @@ def _measured(apparatus, substance, gas, record, classes):
     threshold, ramp = None, None
     if apparatus.seed is not None:
         threshold = _threshold(apparatus, substance, reference)
-        births = births_at_threshold(time, saturation, threshold)
+        births = few = births_at_threshold(time, saturation, threshold)
         ramp = (time, smoothed)
         hold = None
         peak = int(np.argmax(saturation))
     else:
         births = births_from_rate(time, log_rate, classes)
+        few = births_from_rate(time, log_rate, _FEW)
         peak = int(np.argmax(log_rate))
     hold = Hold(
         float(temperature[peak]), float(smoothed[peak]), float(saturation[peak]),
@@ -176,7 +179,7 @@ def _measured(apparatus, substance, gas, record, classes):
         settled, reference,
     )
     return _finish(
-        (apparatus, substance, gas), path, births, hold, fraction, start, low,
+        (apparatus, substance, gas), path, (births, few), hold, fraction, start, low,
         clock_known=True, threshold=threshold, ramp=ramp, warnings=warnings,
     )
 
@@ -190,8 +193,9 @@ def _stated(apparatus, substance, gas, duration, classes):
     if length:
         grid = np.linspace(-0.5 * length, 0.5 * length, 201)
         births = births_from_rate(grid, np.zeros(grid.size), classes)
+        few = births_from_rate(grid, np.zeros(grid.size), _FEW)
     else:
-        births = births_at_once(0.0)
+        births = few = births_at_once(0.0)
     ends = (births.times[0], max(births.times[-1], births.times[0] + 1e-5))
     nodes = choose_nodes(
         np.linspace(-0.5 * length, duration, 2001), np.full(2001, growth.pressure), ends
@@ -215,7 +219,7 @@ def _stated(apparatus, substance, gas, duration, classes):
         hold = Hold(pulse.temperature, pulse.pressure, saturation, pulse.hold, float(log_rate))
     low = min(growth.temperature, pulse.temperature if held else growth.temperature)
     return _finish(
-        (apparatus, substance, gas), path, births, hold, fraction, start, low,
+        (apparatus, substance, gas), path, (births, few), hold, fraction, start, low,
         clock_known=False,
     )
 
@@ -240,7 +244,7 @@ def _finish(bench, path, births, hold, fraction, start, low, **more):
             "freeze; radius and number assume liquid droplets",
         ),)
     return GrowthSetup(
-        apparatus, substance, gas, properties, path, births, hold, fraction, start,
+        apparatus, substance, gas, properties, path, *births, hold, fraction, start,
         growth_ratio, radius, droplet, warnings=warnings, **more,
     )
 

@@ -4,8 +4,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-_PADDING = 400
+_PADDING = 120
 _TAPER = 24
+_SMALL_VARIANCE = 4e-6
 
 
 @dataclass(frozen=True)
@@ -30,14 +31,28 @@ class CloudLight:
 class SpreadTable:
     """Rows of cross section at one spread, with what interpolation and derivatives need."""
 
-    values: np.ndarray
-    """Shape (rows, n) [m^2]."""
-    slopes: np.ndarray
-    """d/d ln r times the step, shape (rows, n) [m^2]."""
-    curvatures: np.ndarray
-    """Derivative by the variance of ln r, shape (rows, n) [m^2]."""
+    cells: np.ndarray
+    """A line per radius: all rows' values, slopes (d/d ln r times the step) and derivatives by the
+    variance, shape (n, 3 rows) [m^2]."""
     start: float
     step: float
+    variance: float
+    """Beyond that of the base table [-]."""
+
+    @property
+    def rows(self):
+        """Return how many cross sections there are."""
+        return self.cells.shape[1] // 3
+
+    @property
+    def values(self):
+        """Return the cross sections, shape (rows, n) [m^2]."""
+        return self.cells[:, : self.rows].T
+
+    @property
+    def log_radius(self):
+        """Return ln of the radii in metres, shape (n,) [-]."""
+        return self.start + self.step * np.arange(self.cells.shape[0])
 
 
 def cloud_light(rows, start, step):
@@ -73,7 +88,7 @@ def cloud_light(rows, start, step):
     return CloudLight(np.fft.rfft(padded, axis=1), wavenumber, start, step, count, size)
 
 
-def spread_table(light, variance):
+def spread_table(light, variance, near=None):
     """Return the rows averaged over a wider spread.
 
     Parameters
@@ -82,6 +97,8 @@ def spread_table(light, variance):
         Of the pulse.
     variance : float
         Variance of ln r beyond that of the base table, >= 0 [-].
+    near : SpreadTable, optional
+        A table of nearly the same variance, corrected to first order if that serves.
 
     Returns
     -------
@@ -93,15 +110,18 @@ def spread_table(light, variance):
     A Gaussian average obeys the heat equation: its derivative by the variance is half its second
     derivative by ln r.
     """
+    if near is not None and abs(variance - near.variance) < _SMALL_VARIANCE:
+        return near
     damped = light.spectrum * np.exp(-0.5 * variance * light.wavenumber**2)
     slope = damped * (1j * light.wavenumber * light.step)
     curvature = damped * (-0.5 * light.wavenumber**2)
     both = np.fft.irfft(np.concatenate([damped, slope, curvature]), light.size, axis=1)
-    values, slopes, curvatures = np.split(both[:, : light.count], 3)
-    return SpreadTable(values, slopes, curvatures, light.start, light.step)
+    return SpreadTable(
+        np.ascontiguousarray(both[:, : light.count].T), light.start, light.step, variance
+    )
 
 
-def look_up(table, log_radius, curvature=False):
+def look_up(table, log_radius, variance):
     """Return cross sections at given radii, with derivatives.
 
     Parameters
@@ -110,8 +130,8 @@ def look_up(table, log_radius, curvature=False):
         Of the pulse.
     log_radius : ndarray, shape (...)
         ln of the radius in metres [-]; beyond the ends the end values hold.
-    curvature : bool
-        Whether the derivative by the variance is wanted.
+    variance : float
+        Variance wanted; to first order from that of the table [-].
 
     Returns
     -------
@@ -119,24 +139,25 @@ def look_up(table, log_radius, curvature=False):
         Cross sections [m^2].
     slopes : ndarray, shape (rows, ...)
         Their derivatives by ln r [m^2].
-    curvatures : ndarray, shape (rows, ...) or None
+    curvatures : ndarray, shape (rows, ...)
         Their derivatives by the variance of ln r [m^2].
     """
     place = (log_radius - table.start) * (1.0 / table.step)
-    last = table.values.shape[1] - 2
+    last = table.cells.shape[0] - 2
     place = np.clip(place, 0.0, last + 0.999999)
     index = place.astype(np.intp)
     t = place - index
-    low, high = table.values.take(index, axis=1), table.values.take(index + 1, axis=1)
-    low_slope, high_slope = table.slopes.take(index, axis=1), table.slopes.take(index + 1, axis=1)
-    rise = high - low
+    low = np.moveaxis(table.cells.take(index, axis=0), -1, 0)
+    high = np.moveaxis(table.cells.take(index + 1, axis=0), -1, 0)
+    rows = table.rows
+    low_slope, high_slope = low[rows:2 * rows], high[rows:2 * rows]
+    rise = high[:rows] - low[:rows]
     # Cubic Hermite: low + t (s0 + t (b + t c)).
     c = low_slope + high_slope - 2.0 * rise
     b = rise - low_slope - c
-    values = low + t * (low_slope + t * (b + t * c))
+    values = low[:rows] + t * (low_slope + t * (b + t * c))
     slopes = (low_slope + t * (2.0 * b + 3.0 * t * c)) * (1.0 / table.step)
-    if not curvature:
-        return values, slopes, None
-    bend = table.curvatures.take(index, axis=1)
-    bend = bend + t * (table.curvatures.take(index + 1, axis=1) - bend)
+    bend = low[2 * rows:] + t * (high[2 * rows:] - low[2 * rows:])
+    if variance != table.variance:
+        values = values + (variance - table.variance) * bend
     return values, slopes, bend

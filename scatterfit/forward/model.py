@@ -5,7 +5,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT
-from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
+from scatterfit.droplet_growth.cloud import CloudGrowth, CloudParameters, solve_cloud
 from scatterfit.droplet_growth.setup import GrowthSetup, with_threshold
 from scatterfit.forward.light import CloudLight, look_up, spread_table
 from scatterfit.forward.low_pass import low_pass
@@ -78,6 +78,24 @@ class PulseModel:
 
 
 @dataclass(frozen=True)
+class LinearGrowth:
+    """A solved cloud and how it answers to small changes of its parameters.
+
+    Growth is smooth in its parameters while the light is not: the cloud is solved a few times in
+    a fit, and followed to first order in between.
+    """
+
+    cloud: Cloud
+    """Where it was solved."""
+    growth: CloudGrowth
+    """The solution, one variant."""
+    log_radius_by: dict
+    """Derivatives of ln r at the nodes by parameter, shape (c, m)."""
+    log_density_by: dict
+    """Derivatives of ln of the number density at the nodes, shape (m,)."""
+
+
+@dataclass(frozen=True)
 class CloudState:
     """The cloud at the sample times."""
 
@@ -89,8 +107,15 @@ class CloudState:
     """Derivatives of ln r by each parameter, shape (c, n)."""
     log_density_by: dict
     """Derivatives of ln of the number density, shape (n,)."""
-    growth: object
-    """The solved cloud (CloudGrowth)."""
+    linear: LinearGrowth
+    """The solved cloud behind it."""
+    table: object = None
+    """The cross sections it was seen with (SpreadTable)."""
+
+    @property
+    def growth(self):
+        """Return the solved cloud (CloudGrowth)."""
+        return self.linear.growth
 
 
 def per_mole(setup, log_number):
@@ -137,7 +162,7 @@ def _parameters(setup, cloud, names):
     )
 
 
-def grow(setup, cloud, names=()):
+def grow(setup, cloud, names=(), classes=None, start=None):
     """Return the solved cloud and, as further variants, its neighbours for derivatives.
 
     Parameters
@@ -148,6 +173,10 @@ def grow(setup, cloud, names=()):
         Where to solve.
     names : sequence of str
         Parameters to vary, in order.
+    classes : sequence of int, optional
+        Which classes of droplets to follow; all by default.
+    start : CloudGrowth, optional
+        A solution nearby to start from.
 
     Returns
     -------
@@ -155,10 +184,65 @@ def grow(setup, cloud, names=()):
         Variant 0 is the cloud itself.
     """
     births = _birth_times(setup, cloud, names)
+    weights = setup.births.weights
+    if classes is not None:
+        births, weights = births[..., classes], weights[list(classes)]
+        weights = weights / weights.sum()
     return solve_cloud(
-        setup.properties, setup.path, (births, setup.births.weights),
-        _parameters(setup, cloud, names), setup.start_radius,
+        setup.properties, setup.path, (births, weights),
+        _parameters(setup, cloud, names), setup.start_radius, start,
     )
+
+
+def linear_growth(setup, cloud, names=(), start=None):
+    """Return a cloud's growth and its derivatives.
+
+    Derivatives are smooth in the time of birth: they are worked out for three classes and carried
+    over to the others by the parabola through them.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    cloud : Cloud
+        Where to solve.
+    names : sequence of str
+        Parameters; those that do not act on growth are ignored.
+    start : LinearGrowth, optional
+        A solution nearby to start from.
+
+    Returns
+    -------
+    linear : LinearGrowth
+        Solution and derivatives.
+    """
+    moving = [name for name in names if name in STEPS]
+    growth = grow(setup, cloud, start=start.growth if start is not None else None)
+    if not moving:
+        return LinearGrowth(cloud, growth, {}, {})
+    count = setup.births.weights.size
+    few = [0] if count == 1 else sorted({count // 6, count // 2, count - 1 - count // 6})
+    near = grow(setup, cloud, moving, few, growth)
+    carry = _parabola(setup.births.times[few], setup.births.times)
+    born = near.time > near.birth_times[0][:, None]
+    log_radius = np.log(np.maximum(near.radius, near.start_radius))
+    density = np.log(near.number_density)
+    radius_by, density_by = {}, {}
+    for i, name in enumerate(moving):
+        change = (log_radius[i + 1] - log_radius[0]) / STEPS[name]
+        radius_by[name] = carry @ np.where(born, change, 0.0)
+        density_by[name] = (density[i + 1] - density[0]) / STEPS[name]
+    return LinearGrowth(cloud, growth, radius_by, density_by)
+
+
+def _parabola(nodes, points):
+    """Return the matrix that carries values at a few nodes to points, shape (points, nodes)."""
+    matrix = np.ones((points.size, nodes.size))
+    for j in range(nodes.size):
+        for k in range(nodes.size):
+            if k != j:
+                matrix[:, j] *= (points - nodes[k]) / (nodes[j] - nodes[k])
+    return matrix
 
 
 def _birth_times(setup, cloud, names):
@@ -177,53 +261,68 @@ def _birth_times(setup, cloud, names):
     return np.array(rows)
 
 
-def cloud_state(model, cloud, time, names=()):
+def cloud_state(linear, cloud, time, names=()):
     """Return radius and number density at the sample times, with their derivatives.
 
     Parameters
     ----------
-    model : PulseModel
-        Of the pulse.
+    linear : LinearGrowth
+        A solution at or near the cloud.
     cloud : Cloud
         Where to evaluate.
     time : ndarray, shape (n,)
         Samples [s].
     names : sequence of str
-        Parameters to differentiate by; those that act on growth are done by differences.
+        Parameters to differentiate by.
 
     Returns
     -------
     state : CloudState
         Per class and sample.
     """
-    moving = [name for name in names if name in STEPS]
-    growth = grow(model.setup, cloud, moving)
+    growth = linear.growth
     clock = time - cloud.delay
     index, t, width = _places(growth.time, clock)
-    square = _hermite(growth.square, growth.square_rate, index, t, width)
+    square = hermite(growth.square[0], growth.square_rate[0], index, t, width)
     born = clock > growth.birth_times[0][:, None]
     length = growth.length[0]
-    radius = np.sqrt(square[0]) - length
-    safe = np.where(born, np.maximum(radius, growth.start_radius), growth.start_radius)
-    log_radius = np.log(safe)
-    log_radius_by = {}
-    for i, name in enumerate(moving):
-        other = np.sqrt(square[i + 1]) - growth.length[i + 1]
-        other = np.where(born, np.maximum(other, growth.start_radius), growth.start_radius)
-        log_radius_by[name] = (np.log(other) - log_radius) / STEPS[name]
-    density = growth.number_density * np.exp(-cloud.depletion)
-    at = density[:, index] + t * (density[:, index + 1] - density[:, index])
-    log_density_by = {
-        name: np.log(at[i + 1] / at[0]) / STEPS[name] for i, name in enumerate(moving)
+    safe = np.maximum(np.sqrt(square) - length, growth.start_radius)
+    density = _straight(growth.number_density[0] * np.exp(-linear.cloud.depletion), index, t)
+    radius_by = {
+        name: _straight(rows, index, t) for name, rows in linear.log_radius_by.items()
     }
+    density_by = {
+        name: _straight(row, index, t) for name, row in linear.log_density_by.items()
+    }
+    log_move, thinner = _moves(linear, cloud, radius_by, density_by)
+    if log_move is not None:
+        safe = safe * np.exp(log_move)
+        density = density * np.exp(thinner)
     if "delay" in names:
-        rate = growth.square_rate[0]
-        slope = rate[:, index] + t * (rate[:, index + 1] - rate[:, index])
-        speed = slope / (2.0 * (safe + length))
-        log_radius_by["delay"] = np.where(born, -speed / safe, 0.0)
-    return CloudState(
-        np.where(born, safe, 0.0), at[0], log_radius_by, log_density_by, growth,
-    )
+        slope = _straight(growth.square_rate[0], index, t)
+        radius_by["delay"] = np.where(born, -slope / (2.0 * (safe + length) * safe), 0.0)
+    return CloudState(np.where(born, safe, 0.0), density, radius_by, density_by, linear)
+
+
+def _moves(linear, cloud, radius_by, density_by):
+    """Return the first-order change of ln r and ln n from where growth was solved."""
+    log_move, thinner = None, 0.0
+    for name in linear.log_radius_by:
+        step = getattr(cloud, name) - getattr(linear.cloud, name)
+        if name == "number":
+            light = step
+            step = step + cloud.depletion - linear.cloud.depletion
+            thinner = thinner + light - step
+        if step or (name == "number" and light):
+            log_move = (0.0 if log_move is None else log_move) + step * radius_by[name]
+            thinner = thinner + step * density_by[name]
+    return log_move, thinner
+
+
+def _straight(values, index, t):
+    """Return values between nodes by straight lines, shape (..., n)."""
+    low = values[..., index]
+    return low + t * (values[..., index + 1] - low)
 
 
 def _places(nodes, clock):
@@ -234,8 +333,25 @@ def _places(nodes, clock):
     return index, t, width
 
 
-def _hermite(values, rates, index, t, width):
-    """Return cubic interpolants of values with known time derivatives, shape (..., n)."""
+def hermite(values, rates, index, t, width):
+    """Return cubic interpolants of values with known time derivatives.
+
+    Parameters
+    ----------
+    values, rates : ndarray, shape (..., m)
+        At the nodes [any], [any/s].
+    index : ndarray, shape (n,)
+        Cell of each point.
+    t : ndarray, shape (n,)
+        Place in the cell, 0 to 1 [-].
+    width : ndarray, shape (n,)
+        Of the cell [s].
+
+    Returns
+    -------
+    interpolated : ndarray, shape (..., n)
+        Values at the points [any].
+    """
     low, high = values[..., index], values[..., index + 1]
     first, last = rates[..., index] * width, rates[..., index + 1] * width
     rise = high - low
@@ -255,7 +371,7 @@ class ChannelSignal:
     through: ``"number_gain"``, ``"number_extinction"``, ``"number_depletion"``."""
 
 
-def channel_signals(model, cloud, time, names=()):
+def channel_signals(model, cloud, time, names=(), linear=None, near=None):
     """Return what every channel would show without noise and offset.
 
     A detector shows ``gain n C exp(-n C_ext path)`` with its cross section averaged over the
@@ -271,6 +387,11 @@ def channel_signals(model, cloud, time, names=()):
         Samples [s].
     names : sequence of str
         Parameters to differentiate by.
+    linear : LinearGrowth, optional
+        Growth solved nearby, with derivatives by all the names that move it; solved at the cloud
+        where it is missing.
+    near : SpreadTable, optional
+        A table of nearly the right spread.
 
     Returns
     -------
@@ -279,11 +400,13 @@ def channel_signals(model, cloud, time, names=()):
     state : CloudState
         The cloud behind them.
     """
-    state = cloud_state(model, cloud, time, names)
-    table = spread_table(model.light, cloud.variance)
+    if linear is None:
+        linear = linear_growth(model.setup, cloud, names)
+    state = cloud_state(linear, cloud, time, names)
+    table = spread_table(model.light, cloud.variance, near)
     born = state.radius > 0.0
     log_radius = np.log(np.where(born, state.radius, np.exp(table.start)))
-    values, slopes, bends = look_up(table, log_radius, curvature="variance" in names)
+    values, slopes, bends = look_up(table, log_radius, cloud.variance)
     weights = np.where(born, state.growth.weights[:, None], 0.0)
     mean = np.einsum("cn,rcn->rn", weights, values)
     for detector, channel in enumerate(model.channels):
@@ -292,8 +415,8 @@ def channel_signals(model, cloud, time, names=()):
             values[channel.row] += cloud.angles[detector] * values[channel.angle_row]
             slopes[channel.row] += cloud.angles[detector] * slopes[channel.angle_row]
     mean_by = {
-        name: np.einsum("cn,rcn->rn", weights * change, slopes)
-        for name, change in state.log_radius_by.items()
+        name: np.einsum("cn,rcn->rn", weights * state.log_radius_by[name], slopes)
+        for name in names if name in state.log_radius_by
     }
     if "variance" in names:
         mean_by["variance"] = np.einsum("cn,rcn->rn", weights, bends)
@@ -301,7 +424,7 @@ def channel_signals(model, cloud, time, names=()):
         _one_channel(model, i, channel, state, mean, mean_by, time, names)
         for i, channel in enumerate(model.channels)
     ]
-    return signals, state
+    return signals, replace(state, table=table)
 
 
 def _one_channel(model, position, channel, state, mean, mean_by, time, names):
@@ -341,26 +464,3 @@ def _one_channel(model, position, channel, state, mean, mean_by, time, names):
         by["number"] = by["number_depletion"] + by["number_gain"] + by["number_extinction"]
         by["depletion"] = by["number_depletion"]
     return ChannelSignal(filtered[0], by)
-
-
-def moved(cloud, **changes):
-    """Return a cloud with some parameters replaced.
-
-    Parameters
-    ----------
-    cloud : Cloud
-        Where to start.
-    **changes : float
-        New values by field name.
-
-    Returns
-    -------
-    cloud : Cloud
-        The other cloud.
-
-    Examples
-    --------
-    >>> moved(Cloud(number=20.0), scale=0.1).scale
-    0.1
-    """
-    return replace(cloud, **changes)

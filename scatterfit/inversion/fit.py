@@ -4,17 +4,20 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.forward.model import channel_signals
+from scatterfit.forward.model import Cloud, hermite
 from scatterfit.inversion.data import ChannelData, bin_channels, bin_edges, without
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
-from scatterfit.inversion.problem import Evaluation, Problem, linear_columns
+from scatterfit.inversion.problem import Evaluation, Problem
 from scatterfit.inversion.search import search
-from scatterfit.inversion.solve import Solution, descend, polish
+from scatterfit.inversion.solve import descend, polish
 
 _COARSE = 260
-_FINE = 1400
-_CANDIDATES = 5
+_FINE = 800
+_CANDIDATES = 4
+_APART = 4e-3
 _RIVAL = 400.0
+_HOPELESS = 4.0
+_CONTINUED = 3
 
 
 @dataclass(frozen=True)
@@ -34,7 +37,7 @@ class Fit:
     """Correlation of neighbouring residuals [-]."""
     chi2_null: float
     """Misfit without droplets, in the bins [-]."""
-    rivals: tuple[Evaluation, ...]
+    rivals: tuple["Rival", ...]
     """Other clouds, best first."""
     disturbances: tuple[tuple[str, ...], ...]
     """Names of drift and hum found in each channel."""
@@ -62,39 +65,86 @@ def fit_pulse(model, time, channels, options):
         Best cloud, rivals and residuals.
     """
     channels = tuple(channels)
-    start = options.onset
-    coarse = bin_channels(time, channels, bin_edges(time, start, _COARSE))
-    problem = Problem(model, coarse, options.names, options.priors,
+    coarse = bin_channels(time, channels, bin_edges(time, options.onset, _COARSE))
+    problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, _CANDIDATES)
-    found = sorted(
-        (descend(problem, c.cloud, iterations=8, tolerance=0.1) for c in candidates),
-        key=lambda s: s.best.chi2,
+    found = _descend_all(problem, [c.cloud for c in candidates])
+    problem = replace(problem, model=model)
+    fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
+    best, others = _best_of(replace(_with(problem, fine, ((),) * len(channels))), found)
+    problem, best, disturbances = _undisturbed(problem, fine, best)
+    glitchy = tuple(
+        find_glitches(r, d.used)
+        for r, d in zip(full_residual(problem, best.best, time, channels)[1], channels, strict=True)
     )
-    found = _distinct(found)
-    disturbances = find_disturbances(problem, found[0].best)
-    fine = bin_channels(time, channels, bin_edges(time, start, _FINE))
-    problem = _with(problem, fine, disturbances)
-    best = descend(problem, found[0].best.cloud, iterations=10, tolerance=0.05)
-    again = find_disturbances(problem, best.best, disturbances)
-    if again != disturbances:
-        disturbances = again
-        problem = _with(problem, fine, disturbances)
-        best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
-    whole, residual = full_residual(problem, best.best, time, channels)
-    glitchy = tuple(find_glitches(r, d.used) for r, d in zip(residual, channels, strict=True))
     count = int(sum(g.sum() for g in glitchy))
     if count:
         channels = tuple(without(d, g) for d, g in zip(channels, glitchy, strict=True))
-        fine = bin_channels(time, channels, bin_edges(time, start, _FINE))
+        fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
         best = descend(problem, best.best.cloud, iterations=6, tolerance=0.05)
-    rivals = _rivals(problem, best, found[1:])
-    if rivals and rivals[0].best.chi2 < best.best.chi2:
-        rivals = sorted([best, *rivals], key=lambda s: s.best.chi2)
-        best, rivals = rivals[0], rivals[1:]
     best = polish(problem, best)
-    return _finished(problem, best, time, (channels, rivals, disturbances, count))
+    return _finished(problem, best, time, (channels, others, disturbances, count))
+
+
+def _undisturbed(problem, fine, best):
+    """Return the problem with drift and hum, where there are any, and the best cloud in it."""
+    disturbances = ((),) * len(problem.model.channels)
+    problem = _with(problem, fine, disturbances)
+    for _ in range(3):
+        again = find_disturbances(problem, best.best, disturbances)
+        if again == disturbances:
+            break
+        disturbances = again
+        problem = _with(problem, fine, disturbances)
+        best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
+    return problem, best, disturbances
+
+
+def _best_of(problem, found):
+    """Return the best cloud in the finer bins, and its rivals."""
+    close = [found[0], *(s for s in found[1:] if s.best.chi2 - found[0].best.chi2 < _RIVAL)]
+    refined = sorted(
+        (descend(problem, s.best.cloud, iterations=10, tolerance=0.05) for s in close[:3]),
+        key=lambda s: s.best.chi2,
+    )
+    best = refined[0]
+    rivals = [
+        Rival(s.best.cloud, _final(s), float(s.best.chi2 - best.best.chi2))
+        for s in _distinct(refined)[1:]
+    ]
+    rivals += [
+        Rival(s.best.cloud, _final(s), float(s.best.chi2 - found[0].best.chi2))
+        for s in found if s not in close[:3]
+    ]
+    kept = []
+    for rival in sorted(rivals, key=lambda r: r.delta_chi2):
+        apart = [abs(np.log(rival.final_radius / r)) for r in
+                 (_final(best), *(k.final_radius for k in kept))]
+        if min(apart) > _APART:
+            kept.append(rival)
+    return best, tuple(kept)
+
+
+def coarse_model(model):
+    """Return a model with fewer classes of droplets and fewer nodes, for first looks.
+
+    Parameters
+    ----------
+    model : PulseModel
+        Of the pulse.
+
+    Returns
+    -------
+    model : PulseModel
+        Good to a few percent of the light.
+    """
+    setup, path = model.setup, model.setup.path
+    chosen = np.unique(np.append(np.arange(0, path.time.size, 2), path.time.size - 1))
+    path = replace(path, time=path.time[chosen], pressure=path.pressure[chosen],
+                   temperature=path.temperature[chosen])
+    return replace(model, setup=replace(setup, path=path, births=setup.few_births))
 
 
 def _finished(problem, best, time, more):
@@ -104,7 +154,7 @@ def _finished(problem, best, time, more):
     chi2, lag1 = whiteness(residual, channels, len(problem.names))
     return Fit(
         problem, best.best, channels, whole, residual, chi2, lag1,
-        null_chi2(problem), tuple(r.best for r in rivals), disturbances, count, best.converged,
+        null_chi2(problem), tuple(rivals), disturbances, count, best.converged,
     )
 
 
@@ -130,8 +180,18 @@ def refine(fit, model, time, priors):
     problem = replace(fit.problem, model=model, priors=priors)
     start = replace(fit.best.cloud, angles=(0.0,) * len(fit.best.cloud.angles))
     best = polish(problem, descend(problem, start, iterations=6, tolerance=0.02))
-    rivals = [Solution(rival, 0, True) for rival in fit.rivals]
-    return _finished(problem, best, time, (fit.channels, rivals, fit.disturbances, fit.glitches))
+    return _finished(problem, best, time, (fit.channels, fit.rivals, fit.disturbances, fit.glitches))
+
+
+@dataclass(frozen=True)
+class Rival:
+    """Another minimum of the misfit."""
+
+    cloud: Cloud
+    final_radius: float
+    """[m]."""
+    delta_chi2: float
+    """Misfit beyond that of the best cloud [-]."""
 
 
 @dataclass(frozen=True)
@@ -154,7 +214,23 @@ def _with(problem, bins, disturbances):
     return replace(problem, bins=bins, extras=extras)
 
 
-def _distinct(solutions, apart=2e-3):
+def _descend_all(problem, clouds):
+    """Return where descents from several clouds end, best first; hopeless ones are cut short."""
+    rough = sorted(
+        (descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds),
+        key=lambda s: s.best.chi2,
+    )
+    limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
+    kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
+    found = [
+        descend(problem, s.best.cloud, iterations=8, tolerance=0.1, linear=s.best.state.linear)
+        for s in kept
+    ]
+    rest = [s for s in rough if s not in kept]
+    return _distinct(sorted(found, key=lambda s: s.best.chi2)) + _distinct(rest)
+
+
+def _distinct(solutions, apart=_APART):
     """Return solutions that ended in different places, best first."""
     kept = []
     for solution in solutions:
@@ -168,17 +244,8 @@ def _final(solution):
     return max(float(solution.best.state.radius[:, -1].mean()), 1e-9)
 
 
-def _rivals(problem, best, others):
-    """Return the other minima, refined as the best was, that come anywhere near it."""
-    refined = [
-        descend(problem, other.best.cloud, iterations=8, tolerance=0.1) for other in others[:3]
-    ]
-    refined = sorted(refined, key=lambda s: s.best.chi2)
-    return [s for s in _distinct([best, *refined]) if s is not best]
-
-
 def full_residual(problem, evaluation, time, channels):
-    """Return the fit and the residuals at every sample.
+    """Return the fit, carried from the bins by cubics, and the residuals at every sample.
 
     Parameters
     ----------
@@ -198,15 +265,13 @@ def full_residual(problem, evaluation, time, channels):
     residual : ndarray, shape (channels, n)
         Signal less fit over the noise [-].
     """
-    signals, _ = channel_signals(problem.model, evaluation.cloud, time)
+    bins = problem.bins
+    index = np.clip(np.searchsorted(bins.time, time) - 1, 0, bins.time.size - 2)
+    width = bins.time[index + 1] - bins.time[index]
+    t = (time - bins.time[index]) / width
     fits, residuals = [], []
-    place = problem.bins.time
-    for i, (channel, signal, data) in enumerate(
-        zip(problem.model.channels, signals, channels, strict=True)
-    ):
-        extra = np.array([np.interp(time, place, row) for row in problem.extras[i]])
-        columns, fixed = linear_columns(channel, signal.shape, extra.reshape(-1, time.size))
-        fit = fixed + evaluation.coefficients[i] @ columns
+    for values, data in zip(evaluation.fits, channels, strict=True):
+        fit = hermite(values, np.gradient(values, bins.time), index, t, width)
         fits.append(fit)
         residuals.append((data.signal - fit) / np.sqrt(data.noise.variance(fit)))
     return np.array(fits), np.array(residuals)

@@ -154,7 +154,7 @@ def linear_columns(channel, signal, extra):
     return np.vstack([ones, extra]), signal
 
 
-def evaluate(problem, cloud, derivatives=True, more=()):
+def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
     """Return the misfit of a cloud.
 
     Parameters
@@ -167,6 +167,10 @@ def evaluate(problem, cloud, derivatives=True, more=()):
         Whether the Jacobian is wanted.
     more : sequence of (str, sequence of ndarray)
         Further columns of the Jacobian: a name, and per channel the derivative of its shape.
+    linear : LinearGrowth, optional
+        Growth solved nearby; solved at the cloud where it is missing.
+    near : SpreadTable, optional
+        A table of nearly the right spread.
 
     Returns
     -------
@@ -174,7 +178,7 @@ def evaluate(problem, cloud, derivatives=True, more=()):
         Residuals, and what was found on the way.
     """
     names = problem.names if derivatives else ()
-    signals, state = channel_signals(problem.model, cloud, problem.bins.time, names)
+    signals, state = channel_signals(problem.model, cloud, problem.bins.time, names, linear, near)
     residuals, jacobians, coefficients, fits, bases = [], [], [], [], []
     splits = {key: [] for key in ("number_gain", "number_extinction", "number_depletion")}
     for i, (channel, signal) in enumerate(zip(problem.model.channels, signals, strict=True)):

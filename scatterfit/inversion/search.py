@@ -1,19 +1,19 @@
 """The right Mie lobe without a start value: many clouds grown at once, compared with the trace."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT
-from scatterfit.droplet_growth.births import Births
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
-from scatterfit.forward.light import look_up, spread_table
+from scatterfit.forward.light import spread_table
 from scatterfit.forward.model import Cloud, per_mole
 
 _NODES = 70
 _STICKING = (0.0, -1.2)
-_DEPLETION = (0.003, 0.1, 0.2, 0.35, 0.5, 0.65, 0.8, 0.95, 1.2, 1.6, 2.5, 5.0)
+_DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
+_VARIANCE = 2e-5
 _PHASE = 0.35
 
 
@@ -32,7 +32,8 @@ def search(problem, delays, widest, count=6):
     """Return the clouds whose traces look most like the one seen.
 
     Clouds are grown for a grid of growth scale, sticking and depletion; amplitudes and offsets
-    are fitted to each in closed form.
+    are fitted to each in closed form. In a steady gas a growth scale only stretches time, so
+    that one solution serves all scales.
 
     Parameters
     ----------
@@ -51,46 +52,96 @@ def search(problem, delays, widest, count=6):
         Best first, each at a minimum of the grid.
     """
     setup = problem.model.setup
-    births = setup.births
-    one = Births(np.array([births.median]), np.ones(1), births.median, births.effective, births.peak)
-    path = _thinned(setup.path, one.median)
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
     levels = _levels(setup)
-    grid = np.stack(np.meshgrid(_STICKING, levels, scales, indexing="ij"), axis=-1)
-    shape = grid.shape[:3]
-    sticking, level, scale = grid.reshape(-1, 3).T
-    vapour = setup.apparatus.vapour
-    growth = solve_cloud(
-        setup.properties, path, (one.times, one.weights),
-        CloudParameters(
-            per_mole(setup, level), np.exp(scale), vapour.mass_accommodation * np.exp(sticking),
-            np.full(scale.size, vapour.thermal_accommodation),
-            np.full(scale.size, setup.vapour_fraction), np.ones(scale.size),
-        ),
-        setup.start_radius,
-    )
+    sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
+    table = spread_table(problem.model.light, _VARIANCE)
+    width = problem.priors.get("scale", (0.0, 0.15))[1]
+    curves = _curves(setup, sticking, level, scales)
     found = []
     for delay in delays:
-        misfit, amplitude, final = _misfits(problem, growth, delay)
-        misfit = misfit + _disagreement(problem, amplitude, level)
-        misfit = misfit + (scale / _prior_width(problem)) ** 2
-        for i in _minima(misfit.reshape(shape)):
-            number = _number(problem, amplitude[:, i], level[i])
+        radius, density = _sampled(curves, scales, problem.bins.time - delay)
+        misfit, amplitude = _misfits(problem, table, radius, density)
+        misfit = misfit + _disagreement(problem, amplitude, level) + (scales / width) ** 2
+        for i in _minima(misfit):
+            row, column = np.unravel_index(i, misfit.shape)
             cloud = Cloud(
-                number=number, scale=scale[i], delay=delay, variance=2e-5,
-                accommodation=sticking[i], angles=(0.0,) * len(setup.apparatus.detectors),
+                number=_number(problem, amplitude[:, row, column], level[row]),
+                scale=scales[column], delay=delay, variance=_VARIANCE,
+                accommodation=sticking[row], angles=(0.0,) * len(setup.apparatus.detectors),
             )
-            found.append(Candidate(cloud, float(misfit[i]), float(final[i])))
+            found.append(Candidate(cloud, float(misfit[row, column]),
+                                   float(radius[row, column, -1])))
     return _distinct(sorted(found, key=lambda c: c.chi2), count)
 
 
-def _prior_width(problem):
-    return problem.priors.get("scale", (0.0, 0.15))[1]
+@dataclass(frozen=True)
+class _Curves:
+    """Radius and number density of the grid's clouds at nodes."""
+
+    time: np.ndarray
+    """Since the birth, shape (m,) [s]."""
+    birth: float
+    square: np.ndarray
+    """(r + l)^2, shape (l, s or 1, m) [m^2]."""
+    length: np.ndarray
+    """Shape (l, 1, 1) [m]."""
+    density: np.ndarray
+    """Shape (l, s or 1, m) [1/m^3]."""
+    stretched: bool
+    """Whether a scale is a stretch of time, one solution for all."""
 
 
-def _thinned(path, birth):
-    """Return the gas path with fewer nodes, still dense after the births."""
-    span = path.time[-1] - birth
+def _curves(setup, sticking, level, scales):
+    """Return the clouds of the grid, grown."""
+    stretched = setup.threshold is None
+    birth = setup.births.median
+    path = _thinned(setup.path, birth, np.exp(scales[-1]) if stretched else 1.0)
+    if not stretched:
+        sticking, level, scale = (
+            np.repeat(sticking, scales.size), np.repeat(level, scales.size),
+            np.tile(scales, level.size),
+        )
+    else:
+        scale = np.zeros(level.size)
+    vapour = setup.apparatus.vapour
+    growth = solve_cloud(
+        setup.properties, path, (np.array([birth]), np.ones(1)),
+        CloudParameters(
+            per_mole(setup, level), np.exp(scale), vapour.mass_accommodation * np.exp(sticking),
+            vapour.thermal_accommodation, setup.vapour_fraction, 1.0,
+        ),
+        setup.start_radius,
+    )
+    rows = -1 if stretched else scales.size
+    shape = (level.size, 1, path.time.size) if stretched else (-1, rows, path.time.size)
+    return _Curves(
+        path.time - birth, birth, growth.square[:, 0, :].reshape(shape),
+        growth.length.reshape(shape[0], shape[1], 1)[:, :1], growth.number_density.reshape(shape),
+        stretched,
+    )
+
+
+def _sampled(curves, scales, clock):
+    """Return radius [m] (zero before birth) and number density [1/m^3], shape (l, s, n)."""
+    age = clock - curves.birth
+    if curves.stretched:
+        age = np.exp(scales)[:, None] * age
+    index = np.clip(np.searchsorted(curves.time, age) - 1, 0, curves.time.size - 2)
+    t = (age - curves.time[index]) / (curves.time[index + 1] - curves.time[index])
+    t = np.clip(t, 0.0, 1.0)
+
+    def at(values):
+        values = values[:, 0] if curves.stretched else values
+        return values[..., index] + t * (values[..., index + 1] - values[..., index])
+
+    radius = np.sqrt(at(curves.square)) - curves.length
+    return np.where(age > 0.0, radius, 0.0), at(curves.density)
+
+
+def _thinned(path, birth, stretch=1.0):
+    """Return the gas path with fewer nodes, still dense after the births, and longer."""
+    span = (path.time[-1] - birth) * stretch
     later = birth + span * np.linspace(0.0, 1.0, _NODES) ** 2
     nodes = np.unique(np.concatenate([[min(path.time[0], birth)], later]))
     return GasPath(
@@ -135,40 +186,31 @@ def _free_radius(setup):
     return max(float(growth.radius[0, 0].max()), 1e-7)
 
 
-def _misfits(problem, growth, delay):
-    """Return chi-square [-], fitted ln amplitude per channel and final radius of every cloud."""
+def _misfits(problem, table, radius, density):
+    """Return chi-square [-], shape (l, s), and fitted ln amplitudes, shape (channels, l, s)."""
     bins, model = problem.bins, problem.model
-    clock = bins.time - delay
-    radius = growth.radius[:, 0, :]
-    index = np.clip(np.searchsorted(growth.time, clock) - 1, 0, growth.time.size - 2)
-    t = (clock - growth.time[index]) / (growth.time[index + 1] - growth.time[index])
-    t = np.clip(t, 0.0, 1.0)
-    square = growth.square[:, 0, :]
-    at = square[:, index] + t * (square[:, index + 1] - square[:, index])
-    at = np.sqrt(at) - growth.length[:, None]
-    born = clock > growth.birth_times[0, 0]
-    table = spread_table(model.light, 2e-5)
-    values, _, _ = look_up(table, np.log(np.maximum(at, 1e-9)))
-    values = values * born
-    density = growth.number_density
-    at_density = density[:, index] + t * (density[:, index + 1] - density[:, index])
-    total = np.zeros(radius.shape[0])
+    born = radius > 0.0
+    place = (np.log(np.maximum(radius, 1e-9)) - table.start) * (1.0 / table.step)
+    index = np.clip(np.rint(place), 0, table.cells.shape[0] - 1).astype(np.intp)
+    everywhere = born.all(axis=(0, 1))
+    total = np.zeros(radius.shape[:2])
     amplitudes = []
     for i, channel in enumerate(model.channels):
         weight, data = bins.weights[i], bins.values[i]
         row = model.extinction_row if channel.kind == "scatter" else channel.row
-        depth = at_density * values[row] * channel.path
+        depth = density * table.cells[:, row].take(index) * born * channel.path
         if channel.kind == "scatter":
-            shape = (channel.gain or 1.0) * at_density * values[channel.row] * np.exp(-depth)
+            shape = table.cells[:, channel.row].take(index) * born * density
+            shape = (channel.gain or 1.0) * shape * np.exp(-depth)
         else:
-            shape, data, weight = _optical_depth(depth, data, weight, born)
+            shape, data, weight = _optical_depth(depth, data, weight, everywhere)
         misfit, amplitude = _line_fit(shape, data, weight)
         total += misfit
         known = channel.gain is not None or channel.kind == "transmission"
         amplitudes.append(np.log(np.maximum(amplitude, 1e-30)) if known
-                          else np.full(total.size, np.nan))
+                          else np.full(total.shape, np.nan))
         total += np.where(amplitude > 0.0, 0.0, 1e3 + 0.1 * np.abs(misfit))
-    return total, np.array(amplitudes), radius[:, -1]
+    return total, np.array(amplitudes)
 
 
 def _optical_depth(depth, data, weight, born):
@@ -180,13 +222,13 @@ def _optical_depth(depth, data, weight, born):
 
 
 def _line_fit(shape, data, weight):
-    """Return the misfit of a factor times each shape plus an offset, and the factor, (v,)."""
+    """Return the misfit of a factor times each shape plus an offset, and the factor, (l, s)."""
     square = weight**2
     total = square.sum()
     centred = data - (square @ data) / total
     mean = shape @ square / total
     top = shape @ (square * centred)
-    power = np.einsum("vn,n,vn->v", shape, square, shape) - total * mean**2
+    power = (shape * shape) @ square - total * mean**2
     amplitude = top / np.maximum(power, 1e-300)
     return square @ centred**2 - amplitude * top, amplitude
 
@@ -197,6 +239,7 @@ def _disagreement(problem, amplitude, level):
              if channel.kind == "scatter" and channel.gain is not None]
     if not known:
         return 0.0
+    level = level[:, None]
     apart = np.abs(np.mean(amplitude[known], axis=0))
     scale = 0.002 * sum(float((problem.bins.weights[i] * problem.bins.values[i]) @
                               (problem.bins.weights[i] * problem.bins.values[i])) for i in known)
@@ -216,9 +259,9 @@ def _number(problem, amplitude, level):
 
 
 def _minima(misfit):
-    """Return flat indices of minima along the last axis that are also best of their neighbours."""
-    padded = np.pad(misfit, ((0, 0), (0, 0), (1, 1)), constant_values=np.inf)
-    low = (misfit <= padded[..., :-2]) & (misfit <= padded[..., 2:])
+    """Return flat indices of the minima along the scales, best first."""
+    padded = np.pad(misfit, ((0, 0), (1, 1)), constant_values=np.inf)
+    low = (misfit <= padded[:, :-2]) & (misfit <= padded[:, 2:])
     index = np.flatnonzero(low)
     return index[np.argsort(misfit.ravel()[index])][:40]
 
@@ -238,21 +281,3 @@ def _distinct(candidates, count, apart=0.02):
         if len(chosen) == count:
             break
     return chosen
-
-
-def renamed(problem, names):
-    """Return a problem with other free parameters.
-
-    Parameters
-    ----------
-    problem : Problem
-        What is fitted.
-    names : sequence of str
-        Free parameters.
-
-    Returns
-    -------
-    problem : Problem
-        The same data and model.
-    """
-    return replace(problem, names=tuple(names))

@@ -4,6 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from scatterfit.forward.model import linear_growth
 from scatterfit.inversion.problem import (
     LIMITS,
     SCALES,
@@ -15,6 +16,11 @@ from scatterfit.inversion.problem import (
 )
 
 _DAMPING = 1e-3
+# How far first order serves: what is left out is of the square of these.
+_NEAR = {
+    "number": 0.02, "scale": 0.004, "accommodation": 0.05, "temperature": 5e-4, "vapour": 4e-3,
+    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3,
+}
 
 
 @dataclass(frozen=True)
@@ -27,8 +33,11 @@ class Solution:
     converged: bool
 
 
-def descend(problem, cloud, iterations=12, tolerance=1e-3):
+def descend(problem, cloud, iterations=12, tolerance=1e-3, linear=None, rounds=4):
     """Return the end of a Levenberg-Marquardt descent.
+
+    Growth is solved where the descent starts and followed to first order; where the descent ends
+    far from there it is solved again and the descent goes on.
 
     Parameters
     ----------
@@ -37,17 +46,44 @@ def descend(problem, cloud, iterations=12, tolerance=1e-3):
     cloud : Cloud
         Where to start.
     iterations : int
-        At the most.
+        At the most, a round.
     tolerance : float
-        Relative change of chi-square, or absolute where it is small, that ends the descent [-].
+        Change of chi-square, in units of its size over 10,000 where that is more than one, that
+        ends the descent [-].
+    linear : LinearGrowth, optional
+        Growth solved at the start.
+    rounds : int
+        How often growth may be solved.
 
     Returns
     -------
     solution : Solution
         The best cloud seen.
     """
+    turns, settled = 0, False
+    for turn in range(rounds):
+        if linear is None or turn:
+            linear = linear_growth(problem.model.setup, cloud, problem.names, linear)
+        best, count, settled = _descend_linear(problem, cloud, linear, iterations, tolerance)
+        turns += count
+        cloud = best.cloud
+        if _near(linear, cloud):
+            break
+    return Solution(best, turns, settled)
+
+
+def _near(linear, cloud):
+    """Return whether a cloud is so near to where growth was solved that first order serves."""
+    return all(
+        abs(getattr(cloud, name) - getattr(linear.cloud, name)) < _NEAR[name]
+        for name in linear.log_radius_by
+    )
+
+
+def _descend_linear(problem, cloud, linear, iterations, tolerance):
+    """Return the best evaluation with growth followed to first order, turns and convergence."""
     scale = np.array([SCALES[family(name)] for name in problem.names])
-    best = evaluate(problem, cloud)
+    best = evaluate(problem, cloud, linear=linear)
     damping, turn = _DAMPING, 0
     for turn in range(1, iterations + 1):
         here = np.array([value_of(best.cloud, name) for name in problem.names])
@@ -59,7 +95,7 @@ def descend(problem, cloud, iterations=12, tolerance=1e-3):
         for _ in range(6):
             step = _step(normal, gradient, held, damping) * scale
             trial_cloud = shifted(best.cloud, problem.names, here + step)
-            trial = evaluate(problem, trial_cloud)
+            trial = evaluate(problem, trial_cloud, linear=linear, near=best.state.table)
             if trial.chi2 < best.chi2:
                 gain = True
                 break
@@ -67,13 +103,13 @@ def descend(problem, cloud, iterations=12, tolerance=1e-3):
             if damping > 1e8:
                 break
         if not gain:
-            return Solution(best, turn, converged=True)
+            return best, turn, True
         drop = best.chi2 - trial.chi2
         best = trial
         damping = max(damping / 6.0, 1e-9)
         if drop < tolerance * max(1.0, 1e-4 * best.chi2):
-            return Solution(best, turn, converged=True)
-    return Solution(best, turn, converged=False)
+            return best, turn, True
+    return best, turn, False
 
 
 def _held(names, here, gradient):
@@ -119,13 +155,13 @@ def polish(problem, solution):
         low, high = LIMITS[family(name)]
         parameters.add(f"p{i}", value=0.0, min=(low - start[i]) / scale[i] - 1e-9,
                        max=(high - start[i]) / scale[i] + 1e-9)
-    seen = {}
+    seen, linear, near = {}, solution.best.state.linear, solution.best.state.table
 
     def at(values):
         key = tuple(values[f"p{i}"].value for i in range(len(names)))
         if key not in seen:
             cloud = shifted(solution.best.cloud, names, start + scale * np.array(key))
-            seen[key] = evaluate(problem, cloud)
+            seen[key] = evaluate(problem, cloud, linear=linear, near=near)
         return seen[key]
 
     def residual(values):
@@ -139,26 +175,3 @@ def polish(problem, solution):
         fitter.leastsq(Dfun=jacobian, col_deriv=0, max_nfev=12, ftol=1e-7, xtol=1e-6)
     best = min([solution.best, *seen.values()], key=lambda found: found.chi2)
     return Solution(best, solution.iterations + len(seen), solution.converged)
-
-
-def covariance(problem, evaluation):
-    """Return the covariance of the free parameters, linear ones marginalised.
-
-    Parameters
-    ----------
-    problem : Problem
-        What was fitted.
-    evaluation : Evaluation
-        At the solution, with its Jacobian.
-
-    Returns
-    -------
-    matrix : ndarray, shape (p, p)
-        Covariance of the parameters in the order of ``problem.names`` [any].
-    """
-    scale = np.array([SCALES[family(name)] for name in problem.names])
-    jacobian = evaluation.jacobian * scale
-    normal = jacobian.T @ jacobian
-    values, vectors = np.linalg.eigh(normal)
-    safe = np.maximum(values, 1e-14 * max(values.max(), 1e-300))
-    return (vectors / safe) @ vectors.T * np.outer(scale, scale)

@@ -4,6 +4,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from scatterfit.forward.model import linear_growth
 from scatterfit.inversion.problem import evaluate
 
 _WHITE = 1.25
@@ -82,7 +83,11 @@ def posterior(problem, best, inputs):
     """
     names = problem.names + tuple(inputs["names"])
     priors = {**problem.priors, **inputs["priors"]}
-    wide = evaluate(replace(problem, names=names, priors=priors), best.cloud, more=inputs["more"])
+    linear = linear_growth(problem.model.setup, best.cloud, names, best.state.linear)
+    wide = evaluate(
+        replace(problem, names=names, priors=priors), best.cloud, more=inputs["more"],
+        linear=linear,
+    )
     all_names = (*names, *(name for name, _ in inputs["more"]))
     data_rows = wide.residual.size - len(priors)
     jacobian = wide.jacobian

@@ -101,7 +101,7 @@ def unexplained(fit):
     return fit.best.chi2 / max(fit.chi2_null, 1e-300)
 
 
-def rivals_left(fit, inflation, final_radius):
+def rivals_left(fit, inflation, best_radius):
     """Return the rivals that the data cannot exclude.
 
     Parameters
@@ -110,20 +110,19 @@ def rivals_left(fit, inflation, final_radius):
         Best cloud and its rivals.
     inflation : float
         Of the noise, for residuals that are not white [-].
-    final_radius : callable
-        Final radius [m] of an evaluation.
+    best_radius : float
+        Final radius of the best cloud [m].
 
     Returns
     -------
-    left : list of Evaluation
+    left : list of Rival
         Rivals within a factor 1000 of the best in likelihood, at another radius.
     """
-    best = final_radius(fit.best)
     scale = max(1.0, inflation)
     return [
         rival for rival in fit.rivals
-        if (rival.chi2 - fit.best.chi2) / scale < EXCLUDED
-        and abs(np.log(final_radius(rival) / best)) > 0.01
+        if rival.delta_chi2 / scale < EXCLUDED
+        and abs(np.log(rival.final_radius / best_radius)) > 0.01
     ]
 
 

@@ -10,7 +10,7 @@ _CREEP = 0.01
 """One percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
 
 
-def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
+def bench_inputs(prepared, problem, best, index_shift=2e-4):
     """Return what is let loose, within its sigma, when the fit's uncertainty is worked out.
 
     Parameters
@@ -19,7 +19,7 @@ def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
         The pulse.
     problem : Problem
         What was fitted.
-    cloud : Cloud
+    best : Evaluation
         The solution.
     index_shift : float
         By how much the index model is off [-].
@@ -30,7 +30,7 @@ def bench_inputs(prepared, problem, cloud, index_shift=2e-4):
         ``"names"``, ``"more"`` and ``"priors"`` for :func:`posterior`.
     """
     priors, columns = {}, []
-    for name, sigma, parts in _signal_inputs(prepared, problem, cloud, index_shift):
+    for name, sigma, parts in _signal_inputs(prepared, problem, best, index_shift):
         priors[name] = (0.0, sigma)
         columns.append((name, parts))
     priors["creep"] = (0.0, _CREEP)
@@ -79,11 +79,12 @@ def temperature_relative_sigma(apparatus):
     return sigmas.get("chamber.temperature_K", 0.0) / apparatus.chamber.temperature
 
 
-def _signal_inputs(prepared, problem, cloud, index_shift):
+def _signal_inputs(prepared, problem, best, index_shift):
     """Return (name, sigma, derivative of each channel's shape) of inputs that act on the light."""
     time = problem.bins.time
+    cloud, linear = best.cloud, best.state.linear
     apparatus, model = prepared.setup.apparatus, problem.model
-    signals, _ = channel_signals(model, cloud, time, ("number",))
+    signals, _ = channel_signals(model, cloud, time, ("number",), linear)
     none = np.zeros_like(time)
     found = []
     for i, channel in enumerate(model.channels):
@@ -106,8 +107,8 @@ def _signal_inputs(prepared, problem, cloud, index_shift):
     sigma = _index_sigma(prepared)
     if sigma:
         # The two index models share their angles' base; the difference is the index alone.
-        plain, _ = channel_signals(prepared.model, cloud, time)
-        shifted, _ = channel_signals(prepared.index_model, cloud, time)
+        plain, _ = channel_signals(prepared.model, cloud, time, (), linear)
+        shifted, _ = channel_signals(prepared.index_model, cloud, time, (), linear)
         parts = [(b.shape - a.shape) / index_shift for a, b in zip(plain, shifted, strict=True)]
         found.append(("vapour.refractive_index", sigma, parts))
     return found

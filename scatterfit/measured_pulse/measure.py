@@ -166,7 +166,7 @@ def _nothing(prepared, fit, gas, warnings):
 def _result(prepared, fit, gas, warnings):
     """Return the result of a pulse with a cloud."""
     setup, problem = prepared.setup, fit.problem
-    inputs = bench_inputs(prepared, problem, fit.best.cloud)
+    inputs = bench_inputs(prepared, problem, fit.best)
     after = posterior(problem, fit.best, inputs)
     curve, (final, noise, parts) = q.radius_curve(setup, problem, after.state, after)
     floor = _RADIUS_FLOOR * final.value
@@ -180,7 +180,7 @@ def _result(prepared, fit, gas, warnings):
     budget += more
     scale = q.quantity(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
     turns = _matched(prepared, fit, curve)
-    left = rivals_left(fit, after.inflation, _final_radius)
+    left = rivals_left(fit, after.inflation, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)
     reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
     verdict = ("rejected" if not describes(fit) else "ambiguous" if left else "accepted")
@@ -204,7 +204,7 @@ def _final_radius(evaluation):
 
 def _rates(setup, fit, after, reference):
     """Return what is quoted at the reference radius, and the budget of the growth rate."""
-    found = q.at_reference(setup, fit.best.cloud, after, reference)
+    found = q.at_reference(setup, after, reference)
     intrinsic = _BASE_SPREAD**2 + fit.best.cloud.variance
     shift, noise, parts = after.propagate({"variance": 1.0})
     spread_sigma = np.sqrt(noise + sum(parts.values())) / (2.0 * np.sqrt(intrinsic))
@@ -243,7 +243,7 @@ def _budget(name, factor, noise, parts, floor, fit):
 def _matched(prepared, fit, curve):
     """Return the extrema of all channels and the kernel's that they match."""
     table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
-    log_radius = table.start + table.step * np.arange(table.values.shape[1])
+    log_radius = table.log_radius
     start = prepared.setup.births.median + fit.best.cloud.delay
     found = []
 
@@ -267,7 +267,7 @@ def _findings(prepared, fit, scale, turns, left):
     found = residual_findings(fit) + sample_findings(fit)
     found += growth_findings(fit, (scale.value, prior), setup)
     if left:
-        radii = ", ".join(f"{_final_radius(r) * 1e6:.3f}" for r in left)
+        radii = ", ".join(f"{r.final_radius * 1e6:.3f}" for r in left)
         found.append(Finding("ambiguous-lobe", (
             f"a final radius of {radii} um cannot be excluded: a second detector at another "
             "angle, a longer record, or a better known temperature would settle it"
@@ -306,9 +306,9 @@ def _alternatives(fit, number):
     """Return the rivals as numbers."""
     return tuple(
         Alternative(
-            _final_radius(rival),
+            rival.final_radius,
             float(np.exp(rival.cloud.number)) if number.concentration is not None else None,
-            float(rival.chi2 - fit.best.chi2),
+            rival.delta_chi2,
         )
         for rival in fit.rivals
     )

@@ -13,6 +13,8 @@ from scatterfit.inversion.data import channel_data
 
 _FEWEST = 20
 _REACH = 3.0
+_LEAST_SIZE = 0.25
+_STRIDE = 2
 INDEX_STEP = 2e-4
 """By how much the index of the second model is higher [-]."""
 
@@ -150,7 +152,12 @@ def pulse_model(setup, kernel, relative, angles):
     if apparatus.transmission is not None:
         t = apparatus.transmission
         channels.append(Channel(t.column, "transmission", count + 1, t.path, None, 0.0))
-    light = cloud_light(np.array(rows), table.log_radius_start, table.step)
+    # Sizes that scatter next to nothing are cut; every second point carries the averaged curves.
+    first = int(np.searchsorted(table.radius * kernel.wavenumber, _LEAST_SIZE))
+    light = cloud_light(
+        np.array(rows)[:, first::_STRIDE], table.log_radius_start + first * table.step,
+        _STRIDE * table.step,
+    )
     return PulseModel(setup, light, tuple(channels), extinction_row=count)
 
 

@@ -8,7 +8,6 @@ from scatterfit import matter
 from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.properties import saturation_pressure
 from scatterfit.droplet_growth.single_droplet import growth_rate
-from scatterfit.forward.model import STEPS, grow
 from scatterfit.measured_pulse.bench_inputs import (
     temperature_relative_sigma,
     vapour_relative_sigma,
@@ -154,17 +153,15 @@ def radius_curve(setup, problem, state, posterior):
     return Curve(time[chosen], radius, radius * relative), quantity(final, posterior)
 
 
-def at_reference(setup, cloud, posterior, radius):
-    """Return what is quoted at the reference radius, or ``None`` where it is not reached.
+def at_reference(setup, posterior, radius):
+    """Return what is quoted at the reference radius, or nothing where it is not reached.
 
     Parameters
     ----------
     setup : GrowthSetup
         Of the pulse.
-    cloud : Cloud
-        The solution.
     posterior : Posterior
-        Of the fit.
+        Of the fit, with the solved cloud.
     radius : float
         Reference radius [m].
 
@@ -174,41 +171,38 @@ def at_reference(setup, cloud, posterior, radius):
         ``"rate"`` [m/s], ``"warmth"``, the droplet's temperature [K], and ``"spread"``, the
         births' part of the relative spread of radius [-]; empty where not reached.
     """
-    moving = [name for name in posterior.names if name in STEPS]
-    growth = grow(setup, cloud, moving)
+    linear = posterior.state.linear
+    growth = linear.growth
     weights = median_weights(setup.births)
-    length = growth.length[:, None]
-    square = np.einsum("c,vcm->vm", weights, growth.square)
-    median = np.sqrt(square) - length
-    speed = np.einsum("c,vcm->vm", weights, growth.square_rate) / (2.0 * np.sqrt(square))
-    warmth = np.einsum("c,vcm->vm", weights, growth.droplet_temperature)
+    length = growth.length[0]
     late = growth.time >= growth.birth_times[0].max()
-    if not late.any() or median[0, late].max() < radius or median[0, late][0] > radius:
+    square = (weights @ growth.square[0])[late]
+    median = np.sqrt(square) - length
+    if not late.any() or median.max() < radius or median[0] > radius:
         return {}
-    rates, temperatures = [], []
-    for v in range(median.shape[0]):
-        rates.append(_at(radius, median[v, late], speed[v, late]))
-        temperatures.append(_at(radius, median[v, late], warmth[v, late]))
-    rates, temperatures = np.array(rates), np.array(temperatures)
-
-    def derived(values):
-        gradient = {name: float((values[i + 1] - values[0]) / STEPS[name])
-                    for i, name in enumerate(moving)}
-        if "number" in gradient:
-            gradient["depletion"] = gradient["number"]
-        return Derived(float(values[0]), gradient)
-
-    classes = growth.radius[0][:, late]
-    moment = np.array([_at(radius, median[0, late], row) for row in np.log(classes)])
-    mean = growth.weights @ moment
-    spread = float(np.sqrt(growth.weights @ (moment - mean) ** 2))
-    return {"rate": derived(rates), "warmth": derived(temperatures), "spread": spread}
+    time = growth.time[late]
+    speed = (weights @ growth.square_rate[0])[late] / (2.0 * np.sqrt(square))
+    rate = _at(radius, median, speed)
+    bend = _at(radius, median, np.gradient(speed, time)) / rate
+    gradient = {}
+    for name, rows in linear.log_radius_by.items():
+        change = median * (weights @ rows)[late]
+        # At fixed radius: what the curve gains in speed, less what it would have anyway there.
+        gradient[name] = (_at(radius, median, np.gradient(change, time))
+                          - bend * _at(radius, median, change))
+    if "number" in gradient:
+        gradient["depletion"] = gradient["number"]
+    warmth = _at(radius, median, (weights @ growth.droplet_temperature[0])[late])
+    logs = np.log(growth.radius[0][:, late])
+    moment = np.array([_at(radius, median, row) for row in logs])
+    spread = float(np.sqrt(growth.weights @ (moment - growth.weights @ moment) ** 2))
+    return {"rate": Derived(rate, gradient), "warmth": Derived(warmth, {"temperature": warmth}),
+            "spread": spread}
 
 
 def _at(radius, grown, values):
     """Return a value where a growing radius passes a given one."""
-    order = np.maximum.accumulate(grown)
-    return float(np.interp(radius, order, values))
+    return float(np.interp(radius, np.maximum.accumulate(grown), values))
 
 
 def growth_scale(setup, cloud, radius):
