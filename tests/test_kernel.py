@@ -103,6 +103,20 @@ def test_table_against_resolved_averages(kernel, x):
     assert np.array(found) * WAVENUMBER**2 == pytest.approx(expected, rel=3e-4)
 
 
+@pytest.mark.parametrize("m", [1.4, 1.5])
+def test_table_of_other_liquids_to_the_back(m):
+    axes, bars = (90.0, 120.0, 175.0), (1e-3, 1e-3, 4e-3, 1e-4)
+    views = tuple(View(np.radians(axis), np.radians(1.0)) for axis in axes)
+    recipe = Recipe(None, views, 0.0, 0.003, table_count(65.0, 0.003))
+    (node,) = build_nodes(recipe, np.array([m]))
+    for x in (30.0, 45.0, 60.0):
+        point = int(np.searchsorted(recipe.size_parameter, x))
+        size = recipe.size_parameter[point]
+        expected = resolved_average(size, m, recipe.cones, recipe.spread, 1e-4)
+        found = [*(light[0, point] for light in node.collected), node.extinction[point]]
+        assert np.all(np.abs(found / expected - 1) < bars)
+
+
 def test_widening_of_resonances_keeps_all_light():
     # two half spheres collect everything: for a droplet that does not absorb, the extinction
     half = np.pi / 2 - 1e-9
