@@ -5,7 +5,6 @@ from pathlib import Path
 import scatterfit
 from scatterfit.cli_pulse import fit_files, write_result
 from scatterfit.files import write_json, write_trace
-from scatterfit.files_kernel import default_store
 from scatterfit.report.comparison import comparison_text
 
 BENCH = """\
@@ -54,6 +53,8 @@ carrier = {nitrogen = 0.6, argon = 0.4}
 [chamber]
 temperature_K = 297.65
 temperature_K_sigma = 0.1
+pressure_kPa = 95.0
+pressure_kPa_sigma = 0.05
 path_mm = 150.0
 """
 """Chamber file of the invented bench."""
@@ -95,8 +96,7 @@ def run_demo(folder):
 def _simulate(bench, path, number, seed):
     """Write one pulse and return what is in it."""
     (pulse,) = scatterfit.simulate(
-        bench, count=1, number=number, duration=0.08, rate=5e4, noise=0.01, seed=seed,
-        store=default_store(),
+        bench, count=1, number=number, duration=0.08, rate=5e4, noise=0.01, seed=seed
     )
     write_trace(path, pulse.time, pulse.columns)
     return dict(pulse.truth)
@@ -107,12 +107,14 @@ def _next(folder, chamber):
     trace = folder / "some.csv"
     return "\n".join([
         f"Written to {folder}: traces (.csv), results (.json), figures (.png), truth.json.",
+        f"Look at {folder / 'some.png'}. Then:",
         "",
-        "Next:",
-        f"  open {folder / 'some.png'}",
-        f"  scatterfit fit {chamber} {trace}        the same fit, all that it says",
-        f"  scatterfit check {chamber} {trace}      what the bench implies",
-        "  scatterfit new bench.toml               a chamber file for your own bench",
+        f"  scatterfit fit {chamber} {trace}",
+        "      one pulse: all that its fit says",
+        f"  scatterfit check {chamber} {trace}",
+        "      what the bench implies, how the trace was understood",
+        "  scatterfit new bench.toml",
+        "      a chamber file for your own bench",
         "",
         "Lasers, vessels under pressure and flammable vapours harm people: local codes and",
         "people licensed for such work decide what is safe on a real bench.",

@@ -4,9 +4,7 @@ import json
 from pathlib import Path
 
 import scatterfit
-from scatterfit.errors import TraceError
-from scatterfit.files import load_pulse, parse_assignment, write_json, write_trace
-from scatterfit.files_kernel import default_store
+from scatterfit.files import parse_assignment, write_json, write_trace
 
 
 def fit_files(chamber, trace, settings=(), exclude=()):
@@ -29,13 +27,7 @@ def fit_files(chamber, trace, settings=(), exclude=()):
         The result; verdict ``failed`` where the trace could not be used.
     """
     overrides = dict(parse_assignment(setting) for setting in settings)
-    try:
-        bench, record, used = load_pulse(chamber, trace, overrides)
-        return scatterfit.fit(bench, record, overrides=used, exclude=exclude, store=default_store())
-    except TraceError as error:
-        from scatterfit.measured_pulse.record import MeasuredPulse, Reason
-
-        return MeasuredPulse(str(trace), "failed", (Reason("trace-unusable", str(error)),))
+    return scatterfit.fit_file(chamber, trace, overrides=overrides, exclude=exclude)
 
 
 def result_text(result):
@@ -102,7 +94,7 @@ def simulate_to_folder(chamber, folder, settings):
     """
     bench = scatterfit.read_chamber(chamber)
     folder = Path(folder)
-    pulses = scatterfit.simulate(bench, store=default_store(), **settings)
+    pulses = scatterfit.simulate(bench, **settings)
     folder.mkdir(parents=True, exist_ok=True)
     copy = folder / Path(chamber).name
     if not (copy.exists() and copy.samefile(chamber)):

@@ -1,6 +1,10 @@
 """The command line: what is printed where, and with which exit code."""
 
+import contextlib
+import io
+import json
 import os
+import re
 import subprocess
 import sys
 from pathlib import Path
@@ -224,6 +228,114 @@ def test_a_wrong_setting_is_exit_2(capsys, bench, setting):
     code, _, err = run(capsys, "check", bench, "--set", setting)
     assert code == 2
     assert_one_plain_line(err)
+
+
+SMALL = NO_GAUGE.replace("[growth]\ntemperature_K = 268.0\npressure_kPa = 70.0\n", "").replace(
+    "[pulse]\nhold_ms = 1.2\ntemperature_K = 243.0\npressure_kPa = 54.0\n",
+    '[pressure]\ncolumn = "gauge_kPa"\n',
+).replace("dark_V", "gain_V_m = 1e5\ndark_V").replace("full_scale_V = 2.0", "full_scale_V = 10.0")
+TRUE_NUMBER = 4000.0
+
+
+@pytest.fixture(scope="module")
+def simulated(tmp_path_factory):
+    """Return the folder of one simulated pulse."""
+    folder = tmp_path_factory.mktemp("simulated")
+    chamber = folder / "small.toml"
+    chamber.write_text(SMALL, encoding="utf-8")
+    words = ["--number", TRUE_NUMBER, "--duration-ms", 50, "--rate-khz", 20, "--seed", 5]
+    assert main(["simulate", str(chamber), "--out", str(folder / "out"), *map(str, words)]) == 0
+    return folder / "out"
+
+
+@pytest.fixture(scope="module")
+def fitted(simulated, tmp_path_factory):
+    """Return exit code, JSON and standard error of its fit, and the folder of its files."""
+    out, err, folder = io.StringIO(), io.StringIO(), tmp_path_factory.mktemp("fitted") / "deep"
+    with contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
+        code = main([
+            "fit", str(simulated / "small.toml"), str(simulated / "pulse-001.csv"), "--json",
+            "--out", str(folder), "--set", "chamber.temperature_K=295.01", "--exclude-ms", "30",
+            "31.5",
+        ])
+    return code, json.loads(out.getvalue()), err.getvalue(), folder
+
+
+def test_simulate_writes_traces_truth_and_the_chamber_file(simulated):
+    names = sorted(path.name for path in simulated.iterdir())
+    assert names == ["pulse-001.csv", "small.toml", "truth.json"]
+    truth = json.loads((simulated / "truth.json").read_text(encoding="utf-8"))["pulse-001.csv"]
+    assert truth["N_per_cm3"] == TRUE_NUMBER
+    assert (simulated / "small.toml").read_text(encoding="utf-8") == SMALL
+
+
+def test_the_same_seed_gives_the_same_pulse(capsys, simulated, tmp_path):
+    words = ["simulate", simulated / "small.toml", "--out", tmp_path / "again", "--number",
+             TRUE_NUMBER, "--duration-ms", 50, "--rate-khz", 20]
+    for seed, same in ((5, True), (6, False)):
+        assert run(capsys, *words, "--seed", seed)[0] == 0
+        again = (tmp_path / "again" / "pulse-001.csv").read_bytes()
+        assert (again == (simulated / "pulse-001.csv").read_bytes()) is same
+
+
+def test_fit_finds_what_simulate_put_in(simulated, fitted):
+    code, result, _, _ = fitted
+    truth = json.loads((simulated / "truth.json").read_text(encoding="utf-8"))["pulse-001.csv"]
+    assert code == 0
+    assert result["verdict"] == "accepted"
+    radius, number = result["final_radius_um"], result["concentration_per_cm3"]
+    assert radius["value"] == pytest.approx(truth["final_radius_um"], rel=5e-3)
+    assert abs(number["value"] - TRUE_NUMBER) < 4 * number["sigma"]
+
+
+def test_fit_records_what_was_set_by_hand(fitted):
+    provenance = fitted[1]["provenance"]
+    assert provenance["overrides"] == {"chamber.temperature_K": 295.01}
+    assert provenance["exclude_ms"] == [[30.0, 31.5]]
+
+
+def test_fit_writes_json_and_figure_and_says_so_on_standard_error(fitted):
+    _, result, err, folder = fitted
+    written = folder / "pulse-001.json"
+    assert json.loads(written.read_text(encoding="utf-8")) == result
+    assert (folder / "pulse-001.png").read_bytes().startswith(b"\x89PNG")
+    assert err.splitlines() == [f"wrote {written}", f"wrote {folder / 'pulse-001.png'}"]
+
+
+@pytest.mark.parametrize("name", ["damaged.csv", "missing.csv"])
+def test_a_failed_fit_is_exit_1_and_still_prints_its_json(capsys, simulated, tmp_path, name):
+    text = (simulated / "pulse-001.csv").read_text(encoding="utf-8").splitlines()
+    text[40] = text[39]
+    (tmp_path / "damaged.csv").write_text("\n".join(text), encoding="utf-8")
+    code, out, err = run(capsys, "fit", simulated / "small.toml", tmp_path / name, "--json")
+    assert (code, err) == (1, "")
+    result = json.loads(out)
+    assert result["verdict"] == "failed"
+    assert result["final_radius_um"] is None
+    assert name in result["reasons"][0]["text"]
+
+
+def test_a_blank_is_rejected_with_a_limit_and_exit_0(capsys, simulated, tmp_path):
+    words = ["--number", 0, "--duration-ms", 50, "--rate-khz", 20]
+    assert run(capsys, "simulate", simulated / "small.toml", "--out", tmp_path, *words)[0] == 0
+    code, out, _ = run(capsys, "fit", simulated / "small.toml", tmp_path / "pulse-001.csv")
+    assert code == 0
+    assert out.startswith("REJECTED")
+    assert "[no-cloud]" in out
+    assert "upper limit (95 percent)" in out
+
+
+@pytest.mark.slow
+def test_demo_needs_nothing_and_shows_found_beside_true(capsys, tmp_path):
+    code, out, err = run(capsys, "demo", "--out", tmp_path / "demo")
+    assert (code, err) == (0, "")
+    assert out.count("accepted") == 3
+    assert "blank.csv, seed 14: rejected (no-cloud)" in out
+    written = {path.suffix for path in (tmp_path / "demo").iterdir()}
+    assert written == {".csv", ".json", ".png", ".toml"}
+    apart = [float(found) for found in re.findall(r"([+-][\d.]+) σ", out)]
+    assert len(apart) == 21
+    assert max(map(abs, apart)) < 4
 
 
 @pytest.mark.skipif(os.name == "nt", reason="pipes close differently there")

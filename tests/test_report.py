@@ -13,6 +13,7 @@ from uncertainties import ufloat
 
 from scatterfit.errors import InvalidInputError
 from scatterfit.measured_pulse.record import MeasuredPulse
+from scatterfit.report.comparison import comparison_text
 from scatterfit.report.figures import WIDTH_INCH, pulse_figure, save_pulse_figure
 from scatterfit.report.rounding import format_number, format_quantity, pretty_unit
 from scatterfit.report.summary import WIDTH, summary_text
@@ -190,7 +191,8 @@ def test_summary_of_a_file_that_could_not_be_used_is_short():
 def test_figure_has_a_panel_for_each_trace_its_residuals_and_the_radius():
     figure = pulse_figure(accepted(), [channel(), channel("transmitted_V", "transmitted")])
     labels = [axis.get_ylabel() for axis in figure.axes]
-    assert labels == ["scattered, 30°\n[V]", "residual\n[noise]", "transmitted\n[V]",
+    assert labels == ["scattered, 30°\nscatter1_V [V]", "residual\n[noise]",
+                      "transmitted\ntransmitted_V [V]",
                       "residual\n[noise]", "radius\n[µm]"]
     assert figure.axes[-1].get_xlabel() == "time [ms]"
     assert "accepted" in figure.get_suptitle()
@@ -205,7 +207,7 @@ def test_figure_marks_every_matched_extremum():
 
 def test_figure_of_a_rejected_pulse_shows_the_trace_alone():
     figure = pulse_figure(rejected(), [channel(fitted=False)])
-    assert [axis.get_ylabel() for axis in figure.axes] == ["scattered, 30°\n[V]"]
+    assert [axis.get_ylabel() for axis in figure.axes] == ["scattered, 30°\nscatter1_V [V]"]
     assert "rejected" in figure.get_suptitle()
     assert "95 percent" in figure.get_suptitle()
 
@@ -219,6 +221,29 @@ def test_channels_differ_in_colour():
     figure = pulse_figure(rejected(), channels)
     colours = {to_hex(axis.lines[1].get_color()) for axis in figure.axes[::2]}
     assert len(colours) == 4
+
+
+TRUTH = {"final_radius_um": 1.79113, "N_per_cm3": 5842.7, "birth_ms": 8.429, "S_growth": 1.49,
+         "T_nuc": 243.37, "S_nuc": 10.01, "J_per_cm3_s": 4.11e6}
+
+
+def test_comparison_states_the_difference_in_sigmas():
+    lines = comparison_text("a.csv", accepted(), TRUTH).splitlines()
+    assert lines[0] == "a.csv: accepted (an-invented-code)"
+    assert lines[2].split()[-2:] == ["+1.0", "σ"]
+    assert lines[3].split()[-2:] == ["+0.0", "σ"]
+    assert max(map(len, lines)) <= WIDTH
+
+
+def test_comparison_of_a_blank_shows_the_limit():
+    text = comparison_text("b.csv", rejected(), TRUTH | {"N_per_cm3": 0.0})
+    assert "at most 3.2" in text
+    assert "σ" not in text
+
+
+def test_comparison_of_seeded_pulses_claims_no_rate():
+    text = comparison_text("c.csv", rejected(), TRUTH | {"J_per_cm3_s": None})
+    assert re.search(r"nucleation rate.*not determined +-$", text, re.MULTILINE)
 
 
 @pytest.mark.parametrize("suffix", ["png", "pdf", "svg"])

@@ -3,13 +3,13 @@
 from scatterfit.report.rounding import NOT_DETERMINED, format_number, format_quantity
 
 _ROWS = (
-    ("final radius", ("final_radius_um",), "final_radius_um", "um"),
-    ("number", ("concentration_per_cm3",), "N_per_cm3", "1/cm3"),
-    ("median birth", ("birth_ms",), "birth_ms", "ms"),
-    ("saturation ratio, growth", ("growth_saturation_ratio",), "S_growth", ""),
-    ("temperature, nucleation", ("nucleation", "temperature_K"), "T_nuc", "K"),
-    ("saturation ratio, nucleation", ("nucleation", "saturation_ratio"), "S_nuc", ""),
-    ("nucleation rate", ("nucleation", "rate_per_cm3_s"), "J_per_cm3_s", "1/(cm3 s)"),
+    ("final radius [µm]", ("final_radius_um",), "final_radius_um"),
+    ("number [cm⁻³]", ("concentration_per_cm3",), "N_per_cm3"),
+    ("median birth [ms]", ("birth_ms",), "birth_ms"),
+    ("saturation ratio, growth", ("growth_saturation_ratio",), "S_growth"),
+    ("temperature, nucleation [K]", ("nucleation", "temperature_K"), "T_nuc"),
+    ("saturation ratio, nucleation", ("nucleation", "saturation_ratio"), "S_nuc"),
+    ("nucleation rate [cm⁻³ s⁻¹]", ("nucleation", "rate_per_cm3_s"), "J_per_cm3_s"),
 )
 
 
@@ -35,25 +35,26 @@ def comparison_text(name, result, truth):
     lines = [f"{name}: {result['verdict']}" + (f" ({codes})" if codes else "")]
     if not truth["N_per_cm3"]:
         limit = result["upper_limit_per_cm3"]
-        found = NOT_DETERMINED if limit is None else f"at most {format_number(limit, '1/cm3', 2)}"
-        return "\n".join([*lines, _row("number", found, "0", "")])
-    lines.append(_row("", "found", "true", "off by"))
-    for label, path, key, unit in _ROWS:
+        found = NOT_DETERMINED if limit is None else f"at most {format_number(limit, digits=2)}"
+        return "\n".join([*lines, _row("number [cm⁻³]", found, "0", "")])
+    lines.append(_row("", "found", "put in", "apart"))
+    for label, path, key in _ROWS:
         found = result
         for step in path:
             found = (found or {}).get(step)
-        lines.append(_compared(label, found, truth[key], unit))
+        lines.append(_compared(label, found, truth[key]))
     return "\n".join(lines)
 
 
-def _compared(label, found, true, unit):
-    shown = format_number(true, unit, digits=5)
+def _compared(label, found, true):
+    shown = "-" if true is None else format_number(true, digits=5)
     if found is None:
         return _row(label, NOT_DETERMINED, shown, "")
-    text = format_quantity(found["value"], found["sigma"], unit)
-    off = f"{(found['value'] - true) / found['sigma']:+.1f} σ" if found["sigma"] else ""
-    return _row(label, text, shown, off)
+    text = format_quantity(found["value"], found["sigma"])
+    comparable = true is not None and found["sigma"]
+    apart = f"{(found['value'] - true) / found['sigma']:+.1f} σ" if comparable else ""
+    return _row(label, text, shown, apart)
 
 
-def _row(label, found, true, off):
-    return f"  {label:<29}{found:<28}{true:<20}{off}".rstrip()
+def _row(label, found, true, apart):
+    return f"  {label:<30}{found:<24}{true:<14}{apart}".rstrip()

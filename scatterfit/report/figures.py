@@ -36,7 +36,7 @@ _STYLE = {"labelsize": 6.5, "length": 2.5, "width": 0.6, "direction": "in"}
 _HEIGHTS = {"signal": 1.15, "residual": 0.45, "radius": 1.35}
 _SMALL, _TEXT = 6.5, 7.5
 _PAD_INCH = 0.025
-_NAME_LENGTH, _LINE_LENGTH = 44, 54
+_NAME_LENGTH, _COLUMN_LENGTH, _LINE_LENGTH = 44, 20, 54
 
 
 def save_pulse_figure(path, result, channels):
@@ -119,7 +119,8 @@ def _draw_signal(axis, _result, channel, colours):
     if _has_fit(channel):
         axis.plot(time, channel.fit, color=_FIT, lw=0.7)
     axis.locator_params(axis="y", nbins=4)
-    axis.set_ylabel(f"{channel.label}\n[V]", fontsize=_TEXT)
+    axis.set_ylabel(f"{channel.label}\n{_shortened(channel.column, _COLUMN_LENGTH)} [V]",
+                    fontsize=_SMALL)
 
 
 def _draw_residual(axis, _result, channel, colours):
@@ -178,9 +179,9 @@ def _title(figure, result):
     square.set(color=_VERDICT_COLOURS[verdict], in_layout=False)
 
 
-def _shortened(name):
-    """Return a trace's name cut at the front where it is too long for the column."""
-    return name if len(name) <= _NAME_LENGTH else f"…{name[1 - _NAME_LENGTH:]}"
+def _shortened(name, length=_NAME_LENGTH):
+    """Return a name cut at the front where it is too long for its place."""
+    return name if len(name) <= length else f"…{name[1 - length:]}"
 
 
 def _headline(result):
