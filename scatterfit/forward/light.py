@@ -32,8 +32,8 @@ class SpreadTable:
     """Rows of cross section at one spread, with what interpolation and derivatives need."""
 
     cells: np.ndarray
-    """A line per radius: all rows' values, slopes (d/d ln r times the step) and derivatives by the
-    variance, shape (n, 3 rows) [m^2]."""
+    """All rows' values, then slopes (d/d ln r times the step), then derivatives by the variance,
+    shape (3 rows, n) [m^2]."""
     start: float
     step: float
     variance: float
@@ -42,17 +42,17 @@ class SpreadTable:
     @property
     def rows(self):
         """Return how many cross sections there are."""
-        return self.cells.shape[1] // 3
+        return self.cells.shape[0] // 3
 
     @property
     def values(self):
         """Return the cross sections, shape (rows, n) [m^2]."""
-        return self.cells[:, : self.rows].T
+        return self.cells[: self.rows]
 
     @property
     def log_radius(self):
         """Return ln of the radii in metres, shape (n,) [-]."""
-        return self.start + self.step * np.arange(self.cells.shape[0])
+        return self.start + self.step * np.arange(self.cells.shape[1])
 
 
 def cloud_light(rows, start, step):
@@ -117,7 +117,7 @@ def spread_table(light, variance, near=None):
     curvature = damped * (-0.5 * light.wavenumber**2)
     both = np.fft.irfft(np.concatenate([damped, slope, curvature]), light.size, axis=1)
     return SpreadTable(
-        np.ascontiguousarray(both[:, : light.count].T), light.start, light.step, variance
+        np.ascontiguousarray(both[:, : light.count]), light.start, light.step, variance
     )
 
 
@@ -143,12 +143,12 @@ def look_up(table, log_radius, variance):
         Their derivatives by the variance of ln r [m^2].
     """
     place = (log_radius - table.start) * (1.0 / table.step)
-    last = table.cells.shape[0] - 2
+    last = table.cells.shape[1] - 2
     place = np.clip(place, 0.0, last + 0.999999)
     index = place.astype(np.intp)
     t = place - index
-    low = np.moveaxis(table.cells.take(index, axis=0), -1, 0)
-    high = np.moveaxis(table.cells.take(index + 1, axis=0), -1, 0)
+    low = table.cells.take(index, axis=1)
+    high = table.cells.take(index + 1, axis=1)
     rows = table.rows
     low_slope, high_slope = low[rows:2 * rows], high[rows:2 * rows]
     rise = high[:rows] - low[:rows]

@@ -32,7 +32,7 @@ def low_pass(time, signal, time_constant):
     """
     if not time_constant:
         return signal
-    from scipy.linalg import solve_banded  # noqa: PLC0415  (a slow import that few calls need)
+    from scipy.linalg.lapack import dtbtrs  # noqa: PLC0415  (a slow import that few calls need)
 
     h = np.diff(time) / time_constant
     keep = np.exp(-h)
@@ -41,8 +41,8 @@ def low_pass(time, signal, time_constant):
     driven = np.empty_like(signal)
     driven[..., 0] = signal[..., 0]
     driven[..., 1:] = (share - keep) * signal[..., :-1] + (1.0 - share) * signal[..., 1:]
-    bands = np.zeros((2, time.size))
-    bands[0] = 1.0
+    bands = np.ones((2, time.size))
     bands[1, :-1] = -keep
-    flat = driven.reshape(-1, time.size).T
-    return solve_banded((1, 0), bands, flat, check_finite=False).T.reshape(signal.shape)
+    flat = np.asfortranarray(driven.reshape(-1, time.size).T)
+    filtered, _ = dtbtrs(bands, flat, uplo="L", overwrite_b=True)
+    return filtered.T.reshape(signal.shape)

@@ -90,7 +90,9 @@ class LinearGrowth:
     growth: CloudGrowth
     """The solution, one variant."""
     log_radius_by: dict
-    """Derivatives of ln r at the nodes by parameter, shape (c, m)."""
+    """Derivatives of ln r at the nodes by parameter, for a few classes, shape (f, m)."""
+    carry: np.ndarray | None
+    """From those classes to all, shape (c, f)."""
     log_density_by: dict
     """Derivatives of ln of the number density at the nodes, shape (m,)."""
 
@@ -219,7 +221,7 @@ def linear_growth(setup, cloud, names=(), start=None):
     moving = [name for name in names if name in STEPS]
     growth = grow(setup, cloud, start=start.growth if start is not None else None)
     if not moving:
-        return LinearGrowth(cloud, growth, {}, {})
+        return LinearGrowth(cloud, growth, {}, None, {})
     count = setup.births.weights.size
     few = [0] if count == 1 else sorted({count // 6, count // 2, count - 1 - count // 6})
     near = grow(setup, cloud, moving, few, growth)
@@ -230,9 +232,9 @@ def linear_growth(setup, cloud, names=(), start=None):
     radius_by, density_by = {}, {}
     for i, name in enumerate(moving):
         change = (log_radius[i + 1] - log_radius[0]) / STEPS[name]
-        radius_by[name] = carry @ np.where(born, change, 0.0)
+        radius_by[name] = np.where(born, change, 0.0)
         density_by[name] = (density[i + 1] - density[0]) / STEPS[name]
-    return LinearGrowth(cloud, growth, radius_by, density_by)
+    return LinearGrowth(cloud, growth, radius_by, carry, density_by)
 
 
 def _parabola(nodes, points):
@@ -289,7 +291,8 @@ def cloud_state(linear, cloud, time, names=()):
     safe = np.maximum(np.sqrt(square) - length, growth.start_radius)
     density = _straight(growth.number_density[0] * np.exp(-linear.cloud.depletion), index, t)
     radius_by = {
-        name: _straight(rows, index, t) for name, rows in linear.log_radius_by.items()
+        name: linear.carry @ _straight(rows, index, t)
+        for name, rows in linear.log_radius_by.items()
     }
     density_by = {
         name: _straight(row, index, t) for name, row in linear.log_density_by.items()

@@ -222,12 +222,13 @@ def _descend_all(problem, clouds):
     )
     limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
     kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
+    if len(kept) == 1:
+        return _distinct(rough)
     found = [
         descend(problem, s.best.cloud, iterations=8, tolerance=0.1, linear=s.best.state.linear)
         for s in kept
     ]
-    rest = [s for s in rough if s not in kept]
-    return _distinct(sorted(found, key=lambda s: s.best.chi2)) + _distinct(rest)
+    return _distinct([*sorted(found, key=lambda s: s.best.chi2), *rough])
 
 
 def _distinct(solutions, apart=_APART):

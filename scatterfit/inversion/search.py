@@ -191,16 +191,16 @@ def _misfits(problem, table, radius, density):
     bins, model = problem.bins, problem.model
     born = radius > 0.0
     place = (np.log(np.maximum(radius, 1e-9)) - table.start) * (1.0 / table.step)
-    index = np.clip(np.rint(place), 0, table.cells.shape[0] - 1).astype(np.intp)
+    index = np.clip(np.rint(place), 0, table.cells.shape[1] - 1).astype(np.intp)
     everywhere = born.all(axis=(0, 1))
     total = np.zeros(radius.shape[:2])
     amplitudes = []
     for i, channel in enumerate(model.channels):
         weight, data = bins.weights[i], bins.values[i]
         row = model.extinction_row if channel.kind == "scatter" else channel.row
-        depth = density * table.cells[:, row].take(index) * born * channel.path
+        depth = density * table.cells[row].take(index) * born * channel.path
         if channel.kind == "scatter":
-            shape = table.cells[:, channel.row].take(index) * born * density
+            shape = table.cells[channel.row].take(index) * born * density
             shape = (channel.gain or 1.0) * shape * np.exp(-depth)
         else:
             shape, data, weight = _optical_depth(depth, data, weight, everywhere)

@@ -15,7 +15,7 @@ from scatterfit.inversion.problem import (
     value_of,
 )
 
-_DAMPING = 1e-3
+_DAMPING = 1e-4
 # How far first order serves: what is left out is of the square of these.
 _NEAR = {
     "number": 0.02, "scale": 0.004, "accommodation": 0.05, "temperature": 5e-4, "vapour": 4e-3,
@@ -93,7 +93,11 @@ def _descend_linear(problem, cloud, linear, iterations, tolerance):
         normal = jacobian.T @ jacobian
         gain = False
         for _ in range(6):
-            step = _step(normal, gradient, held, damping) * scale
+            step = _step(normal, gradient, held, damping)
+            promised = -step @ (2.0 * gradient + normal @ step)
+            if promised < 0.5 * tolerance * max(1.0, 1e-4 * best.chi2):
+                return best, turn, True
+            step = step * scale
             trial_cloud = shifted(best.cloud, problem.names, here + step)
             trial = evaluate(problem, trial_cloud, linear=linear, near=best.state.table)
             if trial.chi2 < best.chi2:
