@@ -14,7 +14,7 @@ SCALES = {
     "bend": 5e-3, "depletion": 1e-2, "creep": 5e-3,
 }
 LIMITS = {
-    "number": (np.log(1e2), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
+    "number": (np.log(1e3), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
     "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
     "threshold": (-0.25, 0.25), "delay": (-np.inf, np.inf), "angle": (-0.1, 0.1),
     "bend": (-0.3, 0.3), "depletion": (-0.5, 0.5), "creep": (-0.3, 0.3),

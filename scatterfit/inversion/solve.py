@@ -16,10 +16,16 @@ from scatterfit.inversion.problem import (
 )
 
 _DAMPING = 1e-4
+_RELATIVE = 1e-5
 # How far first order serves: what is left out is of the square of these.
 _NEAR = {
     "number": 0.02, "scale": 0.004, "accommodation": 0.05, "temperature": 5e-4, "vapour": 4e-3,
     "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3,
+}
+# How far a descent may go before growth is solved again.
+_REACH = {
+    "number": 0.8, "scale": 0.06, "accommodation": 0.5, "temperature": 6e-3, "vapour": 0.05,
+    "threshold": 0.02, "bend": 0.05, "creep": 0.05,
 }
 
 
@@ -33,7 +39,7 @@ class Solution:
     converged: bool
 
 
-def descend(problem, cloud, iterations=12, tolerance=1e-3, linear=None, rounds=4):
+def descend(problem, cloud, iterations=12, tolerance=1e-3, linear=None, rounds=6):
     """Return the end of a Levenberg-Marquardt descent.
 
     Growth is solved where the descent starts and followed to first order; where the descent ends
@@ -84,21 +90,22 @@ def _descend_linear(problem, cloud, linear, iterations, tolerance):
     """Return the best evaluation with growth followed to first order, turns and convergence."""
     scale = np.array([SCALES[family(name)] for name in problem.names])
     best = evaluate(problem, cloud, linear=linear)
+    low, high = _bounds(problem.names, linear)
     damping, turn = _DAMPING, 0
     for turn in range(1, iterations + 1):
         here = np.array([value_of(best.cloud, name) for name in problem.names])
         jacobian = best.jacobian * scale
         gradient = jacobian.T @ best.residual
-        held = _held(problem.names, here, gradient)
+        held = ((here <= low) & (gradient > 0)) | ((here >= high) & (gradient < 0))
         normal = jacobian.T @ jacobian
         gain = False
         for _ in range(6):
             step = _step(normal, gradient, held, damping)
             promised = -step @ (2.0 * gradient + normal @ step)
-            if promised < 0.5 * tolerance * max(1.0, 1e-4 * best.chi2):
+            if promised < 0.5 * tolerance * max(1.0, _RELATIVE * best.chi2):
                 return best, turn, True
-            step = step * scale
-            trial_cloud = shifted(best.cloud, problem.names, here + step)
+            there = np.clip(here + step * scale, low, high)
+            trial_cloud = shifted(best.cloud, problem.names, there)
             trial = evaluate(problem, trial_cloud, linear=linear, near=best.state.table)
             if trial.chi2 < best.chi2:
                 gain = True
@@ -111,16 +118,21 @@ def _descend_linear(problem, cloud, linear, iterations, tolerance):
         drop = best.chi2 - trial.chi2
         best = trial
         damping = max(damping / 6.0, 1e-9)
-        if drop < tolerance * max(1.0, 1e-4 * best.chi2):
+        if drop < tolerance * max(1.0, _RELATIVE * best.chi2):
             return best, turn, True
     return best, turn, False
 
 
-def _held(names, here, gradient):
-    """Return which parameters sit at a limit that the descent would cross."""
+def _bounds(names, linear):
+    """Return the least and largest value of each parameter in one round, shape (p,)."""
     low = np.array([LIMITS[family(name)][0] for name in names])
     high = np.array([LIMITS[family(name)][1] for name in names])
-    return ((here <= low) & (gradient > 0)) | ((here >= high) & (gradient < 0))
+    for i, name in enumerate(names):
+        if name in linear.log_radius_by:
+            centre = getattr(linear.cloud, name)
+            low[i] = max(low[i], centre - _REACH[name])
+            high[i] = min(high[i], centre + _REACH[name])
+    return low, high
 
 
 def _step(normal, gradient, held, damping):

@@ -4,10 +4,11 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from scatterfit.matter import Substance
+from scatterfit.matter import Gas, Substance
 from scatterfit.nucleation.censored import Limits, with_limits
 from scatterfit.nucleation.estimate import Estimate
 from scatterfit.nucleation.line import Line, Points, fit_line, outliers, robust_line
+from scatterfit.nucleation.losses import Background
 from scatterfit.nucleation.select import Pulses
 from scatterfit.nucleation.theory import (
     critical_molecules,
@@ -35,6 +36,12 @@ class RateSettings:
     """Rates to quote a saturation ratio at [1/(m^3 s)]."""
     convention: int = 1
     """The number in slope = n* + 1 or n* + 2."""
+    background: Background | None = None
+    """Particles that take droplets away; ``None``: those of the table's columns."""
+    pressure: float | None = None
+    """During the hold [Pa]; ``None``: that of the table's column."""
+    gas: Gas | None = None
+    """The carrier; it matters to losses alone."""
 
 
 @dataclass(frozen=True)

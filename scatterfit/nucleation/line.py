@@ -180,6 +180,27 @@ def _residuals(points, slope, weights):
     return offset - weights @ offset / weights.sum()
 
 
+def chi_square_limit(line, count):
+    """Return the reduced chi-square that chance exceeds in 2.5 percent of cases.
+
+    Parameters
+    ----------
+    line : Line
+        A fitted line.
+    count : int
+        Points that it was fitted to.
+
+    Returns
+    -------
+    limit : float
+        Infinite where there is no chi-square [-].
+    """
+    freedom = count - 2
+    if freedom < 1 or not np.isfinite(line.chi2_reduced):
+        return np.inf
+    return chi_square_quantile(0.975, freedom) / freedom
+
+
 def extra_variance(points, slope):
     """Return the variance beyond the stated errors at which chi-square is its expectation.
 

@@ -141,20 +141,43 @@ def _cause(table, rate, limit, ambiguous):
 
 
 def _rate_limit(table):
-    """Return the upper limit of J for pulses without a cloud [1/(m^3 s)].
-
-    The limit is one of droplets per volume during growth. What takes it to a rate, the density
-    of the gas in the hold over that during growth and the effective duration, is read off the
-    pulses that have both a number and a rate.
-    """
+    """Return the upper limit of J for pulses without a cloud [1/(m^3 s)]."""
     stated = table.number(RATE_LIMIT)
+    duration = table.number(DURATION) if table.has(DURATION) else np.ones(len(table.names))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        derived = table.number(UPPER_LIMIT) * hold_density_factor(table) / duration
+    return to_si(np.where(np.isfinite(stated), stated, derived), "per_cm3")
+
+
+def hold_density_factor(table):
+    """Return what takes a number during growth to the gas density of the hold.
+
+    Numbers and limits of numbers are those of droplets per volume during growth. The factor is
+    read off the pulses that have both a number and a rate, as the median of rate times effective
+    duration (in ms; of the rate alone without that column) over number.
+
+    Parameters
+    ----------
+    table : Table
+        The table.
+
+    Returns
+    -------
+    factor : float
+        For a duration in ms and rates per second [-]; not a number where no pulse has both.
+
+    Examples
+    --------
+    >>> from scatterfit.nucleation.table import table_from_columns
+    >>> table = table_from_columns({"concentration_per_cm3": [1000.0], "nucleation_effective_ms":
+    ...     [2.0], "nucleation_rate_per_cm3_s": [4e5]})
+    >>> hold_density_factor(table)
+    800.0
+    """
     number, rate = table.number(CONCENTRATION), table.number(RATE)
     duration = table.number(DURATION) if table.has(DURATION) else np.ones(len(table.names))
     both = (number > 0) & (rate > 0) & (duration > 0)
-    denser = float(np.median((rate * duration)[both] / number[both])) if both.any() else np.nan
-    with np.errstate(divide="ignore", invalid="ignore"):
-        derived = table.number(UPPER_LIMIT) * denser / duration
-    return to_si(np.where(np.isfinite(stated), stated, derived), "per_cm3")
+    return float(np.median((rate * duration)[both] / number[both])) if both.any() else np.nan
 
 
 def errors_of(table, name, rows, unit=1.0):

@@ -35,7 +35,9 @@ _VERDICT_COLOURS = {
 _STYLE = {"labelsize": 6.5, "length": 2.5, "width": 0.6, "direction": "in"}
 _HEIGHTS = {"signal": 1.15, "residual": 0.45, "radius": 1.35}
 _SMALL, _TEXT = 6.5, 7.5
-_PAD_INCH = 0.025
+_LEFT_INCH, _RIGHT_INCH, _LABEL_INCH = 0.62, 0.12, 0.36
+_MARGIN, _GAP, _LINE_INCH, _AXIS_INCH, _LEGEND_INCH = 0.05, 0.05, 0.145, 0.24, 0.14
+_LEGEND_COLUMNS = 3
 _NAME_LENGTH, _COLUMN_LENGTH, _LINE_LENGTH = 44, 20, 54
 
 
@@ -71,23 +73,40 @@ def pulse_figure(result, channels):
         With an Agg canvas; the panels share the time axis.
     """
     panels = _panels(result, channels)
-    heights = [_HEIGHTS[kind] for kind, _ in panels]
-    figure = Figure(figsize=(WIDTH_INCH, 1.15 + sum(heights)), layout="constrained")
+    title, colours = _title_lines(result), _colours(channels)
+    handles = _legend_handles(result, channels, colours) if panels else {}
+    frame = _Frame(panels, len(title), -(-len(handles) // _LEGEND_COLUMNS))
+    figure = Figure(figsize=(WIDTH_INCH, frame.height))
     FigureCanvasAgg(figure)
-    figure.get_layout_engine().set(h_pad=_PAD_INCH, w_pad=0.04, hspace=0.0)
-    _title(figure, result)
-    if panels:
-        axes = figure.subplots(
-            len(panels), 1, sharex=True, squeeze=False, height_ratios=heights
-        ).ravel()
-        colours = _colours(channels)
-        for axis, (kind, channel) in zip(axes, panels, strict=True):
-            _DRAW[kind](axis, result, channel, colours)
-            _dress(axis)
-        _time_axis(axes[-1], channels)
-        figure.align_ylabels(axes)
-        _legend(figure, result, channels, colours)
+    _title(figure, result, title)
+    axes = []
+    for rectangle, (kind, channel) in zip(frame.rectangles, panels, strict=True):
+        axis = figure.add_axes(rectangle, sharex=axes[0] if axes else None)
+        _DRAW[kind](axis, result, channel, colours)
+        _dress(axis)
+        axes.append(axis)
+    if axes:
+        _time_axis(axes, channels)
+        _legend(figure, handles)
     return figure
+
+
+class _Frame:
+    """Where everything stands, in parts of the figure; found by sums, which costs no drawing."""
+
+    def __init__(self, panels, title_lines, legend_rows):
+        inner = [_HEIGHTS[kind] for kind, _ in panels]
+        top = _MARGIN + title_lines * _LINE_INCH + _GAP
+        bottom = _AXIS_INCH + legend_rows * _LEGEND_INCH + _MARGIN
+        self.height = top + sum(inner) + _GAP * len(inner) + (bottom if inner else 0.0)
+        width = (WIDTH_INCH - _LEFT_INCH - _RIGHT_INCH) / WIDTH_INCH
+        self.rectangles, edge = [], self.height - top
+        for height in inner:
+            edge -= height
+            self.rectangles.append((
+                _LEFT_INCH / WIDTH_INCH, edge / self.height, width, height / self.height
+            ))
+            edge -= _GAP
 
 
 def _panels(result, channels):
@@ -148,35 +167,39 @@ def _draw_radius(axis, result, _channel, colours):
                   marker=_MARKERS[point["kind"]], mec=colours.get(point["column"], _FIT))
     axis.set_ylim(0, None)
     axis.locator_params(axis="y", nbins=4)
-    axis.set_ylabel("radius\n[µm]", fontsize=_TEXT)
+    axis.set_ylabel("radius\n[µm]", fontsize=_SMALL)
 
 
 _DRAW = {"signal": _draw_signal, "residual": _draw_residual, "radius": _draw_radius}
 
 
 def _dress(axis):
-    axis.tick_params(**_STYLE, top=True, right=True)
-    axis.margins(x=0.01)
+    axis.tick_params(**_STYLE, top=True, right=True, labelbottom=False)
+    axis.yaxis.set_label_coords(-_LABEL_INCH / (WIDTH_INCH - _LEFT_INCH - _RIGHT_INCH), 0.5)
     for spine in axis.spines.values():
         spine.set_linewidth(0.6)
 
 
-def _time_axis(axis, channels):
+def _time_axis(axes, channels):
     first = min(float(channel.time[0]) for channel in channels)
     last = max(float(channel.time[-1]) for channel in channels)
-    axis.set_xlim(1e3 * first, 1e3 * last)
-    axis.set_xlabel("time [ms]", fontsize=_TEXT)
+    axes[-1].set_xlim(1e3 * first, 1e3 * last)
+    axes[-1].tick_params(labelbottom=True)
+    axes[-1].set_xlabel("time [ms]", fontsize=_TEXT, labelpad=1.5)
 
 
-def _title(figure, result):
+def _title(figure, result, lines):
     """Write trace, verdict and what was found above the panels."""
-    verdict = result["verdict"]
+    top = 1 - _MARGIN / figure.get_figheight()
+    figure.suptitle("\n".join(lines), x=0.06, y=top, ha="left", va="top", fontsize=_TEXT,
+                    linespacing=1.3)
+    square = figure.text(0.02, top, "■", va="top", fontsize=_TEXT)
+    square.set_color(_VERDICT_COLOURS[result["verdict"]])
+
+
+def _title_lines(result):
     lines = [line for part in _headline(result) for line in textwrap.wrap(part, _LINE_LENGTH)]
-    text = "\n".join([f"{verdict}: {_shortened(result['trace'])}", *lines])
-    figure.suptitle(text, x=0.06, ha="left", fontsize=_TEXT, linespacing=1.35)
-    square = figure.text(0.02, 1 - _PAD_INCH / figure.get_figheight(), "■", va="top")
-    square.set(fontsize=_TEXT)
-    square.set(color=_VERDICT_COLOURS[verdict], in_layout=False)
+    return [f"{result['verdict']}: {_shortened(result['trace'])}", *lines]
 
 
 def _shortened(name, length=_NAME_LENGTH):
@@ -186,8 +209,8 @@ def _shortened(name, length=_NAME_LENGTH):
 
 def _headline(result):
     radius, number = result["final_radius_um"], result["concentration_per_cm3"]
+    codes = ", ".join(reason["code"] for reason in result["reasons"])
     if radius is None:
-        codes = ", ".join(reason["code"] for reason in result["reasons"])
         limit = result["upper_limit_per_cm3"]
         lines = [f"reasons: {codes}" if codes else VERDICTS[result["verdict"]]]
         if limit is not None:
@@ -197,10 +220,11 @@ def _headline(result):
     lines = [f"radius {format_quantity(radius['value'], radius['sigma'], 'um')} at {end}"]
     number = number or {"value": None, "sigma": None}
     lines.append(f"number {format_quantity(number['value'], number['sigma'], '1/cm3')}")
-    return lines
+    return lines + ([f"reasons: {codes}"] if codes else [])
 
 
-def _legend(figure, result, channels, colours):
+def _legend_handles(result, channels, colours):
+    """Return what the legend names."""
     dot = {"ls": "none", "marker": "."}
     handles = {"measured": tuple(Line2D([], [], color=c, **dot) for c in colours.values())}
     if not all(channel.used.all() for channel in channels):
@@ -213,7 +237,12 @@ def _legend(figure, result, channels, colours):
     for kind in (kind for kind in _MARKERS if kind in kinds):
         marker = {"marker": _MARKERS[kind], "ls": "none", "mfc": "white", "mec": _FIT, "ms": 4}
         handles[kind] = Line2D([], [], **marker)
-    figure.legend(handles.values(), handles.keys(), loc="outside lower center",
-                  ncols=min(3, len(handles)), fontsize=_SMALL, frameon=False,
+    return handles
+
+
+def _legend(figure, handles):
+    figure.legend(handles.values(), handles.keys(), loc="lower center",
+                  bbox_to_anchor=(0.5, 0.5 * _MARGIN / figure.get_figheight()),
+                  ncols=min(_LEGEND_COLUMNS, len(handles)), fontsize=_SMALL, frameon=False,
                   handler_map={tuple: HandlerTuple(ndivide=None)}, handletextpad=0.5,
-                  columnspacing=1.2, borderpad=0.2)
+                  columnspacing=1.2, borderpad=0.0, borderaxespad=0.0)
