@@ -1,7 +1,10 @@
 """What was found in a simulated pulse beside what was put into it."""
 
+import re
+
 from scatterfit.report.rounding import NOT_DETERMINED, format_number, format_quantity
 
+_PRINTED = re.compile(r"\(?(\S+) ± [\d.]+\)?")
 _ROWS = (
     ("final radius [µm]", ("final_radius_um",), "final_radius_um"),
     ("number [cm⁻³]", ("concentration_per_cm3",), "N_per_cm3"),
@@ -47,13 +50,13 @@ def comparison_text(name, result, truth):
 
 
 def _compared(label, found, true):
-    shown = "-" if true is None else format_number(true, digits=5)
-    if found is None:
-        return _row(label, NOT_DETERMINED, shown, "")
-    text = format_quantity(found["value"], found["sigma"])
-    comparable = true is not None and found["sigma"]
-    apart = f"{(found['value'] - true) / found['sigma']:+.1f} σ" if comparable else ""
-    return _row(label, text, shown, apart)
+    if found is None or true is None or not found["sigma"]:
+        text = format_quantity(found["value"], found["sigma"]) if found else NOT_DETERMINED
+        return _row(label, text, "-" if true is None else format_number(true, digits=5), "")
+    value, sigma = found["value"], found["sigma"]
+    # What was put in is rounded as what was found, so that the digits compare.
+    put_in = _PRINTED.sub(r"\1", format_quantity(true, sigma))
+    return _row(label, format_quantity(value, sigma), put_in, f"{(value - true) / sigma:+.1f} σ")
 
 
 def _row(label, found, true, apart):
