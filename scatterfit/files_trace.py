@@ -19,13 +19,15 @@ from scatterfit.errors import TraceError
 from scatterfit.files_text import delimiter_of, parse_scalar
 from scatterfit.units import PRESSURE_UNITS, TIME_UNITS, VOLTAGE_UNITS, column_unit, to_si
 
-TRACE_SUFFIXES = (".csv", ".tsv", ".txt", ".dat")
+BINARY_SUFFIXES = {".h5": "HDF5", ".hdf5": "HDF5", ".nc": "netCDF"}
+"""Ending of a file that is not text to the name of its format."""
+
+TRACE_SUFFIXES = (".csv", ".tsv", ".txt", ".dat", *BINARY_SUFFIXES)
 """Endings of the files that are taken for traces in a folder."""
 
 FEWEST_SAMPLES = 20
 """Usable samples that a trace must have."""
 
-_BINARY_SUFFIXES = {".h5": "HDF5", ".hdf5": "HDF5", ".nc": "netCDF"}
 _TIME_COLUMNS = tuple(f"time_{unit}" for unit in TIME_UNITS)
 _BYTE_ORDER_MARK = b"\xef\xbb\xbf"
 _NAMES_LENGTH = 200
@@ -70,7 +72,7 @@ def read_trace(path):
     Parameters
     ----------
     path : str or Path
-        File with comma, tab or semicolon between its columns.
+        File with comma, tab or semicolon between its columns, or HDF5 or netCDF-4 by its ending.
 
     Returns
     -------
@@ -87,6 +89,10 @@ def read_trace(path):
         If one of its ``#`` lines sets a value that no bench could have.
     """
     source = str(path)
+    if Path(path).suffix.lower() in BINARY_SUFFIXES:
+        from scatterfit.files_formats import read_binary  # noqa: PLC0415 - imports this module
+
+        return Trace(source=source, **read_binary(path))
     raw = _read_bytes(path, source)
     preamble, header_line, body = _split(_decode(raw, source), source)
     layout = _layout(header_line, len(preamble), preamble, source)
@@ -112,10 +118,6 @@ def _refused(source, text):
 
 
 def _read_bytes(path, source):
-    kind = _BINARY_SUFFIXES.get(Path(path).suffix.lower())
-    if kind is not None:
-        raise _refused(source, f"{kind} traces are not read by this version of scatterfit; save "
-                               "the columns as CSV, one row a sample")
     try:
         return Path(path).read_bytes()
     except OSError as error:

@@ -244,12 +244,6 @@ def test_a_long_header_is_cut_in_messages(tmp_path):
     assert len(refusal(tmp_path, header + "\n1,2\n")) < 400
 
 
-@pytest.mark.parametrize(("name", "kind"), [
-    ("a.h5", "HDF5"), ("a.HDF5", "HDF5"), ("a.nc", "netCDF")])
-def test_formats_that_are_not_read_are_named(name, kind, tmp_path):
-    assert f"{kind} traces are not read" in refusal(tmp_path, b"\x89HDF", name=name)
-
-
 def test_a_file_that_cannot_be_read(tmp_path):
     for path in (tmp_path / "absent.csv", tmp_path):
         with pytest.raises(TraceError, match="cannot be read"):
