@@ -137,3 +137,9 @@ def test_help_needs_no_numerics():
     call = "with contextlib.redirect_stdout(io.StringIO()): main(['--help'])"
     code = f"exec({silent + chr(10) + call!r})"
     assert loaded_by(code, "numpy", "scipy", "matplotlib", "typer") == ["typer"]
+
+
+def test_the_linter_finds_nothing():
+    call = [sys.executable, "-m", "ruff", "check", "--quiet", "--no-cache", str(ROOT.parent)]
+    done = subprocess.run(call, capture_output=True, text=True, check=False)
+    assert done.returncode == 0, done.stdout + done.stderr

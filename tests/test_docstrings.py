@@ -9,6 +9,7 @@ import pytest
 ROOT = Path(__file__).resolve().parents[1] / "scatterfit"
 NUMERIC = re.compile(r"\b(float|complex|array_like|ndarray)\b")
 ARRAY = re.compile(r"\b(array_like|ndarray)\b")
+MANY = ("mapping", "Mapping", "dict", "sequence")
 UNIT = re.compile(r"\[[^\]]+\]")
 HEADING = re.compile(r"^(\w[\w ]*)\n-{3,}$", re.MULTILINE)
 FEWEST_FUNCTIONS = 60
@@ -88,7 +89,7 @@ def test_numbers_have_a_unit_and_arrays_a_shape(node):
     for section in ("Parameters", "Returns", "Yields"):
         for names, kind, description in entries(found.get(section, "")):
             # A mapping or sequence of numbers says its units in words where they differ.
-            if NUMERIC.search(kind) and not kind.startswith(("mapping", "Mapping", "sequence")):
+            if NUMERIC.search(kind) and not kind.startswith(MANY):
                 assert UNIT.search(description) or UNIT.search(kind), f"{names}: no [unit]"
             if ARRAY.match(kind):
                 assert "shape (" in kind or "shape (" in description, f"{names}: no shape"
