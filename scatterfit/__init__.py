@@ -11,6 +11,7 @@ _PUBLIC = {
     "fit": ("scatterfit.files_fit", "fit_loaded"),
     "fit_file": ("scatterfit.files_fit", "fit_file"),
     "simulate": ("scatterfit.files_simulate", "simulate"),
+    "open_results": ("scatterfit.overnight.results", "open_results"),
     "MeasuredPulse": ("scatterfit.measured_pulse.record", "MeasuredPulse"),
     "Quantity": ("scatterfit.measured_pulse.record", "Quantity"),
     "ScatterfitError": ("scatterfit.errors", "ScatterfitError"),

@@ -11,6 +11,7 @@ from typing import Annotated
 
 import typer
 
+from scatterfit import cli_night
 from scatterfit.errors import ChamberFileError, ScatterfitError
 
 app = typer.Typer(
@@ -246,3 +247,6 @@ def fit(
 
         print(summary_text(result))
     raise typer.Exit(int(result["verdict"] == "failed"))
+
+
+app.registered_commands += cli_night.app.registered_commands
