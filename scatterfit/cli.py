@@ -6,6 +6,8 @@ whatever the verdicts; 1: it could not be; 2: the command or the chamber file is
 
 import os
 import sys
+import traceback
+import warnings
 from pathlib import Path
 from typing import Annotated
 
@@ -28,6 +30,7 @@ SET = Annotated[
     typer.Option("--set", metavar="KEY=VALUE", help="Replace one value of the chamber file, for "
                  "example chamber.temperature_K=297.15; repeatable, recorded in the result."),
 ]
+_FEWEST_SAMPLES, _MOST_SAMPLES = 20, 10_000_000
 _PAIR_OPTION = "--exclude-ms"
 EXCLUDE = Annotated[
     list[str] | None,
@@ -51,6 +54,8 @@ def main(arguments=None):
     """
     words = list(sys.argv[1:] if arguments is None else arguments)
     debug = "--debug" in words
+    if arguments is None and not debug:  # a verdict says what a warning of a library would not
+        warnings.simplefilter("ignore")
     _replace_unprintable()
     try:
         code = app(_paired(words), prog_name="scatterfit", standalone_mode=False) or 0
@@ -59,9 +64,9 @@ def main(arguments=None):
         code = _close_output()
     except SystemExit as leaving:  # how a broken pipe leaves the command parser
         code = _close_output() if leaving.code == 1 else leaving.code
-    except Exception as error:
-        if debug:  # otherwise a user gets one line, never a traceback
-            raise
+    except Exception as error:  # noqa: BLE001 - whatever it is, a user gets one line
+        if debug:
+            traceback.print_exc()
         code = _explain(error)
     return code
 
@@ -71,8 +76,10 @@ def _explain(error):
     usage = getattr(error, "format_message", None)
     if usage is not None:
         text, code = f"{usage()} See scatterfit --help.", error.exit_code
-    elif isinstance(error, ScatterfitError | OSError):
+    elif isinstance(error, ScatterfitError):
         text, code = str(error), 2 if isinstance(error, ChamberFileError) else 1
+    elif isinstance(error, OSError) and error.filename is not None:
+        text, code = f"{error.filename}: {error.strerror}", 1
     elif isinstance(error, typer.Abort):
         text, code = "stopped", 1
     else:
@@ -172,8 +179,9 @@ def new(
     """
     from scatterfit.report.template import chamber_template
 
-    if file.exists() and not force:
-        message = f"{file} exists; --force would replace it."
+    if file.is_dir() or (file.exists() and not force):
+        remedy = "is a folder; name a file" if file.is_dir() else "exists; --force would replace it"
+        message = f"{file} {remedy}."
         raise typer.BadParameter(message)
     file.write_text(chamber_template(), encoding="utf-8")
     print(f"wrote {file}; next: scatterfit check {file}", file=sys.stderr)
@@ -199,10 +207,12 @@ def simulate(
     chamber: CHAMBER,
     out: Annotated[Path, typer.Option(metavar="FOLDER", help="Where to write.")],
     count: Annotated[int, typer.Option(min=1, help="How many pulses.")] = 1,
-    number: Annotated[float, typer.Option(min=0, help="Droplets per cm3.")] = 5000.0,
-    duration_ms: Annotated[float, typer.Option(help="Length of a trace [ms].")] = 100.0,
-    rate_khz: Annotated[float, typer.Option(help="Samples per ms.")] = 50.0,
-    noise: Annotated[float, typer.Option(min=0, help="Noise over the largest signal.")] = 0.01,
+    number: Annotated[float, typer.Option(min=0, max=1e8, help="Droplets per cm3.")] = 5000.0,
+    duration_ms: Annotated[float, typer.Option(min=10, max=1e5, help="Length [ms].")] = 100.0,
+    rate_khz: Annotated[float, typer.Option(min=0.1, max=1e4, help="Samples per ms.")] = 50.0,
+    noise: Annotated[
+        float, typer.Option(min=0, max=1, help="Noise over the light at that moment.")
+    ] = 0.01,
     seed: Annotated[int, typer.Option(help="Seed of the random numbers.")] = 1,
 ):
     """Make synthetic pulses of a bench, with their truth.
@@ -211,6 +221,10 @@ def simulate(
     """
     from scatterfit.cli_pulse import simulate_to_folder
 
+    samples = duration_ms * rate_khz
+    if not _FEWEST_SAMPLES <= samples <= _MOST_SAMPLES:
+        message = f"{samples:.3g} samples; {_FEWEST_SAMPLES} to {_MOST_SAMPLES} can be made."
+        raise typer.BadParameter(message)
     settings = {"count": count, "number": 1e6 * number, "duration": duration_ms / 1e3,
                 "rate": 1e3 * rate_khz, "noise": noise, "seed": seed}
     for path in simulate_to_folder(chamber, out, settings):
@@ -237,15 +251,15 @@ def fit(
 
     pulse = fit_files(chamber, trace, settings or (), exclude)
     result = pulse.to_dict()
-    if out is not None:
-        for path in write_result(out, trace.stem, pulse):
-            print(f"wrote {path}", file=sys.stderr)
     if as_json:
         print(result_text(result))
     else:
         from scatterfit.report.summary import summary_text
 
         print(summary_text(result))
+    if out is not None:
+        for path in write_result(out, trace.stem, pulse):
+            print(f"wrote {path}", file=sys.stderr)
     raise typer.Exit(int(result["verdict"] == "failed"))
 
 

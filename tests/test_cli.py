@@ -52,7 +52,10 @@ def test_version(capsys):
     [], ["fitt", "a", "b"], ["fit"], ["fit", "a.toml"], ["fit", "a", "b", "--colour", "red"],
     ["fit", "a", "b", "--exclude-ms", "1"], ["fit", "a", "b", "--exclude-ms", "1", "x"],
     ["fit", "a", "b", "--exclude-ms", "3", "2"], ["simulate", "a", "--out", "b", "--count", "0"],
-    ["simulate", "a"],
+    ["simulate", "a"], ["simulate", "a", "--out", "b", "--duration-ms", "-3"],
+    ["simulate", "a", "--out", "b", "--number", "nan"],
+    ["simulate", "a", "--out", "b", "--duration-ms", "1e5", "--rate-khz", "1e4"],
+    ["new", "."],
 ])
 def test_a_wrong_command_is_one_line_and_exit_2(capsys, words):
     code, out, err = run(capsys, *words)
@@ -79,14 +82,11 @@ def test_an_error_is_one_line_with_its_exit_code(capsys, monkeypatch, error, cod
     assert_one_plain_line(err)
 
 
-def test_debug_shows_where_an_error_arose(monkeypatch):
-    def fail():
-        message = "boom"
-        raise ZeroDivisionError(message)
-
-    monkeypatch.setattr("scatterfit.report.template.chamber_template", fail)
-    with pytest.raises(ZeroDivisionError, match="boom"):
-        main(["--debug", "new", "never-written.toml"])
+def test_debug_shows_where_an_error_arose(capsys):
+    code, _, err = run(capsys, "fit", "no-such-bench.toml", "a.csv", "--debug")
+    assert code == 2
+    assert "Traceback" in err
+    assert err.splitlines()[-1].startswith("scatterfit: no-such-bench.toml")
 
 
 def test_excluded_ranges_are_read_as_pairs():
