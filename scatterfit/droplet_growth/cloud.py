@@ -138,15 +138,16 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
     place = _birth_cells(path.time, times)
     step = np.diff(path.time)
     along = (path.time - path.time[0]) / (path.time[-1] - path.time[0])
-    converged, slope = False, None
+    converged = False
     for turn in range(_ROUNDS):
         radius = np.sqrt(square) - length[:, None, None]
         surroundings = (temperature[:, None, :], path.pressure, share[:, None, :])
-        rate, droplet_temperature = growth_rate(
+        rate, droplet_temperature, by_vapour, surface_slope = growth_rate(
             properties, radius, surroundings, accommodation, droplet_temperature,
             steps=3 if turn == 0 and start is None else 1,
         )
-        rate *= (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
+        factor_now = (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
+        rate *= factor_now
         if creep.any():
             rate *= np.exp(creep[:, None, None] * along)
         if bend.any():
@@ -156,8 +157,9 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
         new_radius = np.sqrt(new_square) - length[:, None, None]
         cubes = np.einsum("c,vcm->vm", weights, new_radius**3) - start_radius**3
         error = moles[:, None] * cubes - condensed
-        if slope is None or turn < 4:
-            slope = _slope(gas, rate, condensed, share, temperature, path)
+        slope = -factor_now * by_vapour * (
+            1.0 + surface_slope * gas.warming(temperature)[:, None, :]
+        )
         alive = grown > 0.0
         gain = (1.5 * moles[:, None, None]) * new_radius**2 / (new_radius + length[:, None, None])
         gain = np.einsum("c,vcm->vm", weights, np.where(alive, gain, 0.0))
@@ -204,6 +206,11 @@ class _Gas:
         self.properties = properties
         self.fraction = fraction[:, None]
         self.undisturbed = path.temperature * factor[:, None]
+
+    def warming(self, temperature):
+        """Return by how much the gas warms per mole condensed per mole of gas, (v, m) [K]."""
+        p = self.properties
+        return horner(p.latent_heat_of, p.scaled(temperature)) / p.heat_capacity
 
     def state(self, condensed):
         """Return temperature [K] and vapour mole fraction [-], shape (v, m).
@@ -255,23 +262,6 @@ def _since_birth(rate, step, place):
     before = np.take_along_axis(total, index, -1)[..., 0]
     before = before + step[cell] * within * (low + 0.5 * within * (high - low))
     return total - before[..., None]
-
-
-def _slope(gas, rate, condensed, share, temperature, path):
-    """Return d(rate)/dq at fixed radius, shape (v, c, m), from the linear law's driving force.
-
-    The rate is proportional to what drives it, the distance from equilibrium, which falls with q
-    by the vapour taken and by the warming of the gas. An estimate serves: it only steers
-    the iteration.
-    """
-    p = gas.properties
-    saturated = np.exp(horner(p.log_pressure, p.scaled(temperature))) / path.pressure
-    latent = horner(p.latent_heat_of, p.scaled(temperature))
-    steepness = latent / (GAS_CONSTANT * temperature**2)
-    warming = latent / p.heat_capacity
-    drive = np.maximum(np.abs(share - saturated), 0.02 * saturated)
-    per_mole = (1.0 + saturated * steepness * warming) / drive
-    return -np.abs(rate) * per_mole[:, None, :]
 
 
 def _coupled(error, gain, response, step):

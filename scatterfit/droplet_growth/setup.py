@@ -16,7 +16,7 @@ from scatterfit.droplet_growth.properties import GrowthProperties, growth_proper
 
 _FEW = 3
 _BIRTH_RADIUS = 3e-9
-_SEED_RADIUS = 25e-9
+_SEED_RADIUS = 0.2e-6
 _CRITICAL_FREEZING = 235.0
 
 
@@ -61,10 +61,13 @@ class GrowthSetup:
     """What a droplet has in the growth stage, by the linear law [K]."""
     clock_known: bool
     """Whether births are timed by a pressure trace."""
+    vapour_by_temperature: float = 0.0
+    """d ln(vapour fraction) / d ln(chamber temperature), where the vapour is stated relative to
+    saturation [-]."""
     threshold: float | None = None
     """Saturation ratio at which seeds become droplets [-]; ``None`` without seeds."""
     ramp: tuple[np.ndarray, np.ndarray] | None = None
-    """Time [s] and smooth pressure [Pa], for seeded pulses whose threshold is fitted."""
+    """Time [s] and undisturbed saturation ratio [-] of seeded pulses."""
     warnings: tuple[tuple[str, str], ...] = field(default=())
     """Codes and texts worth telling the user."""
 
@@ -159,7 +162,7 @@ def _measured(apparatus, substance, gas, record, classes):
     if apparatus.seed is not None:
         threshold = _threshold(apparatus, substance, reference)
         births = few = births_at_threshold(time, saturation, threshold)
-        ramp = (time, smoothed)
+        ramp = (time, saturation)
         hold = None
         peak = int(np.argmax(saturation))
     else:
@@ -243,6 +246,10 @@ def _finish(bench, path, births, hold, fraction, start, low, **more):
             f"the hold is at {hold.temperature:.1f} K: below about 235 K water droplets may "
             "freeze; radius and number assume liquid droplets",
         ),)
+    if apparatus.vapour.saturation_ratio is not None:
+        start_temperature = apparatus.chamber.temperature
+        latent = float(substance.latent_heat(start_temperature))
+        more["vapour_by_temperature"] = latent / (GAS_CONSTANT * start_temperature)
     return GrowthSetup(
         apparatus, substance, gas, properties, path, *births, hold, fraction, start,
         growth_ratio, radius, droplet, warnings=warnings, **more,
@@ -352,7 +359,7 @@ def births_at_threshold(time, saturation, threshold):
     return births_at_once(time[i - 1] + part * (time[i] - time[i - 1]))
 
 
-def with_threshold(setup, threshold):
+def with_threshold(setup, threshold, wetter=0.0):
     """Return the setup of a seeded pulse with another threshold.
 
     Parameters
@@ -361,18 +368,14 @@ def with_threshold(setup, threshold):
         Of a seeded pulse.
     threshold : float
         Saturation ratio at which seeds become droplets [-].
+    wetter : float
+        ln of the saturation ratio over that of the setup [-].
 
     Returns
     -------
     setup : GrowthSetup
         With births moved.
     """
-    time, pressure = setup.ramp
-    ratio = pressure / setup.path.reference_pressure
-    exponent = GAS_CONSTANT / setup.properties.heat_capacity
-    temperature = setup.path.reference_temperature * ratio**exponent
-    saturated = setup.substance.saturation_pressure(temperature)
-    births = births_at_threshold(
-        time, setup.vapour_fraction * pressure / saturated, threshold
-    )
+    time, saturation = setup.ramp
+    births = births_at_threshold(time, saturation * np.exp(wetter), threshold)
     return replace(setup, births=births, threshold=float(threshold))

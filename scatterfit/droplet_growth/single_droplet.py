@@ -50,6 +50,10 @@ def growth_rate(properties, radius, gas, accommodation, droplet_temperature, ste
         dr/dt [m/s].
     droplet_temperature : ndarray, shape (...)
         Balanced temperature [K].
+    by_vapour : ndarray, shape (...)
+        d(rate)/d(vapour fraction) at fixed gas temperature, >= 0 [m/s].
+    surface_slope : ndarray, shape (...)
+        d(y_s)/dT of the vapour fraction at the surface: a warmer gas acts like a drier one [1/K].
 
     References
     ----------
@@ -81,8 +85,11 @@ def growth_rate(properties, radius, gas, accommodation, droplet_temperature, ste
             conduction - latent * slope
         )
         droplet_temperature = droplet_temperature + change
-    rate = (flux + slope * change) * properties.molar_volume / radius
-    return rate, droplet_temperature
+    per_flux = properties.molar_volume / radius
+    rate = (flux + slope * change) * per_flux
+    surface_slope = -slope / flow
+    by_vapour = per_flux * flow / (1.0 - latent * slope / conduction)
+    return rate, droplet_temperature, by_vapour, surface_slope
 
 
 def _conductances(properties, radius, gas, accommodation, film):

@@ -157,7 +157,9 @@ def _parameters(setup, cloud, names):
         growth_scale=np.exp(rows["scale"]),
         mass_accommodation=mass,
         thermal_accommodation=np.full(mass.size, vapour.thermal_accommodation),
-        vapour_fraction=setup.vapour_fraction * np.exp(rows["vapour"]),
+        vapour_fraction=setup.vapour_fraction * np.exp(
+            rows["vapour"] + setup.vapour_by_temperature * rows["temperature"]
+        ),
         temperature_factor=np.exp(rows["temperature"]),
         growth_bend=rows["bend"],
         growth_creep=rows["creep"],
@@ -251,16 +253,25 @@ def _birth_times(setup, cloud, names):
     """Return the births of each variant, shape (v, c) or (c,) [s]."""
     if setup.threshold is None:
         return setup.births.times
-    base = setup.threshold
+    clouds = [cloud] * (len(names) + 1)
+    for i, name in enumerate(names):
+        if name in ("threshold", "vapour", "temperature"):
+            clouds[i + 1] = replace(cloud, **{name: getattr(cloud, name) + STEPS[name]})
+    known = {}
+    for other in clouds:
+        if other not in known:
+            known[other] = with_threshold(setup, setup.threshold * np.exp(other.threshold),
+                                          _wetter(setup, other)).births.times
+    return np.array([known[other] for other in clouds])
 
-    def at(shift):
-        return with_threshold(setup, 1.0 + (base - 1.0 + 1e-9) * np.exp(shift) if base > 1.02
-                              else base * np.exp(shift)).births.times
 
-    rows = [at(cloud.threshold)] * (len(names) + 1)
-    if "threshold" in names:
-        rows[1 + list(names).index("threshold")] = at(cloud.threshold + STEPS["threshold"])
-    return np.array(rows)
+def _wetter(setup, cloud):
+    """Return by how much ln S lies above that of the setup, near the growth temperature."""
+    path = setup.path
+    steepness = float(setup.substance.latent_heat(path.reference_temperature)) / (
+        GAS_CONSTANT * path.reference_temperature
+    )
+    return cloud.vapour + (setup.vapour_by_temperature - steepness) * cloud.temperature
 
 
 def cloud_state(linear, cloud, time, names=()):
@@ -288,7 +299,9 @@ def cloud_state(linear, cloud, time, names=()):
     square = hermite(growth.square[0], growth.square_rate[0], index, t, width)
     born = clock > growth.birth_times[0][:, None]
     length = growth.length[0]
-    safe = np.maximum(np.sqrt(square) - length, growth.start_radius)
+    # Cubics may undershoot where a cloud starts to grow.
+    square = np.maximum(square, (growth.start_radius + length) ** 2)
+    safe = np.sqrt(square) - length
     density = _straight(growth.number_density[0] * np.exp(-linear.cloud.depletion), index, t)
     radius_by = {
         name: linear.carry @ _straight(rows, index, t)

@@ -4,6 +4,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from scatterfit.inversion.hops import Hops, find_hops, refine_hops
 from scatterfit.inversion.noise import NoiseModel, estimate_noise, running_mean
 
 _SMOOTHING = 15
@@ -27,6 +28,10 @@ class ChannelData:
     """Samples left out as clipped."""
     missing: int
     """Samples left out as not finite."""
+    hops: Hops | None = None
+    """Where the laser hops; the signal is then as if it had stayed dimmer."""
+    raw: np.ndarray | None = None
+    """The signal with its hops, shape (n,) [V]."""
 
 
 @dataclass(frozen=True)
@@ -43,7 +48,7 @@ class Bins:
     """Samples in each mean, shape (channels, m)."""
 
 
-def channel_data(column, kind, signal, window, baseline, full_scale=None):
+def channel_data(column, kind, signal, window, baseline, clipped=None):
     """Return a channel's samples with their noise.
 
     Parameters
@@ -53,13 +58,13 @@ def channel_data(column, kind, signal, window, baseline, full_scale=None):
     kind : str
         ``"scatter"`` or ``"transmission"``.
     signal : ndarray, shape (n,)
-        As recorded; may hold not-a-number cells [V].
+        Dark level removed; may hold not-a-number cells [V].
     window : ndarray, shape (n,)
         Which samples may be fitted [bool].
     baseline : ndarray, shape (n,)
         Which samples show no droplets [bool].
-    full_scale : float, optional
-        Largest voltage the digitizer can show [V].
+    clipped : ndarray, shape (n,), optional
+        Samples at full scale, to be left out [bool].
 
     Returns
     -------
@@ -69,22 +74,47 @@ def channel_data(column, kind, signal, window, baseline, full_scale=None):
     finite = np.isfinite(signal)
     signal = np.where(finite, signal, 0.0)
     good = finite & window
-    before = baseline & good
-    rest = float(np.median(signal[before])) if before.any() else 0.0
-    dark = rest if kind == "scatter" else 0.0
-    noise = estimate_noise(signal[good], dark)
-    clipped = np.zeros(signal.size, dtype=bool)
-    if full_scale is not None:
-        margin = max(noise.step, 1e-6 * full_scale)
-        clipped = good & (np.abs(signal) >= full_scale - margin)
-        if clipped.any():
-            noise = estimate_noise(signal[good & ~clipped], dark)
+    clipped = np.zeros(signal.size, dtype=bool) if clipped is None else clipped & good
     used = good & ~clipped
-    smooth = running_mean(np.where(good, signal, rest), _SMOOTHING)
-    sigma = np.sqrt(noise.variance(smooth))
-    return ChannelData(
-        column, kind, signal, used, sigma, noise, int(clipped.sum()), int((~finite & window).sum())
+    hops = find_hops(signal, used) if kind == "transmission" else None
+    data = ChannelData(
+        column, kind, signal, used, np.ones(signal.size), NoiseModel(1.0, 0.0, 0.0, 0.0, 0.0),
+        int(clipped.sum()), int((~finite & window).sum()), hops, signal,
     )
+    return _weighed(data, good, baseline & good)
+
+
+def _weighed(data, good, before):
+    """Return a channel with its hops taken out and its noise estimated anew."""
+    signal, used = data.raw, good & data.used
+    if data.hops is not None:
+        signal = data.hops.corrected(signal)
+        used = used & ~data.hops.edge
+    rest = float(np.median(signal[before])) if before.any() else 0.0
+    noise = estimate_noise(signal[used], rest if data.kind == "scatter" else 0.0)
+    smooth = running_mean(np.where(good, signal, rest), _SMOOTHING)
+    return replace(data, signal=signal, used=used, noise=noise,
+                   sigma=np.sqrt(noise.variance(smooth)))
+
+
+def rehopped(data, fit):
+    """Return a channel whose laser's states are decided anew from what a fit leaves.
+
+    Parameters
+    ----------
+    data : ChannelData
+        With hops.
+    fit : ndarray, shape (n,)
+        Fitted light [V].
+
+    Returns
+    -------
+    data : ChannelData
+        The channel with better hops.
+    """
+    good = data.used | data.hops.edge
+    hops = refine_hops(data.hops, data.raw, fit, good)
+    return _weighed(replace(data, hops=hops, used=good), good, np.zeros(good.size, dtype=bool))
 
 
 def without(data, bad):

@@ -5,7 +5,13 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from scatterfit.forward.model import Cloud, hermite
-from scatterfit.inversion.data import ChannelData, bin_channels, bin_edges, without
+from scatterfit.inversion.data import (
+    ChannelData,
+    bin_channels,
+    bin_edges,
+    rehopped,
+    without,
+)
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
 from scatterfit.inversion.problem import Evaluation, Problem
 from scatterfit.inversion.search import search
@@ -18,6 +24,8 @@ _APART = 4e-3
 _RIVAL = 400.0
 _HOPELESS = 4.0
 _CONTINUED = 3
+_HOP_ROUNDS = 5
+_HOPS_SETTLED = 1e-3
 
 
 @dataclass(frozen=True)
@@ -70,6 +78,7 @@ def fit_pulse(model, time, channels, options):
                       tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, _CANDIDATES)
     found = _descend_all(problem, [c.cloud for c in candidates])
+    channels, found = _without_hops(problem, found, time, channels, options.onset)
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
     best, others = _best_of(replace(_with(problem, fine, ((),) * len(channels))), found)
@@ -86,6 +95,24 @@ def fit_pulse(model, time, channels, options):
         best = descend(problem, best.best.cloud, iterations=6, tolerance=0.05)
     best = polish(problem, best)
     return _finished(problem, best, time, (channels, others, disturbances, count))
+
+
+def _without_hops(problem, found, time, channels, onset):
+    """Return the channels with the laser's hops decided by the fit, and the clouds fitted anew."""
+    for _ in range(_HOP_ROUNDS):
+        if all(data.hops is None for data in channels):
+            break
+        fits = full_residual(problem, found[0].best, time, channels)[0]
+        again = tuple(d if d.hops is None else rehopped(d, f)
+                      for d, f in zip(channels, fits, strict=True))
+        moved = sum(int(np.sum(a.hops.upper != b.hops.upper))
+                    for a, b in zip(again, channels, strict=True) if a.hops is not None)
+        channels = again
+        problem = replace(problem, bins=bin_channels(time, channels, bin_edges(time, onset, _COARSE)))
+        found = _descend_all(problem, [s.best.cloud for s in found[:_CONTINUED]])
+        if moved < _HOPS_SETTLED * time.size:
+            break
+    return channels, found
 
 
 def _undisturbed(problem, fine, best):

@@ -40,7 +40,8 @@ def growth_scale_sigma(setup, free=()):
               if key in sigmas]
     warm = 0.0 if "temperature" in free else stated[0] if stated else _TEMPERATURE
     parts = [
-        _rate(setup, radius, path.reference_temperature + warm, setup.vapour_fraction) - base,
+        _rate(setup, radius, path.reference_temperature + warm, setup.vapour_fraction
+              * (1.0 + setup.vapour_by_temperature * warm / path.reference_temperature)) - base,
     ]
     wet = 0.0 if "vapour" in free else _vapour_sigma(sigmas, vapour)
     parts.append(_rate(setup, radius, path.reference_temperature,
@@ -69,7 +70,7 @@ def _vapour_sigma(sigmas, vapour):
 def _rate(setup, radius, temperature, fraction):
     """Return dr/dt of one droplet in the growth stage [m/s]."""
     vapour = setup.apparatus.vapour
-    rate, _ = growth_rate(
+    rate, *_ = growth_rate(
         setup.properties, np.array([radius]),
         (np.array([temperature]), setup.path.reference_pressure, np.array([fraction])),
         (vapour.mass_accommodation, vapour.thermal_accommodation),

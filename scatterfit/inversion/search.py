@@ -7,6 +7,7 @@ import numpy as np
 from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
+from scatterfit.droplet_growth.setup import with_threshold
 from scatterfit.forward.light import spread_table
 from scatterfit.forward.model import Cloud, per_mole
 
@@ -15,6 +16,7 @@ _STICKING = (0.0, -1.2)
 _DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
 _VARIANCE = 2e-5
 _PHASE = 0.35
+_VAPOUR_SIGMAS = 2.5
 
 
 @dataclass(frozen=True)
@@ -52,12 +54,15 @@ def search(problem, delays, widest, count=6):
         Best first, each at a minimum of the grid.
     """
     setup = problem.model.setup
+    axis = _axis(problem)
+    if axis == "vapour":
+        widest = min(_VAPOUR_SIGMAS * problem.priors["vapour"][1], 0.3)
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
     levels = _levels(setup)
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
     table = spread_table(problem.model.light, _VARIANCE)
-    width = problem.priors.get("scale", (0.0, 0.15))[1]
-    curves = _curves(setup, sticking, level, scales)
+    width = problem.priors.get(axis, (0.0, 0.15))[1]
+    curves = _curves(setup, sticking, level, (axis, scales))
     found = []
     for delay in delays:
         radius, density = _sampled(curves, scales, problem.bins.time - delay)
@@ -67,8 +72,8 @@ def search(problem, delays, widest, count=6):
             row, column = np.unravel_index(i, misfit.shape)
             cloud = Cloud(
                 number=_number(problem, amplitude[:, row, column], level[row]),
-                scale=scales[column], delay=delay, variance=_VARIANCE,
-                accommodation=sticking[row], angles=(0.0,) * len(setup.apparatus.detectors),
+                delay=delay, variance=_VARIANCE, accommodation=sticking[row],
+                angles=(0.0,) * len(setup.apparatus.detectors), **{axis: scales[column]},
             )
             found.append(Candidate(cloud, float(misfit[row, column]),
                                    float(radius[row, column, -1])))
@@ -88,38 +93,74 @@ class _Curves:
     """Shape (l, 1, 1) [m]."""
     density: np.ndarray
     """Shape (l, s or 1, m) [1/m^3]."""
+    births: np.ndarray
+    """Shape (l, s or 1, 1) [s]."""
     stretched: bool
     """Whether a scale is a stretch of time, one solution for all."""
 
 
-def _curves(setup, sticking, level, scales):
+def _axis(problem):
+    """Return what the grid varies: the growth scale, or the vapour of a seeded cloud.
+
+    Near saturation a small change of the vapour changes when and how fast seeds grow, which no
+    growth scale can imitate.
+    """
+    seeded = problem.model.setup.threshold is not None
+    return "vapour" if seeded and "vapour" in problem.names else "scale"
+
+
+def _curves(setup, sticking, level, axis):
     """Return the clouds of the grid, grown."""
+    name, scales = axis
     stretched = setup.threshold is None
     birth = setup.births.median
-    path = _thinned(setup.path, birth, np.exp(scales[-1]) if stretched else 1.0)
-    if not stretched:
-        sticking, level, scale = (
-            np.repeat(sticking, scales.size), np.repeat(level, scales.size),
-            np.tile(scales, level.size),
-        )
+    path = setup.path
+    births = np.array([birth])
+    shift = np.zeros(level.size)
+    if stretched:
+        path = _thinned(setup.path, birth, np.exp(scales[-1]))
     else:
-        scale = np.zeros(level.size)
+        sticking, level = np.repeat(sticking, scales.size), np.repeat(level, scales.size)
+        shift = np.tile(scales, level.size // scales.size)
+        if name == "vapour":
+            times = [births_shifted(setup, value) for value in scales]
+            births = np.tile(np.array(times), level.size // scales.size)[:, None]
     vapour = setup.apparatus.vapour
     growth = solve_cloud(
-        setup.properties, path, (np.array([birth]), np.ones(1)),
+        setup.properties, path, (births, np.ones(1)),
         CloudParameters(
-            per_mole(setup, level), np.exp(scale), vapour.mass_accommodation * np.exp(sticking),
-            vapour.thermal_accommodation, setup.vapour_fraction, 1.0,
+            per_mole(setup, level), np.exp(shift if name == "scale" else 0.0 * shift),
+            vapour.mass_accommodation * np.exp(sticking), vapour.thermal_accommodation,
+            setup.vapour_fraction * np.exp(shift if name == "vapour" else 0.0 * shift), 1.0,
         ),
         setup.start_radius,
     )
-    rows = -1 if stretched else scales.size
-    shape = (level.size, 1, path.time.size) if stretched else (-1, rows, path.time.size)
+    shape = (level.size, 1, -1) if stretched else (level.size // scales.size, scales.size, -1)
+    origin = birth if stretched else 0.0
     return _Curves(
-        path.time - birth, birth, growth.square[:, 0, :].reshape(shape),
-        growth.length.reshape(shape[0], shape[1], 1)[:, :1], growth.number_density.reshape(shape),
-        stretched,
+        path.time - origin, origin, growth.square[:, 0, :].reshape(shape),
+        growth.length.reshape(shape[0], shape[1], 1)[:, :1],
+        growth.number_density.reshape(shape),
+        growth.birth_times.reshape(shape[0], shape[1], 1), stretched,
     )
+
+
+def births_shifted(setup, wetter):
+    """Return when seeds become droplets in a wetter gas.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of a seeded pulse.
+    wetter : float
+        ln of the vapour over that of the setup [-].
+
+    Returns
+    -------
+    birth : float
+        Time of birth [s].
+    """
+    return with_threshold(setup, setup.threshold, wetter).births.median
 
 
 def _sampled(curves, scales, clock):
@@ -136,7 +177,8 @@ def _sampled(curves, scales, clock):
         return values[..., index] + t * (values[..., index + 1] - values[..., index])
 
     radius = np.sqrt(at(curves.square)) - curves.length
-    return np.where(age > 0.0, radius, 0.0), at(curves.density)
+    born = age > 0.0 if curves.stretched else clock > curves.births
+    return np.where(born, radius, 0.0), at(curves.density)
 
 
 def _thinned(path, birth, stretch=1.0):
@@ -192,7 +234,7 @@ def _misfits(problem, table, radius, density):
     born = radius > 0.0
     place = (np.log(np.maximum(radius, 1e-9)) - table.start) * (1.0 / table.step)
     index = np.clip(np.rint(place), 0, table.cells.shape[1] - 1).astype(np.intp)
-    everywhere = born.all(axis=(0, 1))
+    everywhere = born.any(axis=(0, 1))
     total = np.zeros(radius.shape[:2])
     amplitudes = []
     for i, channel in enumerate(model.channels):

@@ -30,7 +30,7 @@ REASONS = {
     "glitches": "samples far outside the noise were left out",
     "hum": "mains hum was found and fitted",
     "drift": "a drifting baseline was found and fitted",
-    "mode-hops": "the laser jumped between modes; its other level was left out",
+    "mode-hops": "the laser hops between modes; its brighter state was scaled to the other",
     "multiple-scattering": "light scattered twice is no longer negligible",
     "largest-radius": "droplets reach the largest radius considered",
     "not-converged": "the last descent did not settle",
@@ -178,6 +178,12 @@ def sample_findings(fit):
         if data.missing:
             found.append(Finding("missing-samples", (
                 f"{data.missing} cells of {data.column} are not finite and were left out"
+            )))
+        if data.hops is not None:
+            found.append(Finding("mode-hops", (
+                f"the laser of {data.column} hops between modes {100 * np.expm1(data.hops.height):.1f} "
+                "percent apart; its brighter state was scaled to the other. A power monitor "
+                "([reference]) or a stabilised laser would remove it"
             )))
         hums = [name for name in names if name.startswith("hum")]
         if hums:

@@ -3,6 +3,7 @@
 import numpy as np
 
 from scatterfit.forward.model import channel_signals
+from scatterfit.inversion.prior import depletion_sigma
 
 
 
@@ -34,6 +35,8 @@ def bench_inputs(prepared, problem, best, index_shift=2e-4):
         priors[name] = (0.0, sigma)
         columns.append((name, parts))
     priors["creep"] = (0.0, _CREEP)
+    # The fit's own prior holds the path's share as well, which has a column of its own here.
+    priors["depletion"] = (0.0, depletion_sigma(prepared.setup))
     return {"names": ("creep",), "more": columns, "priors": priors}
 
 

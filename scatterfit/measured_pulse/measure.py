@@ -178,7 +178,7 @@ def _result(prepared, fit, gas, warnings):
     reference = setup.apparatus.analysis.reference_radius
     rates, more = _rates(setup, fit, after, reference)
     budget += more
-    scale = q.quantity(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
+    scale = q.exponential(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
     turns = _matched(prepared, fit, curve)
     left = rivals_left(fit, after.inflation, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)

@@ -10,6 +10,7 @@ from scatterfit.errors import TraceError
 from scatterfit.forward.light import cloud_light
 from scatterfit.forward.model import Channel, PulseModel
 from scatterfit.inversion.data import channel_data
+from scatterfit.inversion.noise import resolution_step
 
 _FEWEST = 20
 _REACH = 3.0
@@ -223,8 +224,8 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
     optical = _normalised(apparatus, time, columns, baseline)
     channels = []
     for column, kind, record in optical_columns(apparatus):
-        full_scale = getattr(record, "full_scale", None)
-        data = channel_data(column, kind, optical[column], window, baseline, full_scale)
+        clipped = _clipped(columns[column], getattr(record, "full_scale", None))
+        data = channel_data(column, kind, optical[column], window, baseline, clipped)
         if data.used.sum() < _FEWEST:
             message = (
                 f"column {column} has {int(data.used.sum())} usable samples, fewer than "
@@ -247,6 +248,15 @@ def _span(apparatus, time):
         return slice(0, time.size)
     end = int(np.searchsorted(time, apparatus.analysis.window[1], side="right"))
     return slice(0, max(end, min(_FEWEST, time.size)))
+
+
+def _clipped(values, full_scale):
+    """Return the samples within one resolution step of full scale, as recorded [bool]."""
+    values = np.asarray(values, dtype=float)
+    if full_scale is None:
+        return np.zeros(values.size, dtype=bool)
+    step = resolution_step(values[np.isfinite(values)])
+    return np.abs(values) >= full_scale - max(step, 1e-6 * full_scale)
 
 
 def _baseline(apparatus, setup, time):

@@ -53,6 +53,31 @@ def quantity(derived, posterior, floor=0.0):
     return Quantity(derived.value + shift, float(np.sqrt(variance))), noise, parts
 
 
+def exponential(derived, posterior):
+    """Return a quantity known by its logarithm; as :func:`quantity` otherwise.
+
+    Parameters
+    ----------
+    derived : Derived
+        ln of the quantity and its gradient.
+    posterior : Posterior
+        Of the fit.
+
+    Returns
+    -------
+    result : Quantity
+        Value and standard uncertainty.
+    noise : float
+        Variance from the noise.
+    parts : dict of str to float
+        Variance by input.
+    """
+    log, noise, parts = quantity(derived, posterior)
+    value = float(np.exp(np.clip(log.value, -60.0, 60.0)))
+    scaled = {name: part * value**2 for name, part in parts.items()}
+    return Quantity(value, value * log.sigma), noise * value**2, scaled
+
+
 def median_weights(births):
     """Return how to weigh the classes so that the sum is the droplet of median age.
 
@@ -146,11 +171,8 @@ def radius_curve(setup, problem, state, posterior):
     relative = np.sqrt(np.einsum("pn,pq,qn->n", gradient, posterior.covariance, gradient))
     radius = np.exp(log_radius[chosen] + gradient.T @ posterior.step)
     last = born[-1]
-    final = Derived(
-        float(np.exp(log_radius[last])),
-        {name: float(np.exp(log_radius[last]) * row[last]) for name, row in by.items()},
-    )
-    return Curve(time[chosen], radius, radius * relative), quantity(final, posterior)
+    final = Derived(float(log_radius[last]), {name: float(row[last]) for name, row in by.items()})
+    return Curve(time[chosen], radius, radius * relative), exponential(final, posterior)
 
 
 def at_reference(setup, posterior, radius):
@@ -220,12 +242,12 @@ def growth_scale(setup, cloud, radius):
     Returns
     -------
     derived : Derived
-        Ratio and its gradient [-].
+        ln of the ratio and its gradient [-].
     """
     vapour, path = setup.apparatus.vapour, setup.path
 
     def rate(accommodation):
-        value, _ = growth_rate(
+        value, *_ = growth_rate(
             setup.properties, np.array([radius]),
             (np.array([path.reference_temperature]), path.reference_pressure,
              np.array([setup.vapour_fraction])),
@@ -238,10 +260,9 @@ def growth_scale(setup, cloud, radius):
     here = rate(cloud.accommodation)
     slope = (rate(cloud.accommodation + step) - here) / step
     bend = np.log(radius / 1e-6)
-    ratio = here / base * np.exp(cloud.scale + cloud.bend * bend)
-    return Derived(float(ratio), {
-        "scale": float(ratio), "bend": float(ratio * bend),
-        "accommodation": float(ratio * slope / here),
+    log = np.log(max(here / base, 1e-9)) + cloud.scale + cloud.bend * bend
+    return Derived(float(log), {
+        "scale": 1.0, "bend": float(bend), "accommodation": float(slope / here),
     })
 
 
@@ -268,7 +289,7 @@ def state_derivatives(setup, temperature, pressure):
     latent = float(setup.substance.latent_heat(temperature))
     steepness = latent / (GAS_CONSTANT * temperature)
     return setup.vapour_fraction * pressure / saturated, {
-        "temperature": -steepness, "vapour": 1.0,
+        "temperature": setup.vapour_by_temperature - steepness, "vapour": 1.0,
     }
 
 

@@ -43,7 +43,7 @@ def fit_options(prepared, angle_base):
     names = ["number", "scale", "delay", "variance", "accommodation", "bend", "depletion"]
     priors = {
         "accommodation": (0.0, _STICKING), "bend": (0.0, _BEND),
-        "depletion": (0.0, depletion_sigma(setup)),
+        "depletion": (0.0, float(np.hypot(depletion_sigma(setup), _path_sigma(apparatus)))),
     }
     for i, detector in enumerate(apparatus.detectors):
         sigma = apparatus.sigmas.get(f"detector.{detector.column}.angle_deg")
@@ -73,6 +73,13 @@ def fit_options(prepared, angle_base):
     priors["delay"] = (onset - 0.3 * lag, _LOOSE_CLOCK + lag)
     delays = tuple(onset - lag * np.linspace(0.0, 1.0, 5))
     return FitOptions(tuple(names), priors, onset, delays, widest)
+
+
+def _path_sigma(apparatus):
+    """Return how far light and depletion may disagree about the number because of the path [-]."""
+    if apparatus.transmission is None or any(d.gain for d in apparatus.detectors):
+        return 0.0
+    return apparatus.sigmas.get("transmission.path_mm", 0.0) / apparatus.transmission.path
 
 
 def _visible_after(prepared):
