@@ -200,7 +200,8 @@ def local_crew(plan, count, *, workers=None):
         Ended with the ``with`` statement, in the middle of its work where that fails.
     """
     workers = max(1, min(workers or processors(), count))
-    crew = Crew(plan, partial(LocalPool, workers), lambda: 2 * workers)
+    pool = partial(LocalPool, workers, numerics=plan.fit is None)
+    crew = Crew(plan, pool, lambda: 2 * workers)
     with ended(crew):
         yield crew
 

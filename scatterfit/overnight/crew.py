@@ -127,7 +127,7 @@ class Crew:
         except CancelledError as error:
             message = "the workers gave up their tasks; has their scheduler ended?"
             raise CrewError(message) from error
-        except Exception as error:  # noqa: BLE001 - becomes the pulse's row
+        except (Exception, SystemExit) as error:  # noqa: BLE001 - becomes the pulse's row
             yield broken(self._plan, job, error)
 
     def _done(self, timeout):

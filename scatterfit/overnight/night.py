@@ -6,7 +6,7 @@ from scatterfit.apparatus.check import apparatus_from_mapping, apply_overrides
 from scatterfit.apparatus.values import printable
 from scatterfit.files import read_chamber_mapping
 from scatterfit.overnight.catalogue import NoTraceError
-from scatterfit.overnight.jobs import hash_of, version
+from scatterfit.overnight.jobs import hash_of, set_outside, version
 from scatterfit.overnight.ledger_file import LedgerError
 
 
@@ -26,7 +26,8 @@ def check_plan(plan):
     Raises
     ------
     ChamberFileError
-        If the chamber file, with the plan's overrides, does not describe a bench.
+        If the chamber file, with the plan's overrides, does not describe a bench, or the
+        folder's ``pulses.csv`` cannot be understood.
     NoTraceError
         If there is no such folder.
     """
@@ -39,6 +40,7 @@ def check_plan(plan):
         what = "is a file" if Path(plan.folder).exists() else "there is no such folder"
         message = printable(f"{plan.folder}: {what}; name the folder that holds the traces")
         raise NoTraceError(message)
+    set_outside(Path(plan.folder) / "any", plan.folder, {})  # reads pulses.csv
     return hash_of(plan.chamber)
 
 

@@ -17,8 +17,8 @@ from contextlib import contextmanager
 
 from scatterfit.overnight.work import own_this_process
 
-_PRELOADED = ["scatterfit.overnight.work", "scatterfit.files_fit", "lmfit", "scipy.optimize",
-              "scipy.special"]
+_PRELOADED = ["scatterfit.overnight.work"]
+_NUMERICS = ["scatterfit.files_fit", "lmfit", "scipy.optimize", "scipy.special"]
 _THREADS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMEXPR_NUM_THREADS",
             "VECLIB_MAXIMUM_THREADS", "BLIS_NUM_THREADS", "NUMBA_NUM_THREADS")
 
@@ -43,14 +43,16 @@ class LocalPool(ProcessPoolExecutor):
     ----------
     workers : int
         How many.
+    numerics : bool
+        Whether they will fit pulses, and had better load what that needs beforehand.
     """
 
-    def __init__(self, workers):
+    def __init__(self, workers, *, numerics=True):
         methods = multiprocessing.get_all_start_methods()
         method = "forkserver" if "forkserver" in methods else "spawn"
         context = multiprocessing.get_context(method)
         if method == "forkserver":
-            context.set_forkserver_preload(_PRELOADED)
+            context.set_forkserver_preload(_PRELOADED + _NUMERICS * numerics)
         super().__init__(workers, mp_context=context, initializer=_begin)
 
     def submit(self, fn, /, *args, **kwargs):

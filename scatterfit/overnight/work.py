@@ -100,7 +100,7 @@ def measure(plan: Plan, job: Job) -> Outcome:
         made = failed(plan, job, "took-too-long", text)
     except ChamberFileError as error:
         made = failed(plan, job, "not-a-bench", str(error))
-    except Exception as error:  # noqa: BLE001 - a night goes on, and the row says what happened
+    except (Exception, SystemExit) as error:  # noqa: BLE001 - the row says what happened
         made = failed(plan, job, "internal-error", _described(error))
     return Outcome(job, **made, **inputs, seconds=time.monotonic() - begun)
 
