@@ -48,6 +48,8 @@ def format_quantity(value, sigma, unit=""):
     '(4.1 ± 1.2)×10⁶ cm⁻³ s⁻¹'
     >>> format_quantity(5842.7, 117.0, "1/cm3")
     '5840 ± 120 cm⁻³'
+    >>> format_quantity(269.07, 0.0, "K")
+    '269.07 K (no sigma stated)'
     >>> format_quantity(None, None, "um")
     'not determined'
     """
@@ -61,7 +63,7 @@ def format_quantity(value, sigma, unit=""):
         message = f"sigma must not be negative, but it is {sigma:g}"
         raise InvalidInputError(message)
     if sigma == 0:
-        return _with_unit(f"{format_number(value)} ± 0", unit)
+        return f"{format_number(value, unit, digits=5)} (no sigma stated)"
     place = _last_place(sigma)
     number, error = Decimal(repr(float(value))), Decimal(repr(float(sigma)))
     power = max(_rounded(number, place).adjusted(), _rounded(error, place).adjusted())

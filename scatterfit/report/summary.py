@@ -16,6 +16,7 @@ VERDICTS = {
 """What each verdict means, in words."""
 
 _LABEL = 28
+_WORTH_A_WORD = 0.01
 
 
 def summary_text(result):
@@ -169,12 +170,13 @@ def _budget(budget):
     """Return the three largest inputs of the radius' and the number's uncertainty."""
     lines = []
     for quantity in ("final_radius_um", "concentration_per_cm3"):
-        rows = [row for row in budget if row["quantity"] == quantity]
+        rows = [row for row in budget
+                if row["quantity"] == quantity and (row["share"] or 0) >= _WORTH_A_WORD]
         largest = sorted(rows, key=lambda row: row["share"], reverse=True)[:3]
         if largest:
             shares = ", ".join(f"{row['input']} {100 * row['share']:.0f} %" for row in largest)
             head = "final radius: " if quantity == "final_radius_um" else "number: "
-            lines += textwrap.wrap(head + shares, WIDTH - 2, break_long_words=False)
+            lines += textwrap.wrap(head + shares, WIDTH - 2, subsequent_indent="    ")
     return "\n".join(["Where the uncertainty comes from (share of variance)"] * bool(lines)
                      + [f"  {line}" for line in lines])
 
