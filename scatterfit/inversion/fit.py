@@ -13,9 +13,10 @@ from scatterfit.inversion.data import (
     without,
 )
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
-from scatterfit.inversion.problem import Evaluation, Problem
+from scatterfit.inversion.problem import Evaluation, Problem, evaluate
 from scatterfit.inversion.search import search
 from scatterfit.inversion.solve import descend, polish
+from scatterfit.inversion.uncertainty import channel_inflation
 
 _COARSE = 260
 _FINE = 800
@@ -24,6 +25,9 @@ _APART = 4e-3
 _RIVAL = 400.0
 _HOPELESS = 4.0
 _CONTINUED = 3
+_COMPARABLE = 2.5
+_SOFT = 1.6
+_SOFTENINGS = 3
 _HOP_ROUNDS = 5
 _HOPS_SETTLED = 1e-3
 
@@ -77,7 +81,7 @@ def fit_pulse(model, time, channels, options):
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, _CANDIDATES)
-    found = _descend_all(problem, [c.cloud for c in candidates])
+    found = _explore(problem, [c.cloud for c in candidates])
     channels, found = _without_hops(problem, found, time, channels, options.onset)
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
@@ -93,8 +97,24 @@ def fit_pulse(model, time, channels, options):
         fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
         best = descend(problem, best.best.cloud, iterations=6, tolerance=0.05)
+    problem, best = _softened(problem, best)
     best = polish(problem, best)
     return _finished(problem, best, time, (channels, others, disturbances, count))
+
+
+def _softened(problem, best):
+    """Return the problem with channels that are noisier than their samples say weighted less.
+
+    Slow noise of a laser and what the model misses do not average out as white noise does; with
+    the weights of white noise they would overrule what is known beforehand.
+    """
+    for _ in range(_SOFTENINGS):
+        factors = np.array(channel_inflation(problem, best.best))
+        if factors.max() < _SOFT:
+            break
+        problem = _soften(problem, factors)
+        best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
+    return problem, best
 
 
 def _without_hops(problem, found, time, channels, onset):
@@ -109,7 +129,7 @@ def _without_hops(problem, found, time, channels, onset):
                     for a, b in zip(again, channels, strict=True) if a.hops is not None)
         channels = again
         problem = replace(problem, bins=bin_channels(time, channels, bin_edges(time, onset, _COARSE)))
-        found = _descend_all(problem, [s.best.cloud for s in found[:_CONTINUED]])
+        found = _explore(problem, [s.best.cloud for s in found[:_CANDIDATES]])
         if moved < _HOPS_SETTLED * time.size:
             break
     return channels, found
@@ -137,6 +157,13 @@ def _best_of(problem, found):
         key=lambda s: s.best.chi2,
     )
     best = refined[0]
+    if len(refined) > 1:
+        # Only the order is decided with softer weights; the fit itself starts from the trace's own.
+        soft = _soften(problem, np.array(channel_inflation(problem, best.best)))
+        best = min(refined, key=lambda s: evaluate(
+            soft, s.best.cloud, derivatives=False, linear=s.best.state.linear).chi2)
+        refined.remove(best)
+        refined.insert(0, best)
     rivals = [
         Rival(s.best.cloud, _final(s), float(s.best.chi2 - best.best.chi2))
         for s in _distinct(refined)[1:]
@@ -239,6 +266,29 @@ def _with(problem, bins, disturbances):
     """Return the problem with other bins and disturbances."""
     extras = tuple(stack_columns(bins.time, names) for names in disturbances)
     return replace(problem, bins=bins, extras=extras)
+
+
+def _explore(problem, clouds):
+    """Return where descents from several clouds end, ordered by misfit and prior, best first.
+
+    Where the misfit is not noise, what is known beforehand would count for nothing beside it: the
+    order of close rivals is then that with the weights which the best of them deserves.
+    """
+    found = _descend_all(problem, clouds)
+    close = [s for s in found if s.best.chi2 < _COMPARABLE * found[0].best.chi2]
+    factors = np.array(channel_inflation(problem, found[0].best))
+    if len(close) < 2 or factors.max() < _SOFT:
+        return found
+    soft = _soften(problem, factors)
+    again = [descend(soft, s.best.cloud, iterations=8, tolerance=0.1) for s in close]
+    return _distinct([*sorted(again, key=lambda s: s.best.chi2),
+                      *(s for s in found if s not in close)])
+
+
+def _soften(problem, factors):
+    """Return the problem with the variance of each channel's bins multiplied by its factor."""
+    weights = problem.bins.weights / np.sqrt(np.where(factors < _SOFT, 1.0, factors))[:, None]
+    return replace(problem, bins=replace(problem.bins, weights=weights))
 
 
 def _descend_all(problem, clouds):

@@ -9,6 +9,7 @@ from scatterfit.inversion.problem import evaluate
 
 _WHITE = 1.25
 _BLOCKS = (1, 4, 16)
+_FEWEST_BLOCKS = 12
 _DETERMINED = 0.6
 
 
@@ -94,7 +95,7 @@ def posterior(problem, best, inputs):
     scale = 1.0 / np.maximum(np.sqrt(np.sum(jacobian**2, axis=0)), 1e-300)
     inverse = _inverse(jacobian * scale)
     step = -scale * (inverse @ ((jacobian * scale).T @ wide.residual))
-    inflation = _inflation(problem, best, data_rows)
+    inflation = _inflation(problem, best)
     data = jacobian[:data_rows] * scale
     spread = inverse @ data.T
     noise = inflation * (spread @ spread.T) * np.outer(scale, scale)
@@ -112,19 +113,38 @@ def _inverse(jacobian):
     return (vectors / np.maximum(values, 1e-13)) @ vectors.T
 
 
-def _inflation(problem, best, data_rows):
-    """Return how much larger the variance of block means of residuals is than for white noise."""
-    bins = problem.bins
-    most, start = 1.0, 0
-    for weight in bins.weights:
+def channel_inflation(problem, best):
+    """Return by how much block means of each channel's residuals vary more than white noise does.
+
+    Parameters
+    ----------
+    problem : Problem
+        What was fitted.
+    best : Evaluation
+        The solution.
+
+    Returns
+    -------
+    factors : list of float
+        Ratio of variances by channel, at least 1 [-].
+    """
+    factors, start = [], 0
+    for weight in problem.bins.weights:
         residual = best.residual[start:start + weight.size][weight > 0]
         start += weight.size
+        most = 1.0
         for block in _BLOCKS:
             count = residual.size // block
-            if count < 12:
-                continue
-            means = residual[: count * block].reshape(count, block).sum(axis=1) / np.sqrt(block)
-            most = max(most, float(np.mean(means**2)))
+            if count >= _FEWEST_BLOCKS:
+                means = residual[: count * block].reshape(count, block).sum(axis=1)
+                most = max(most, float(np.mean(means**2)) / block)
+        factors.append(most)
+    return factors
+
+
+def _inflation(problem, best):
+    """Return the largest of the channels' inflations, 1 where they are white."""
+    most = max(channel_inflation(problem, best))
     return most if most > _WHITE else 1.0
 
 

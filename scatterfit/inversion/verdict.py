@@ -98,7 +98,8 @@ def unexplained(fit):
     part : float
         In the bins [-].
     """
-    return fit.best.chi2 / max(fit.chi2_null, 1e-300)
+    rows = fit.problem.bins.weights.size
+    return float(np.sum(fit.best.residual[:rows] ** 2)) / max(fit.chi2_null, 1e-300)
 
 
 def rivals_left(fit, inflation, best_radius):

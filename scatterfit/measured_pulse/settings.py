@@ -17,6 +17,7 @@ _BEND = 0.01
 _CLOCK = 2e-4
 _LOOSE_CLOCK = 5e-3
 _THRESHOLD = 0.02
+_UNKNOWN_THRESHOLD = 0.06
 _WIDEST_SIGMAS = 4.0
 _WIDEST = 0.6
 _VISIBLE = 0.6e-6
@@ -59,7 +60,8 @@ def fit_options(prepared, angle_base):
     priors["scale"] = (0.0, growth_scale_sigma(setup, free))
     if setup.threshold is not None:
         names.append("threshold")
-        priors["threshold"] = (0.0, _THRESHOLD)
+        known = apparatus.seed.diameter is not None
+        priors["threshold"] = (0.0, _THRESHOLD if known else _UNKNOWN_THRESHOLD)
     widest = min(_WIDEST_SIGMAS * growth_scale_sigma(setup), _WIDEST)
     if setup.clock_known:
         priors["delay"] = (0.0, _CLOCK)
