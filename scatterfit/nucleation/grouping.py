@@ -49,7 +49,7 @@ def isotherms(temperature, tolerance=None):
     else:
         message = f"the tolerance of an isotherm must be positive, but it is {tolerance:g} K"
         raise InvalidInputError(message)
-    return groups[::-1]
+    return [np.sort(group) for group in groups[::-1]]
 
 
 def _within(values, tolerance):
