@@ -13,7 +13,7 @@ from typing import Annotated
 
 import typer
 
-from scatterfit import cli_night
+from scatterfit import cli_night, cli_nucleation
 from scatterfit.errors import ChamberFileError, ScatterfitError
 
 app = typer.Typer(
@@ -264,3 +264,4 @@ def fit(
 
 
 app.registered_commands += cli_night.app.registered_commands
+app.registered_commands += cli_nucleation.app.registered_commands

@@ -5,7 +5,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.matter import Substance
+from scatterfit.constants import GAS_CONSTANT
+from scatterfit.matter import Gas, Substance
 from scatterfit.nucleation.activation_fit import Curve, Fractions, fit_curve, wilson_interval
 from scatterfit.nucleation.estimate import Estimate
 from scatterfit.nucleation.grouping import isotherms
@@ -37,8 +38,8 @@ REASONS_LEFT_OUT = {
     "failed": "the trace could not be used",
     "ambiguous": "another solution cannot be excluded (--ambiguous takes them)",
     "rejected": "rejected without an upper limit of the number",
-    "no_conditions": "no temperature, saturation ratio or number of seeds",
-    "no_number": "neither a number nor an upper limit of it",
+    "no-conditions": "no temperature, saturation ratio or number of seeds",
+    "no-number": "neither a number nor an upper limit of it",
 }
 """Why a row takes no part in a fit."""
 
@@ -59,6 +60,8 @@ class ActivationSettings:
     """Hygroscopicity of soluble seeds to compare with [-]."""
     free_plateau: bool | None = None
     """Whether the curve may level off elsewhere than at one; ``None``: where data demand it."""
+    gas: Gas | None = None
+    """The carrier, for the gas density of seeds and droplets."""
 
 
 @dataclass(frozen=True)
@@ -167,7 +170,7 @@ def analyse_activation(table, settings, *, by=None, ambiguous=False):
     InvalidInputError
         If a column is missing.
     """
-    seeded, left_out, density = seeded_pulses(table, ambiguous=ambiguous)
+    seeded, left_out, density = seeded_pulses(table, settings.gas, ambiguous=ambiguous)
     runs = []
     for value, rows in group_rows(table, by).items():
         part = seeded.take(np.flatnonzero(np.isin(seeded.row, rows)))
@@ -176,13 +179,15 @@ def analyse_activation(table, settings, *, by=None, ambiguous=False):
     return Activation(table.source, settings, by, density, tuple(runs), left_out)
 
 
-def seeded_pulses(table, *, ambiguous=False):
+def seeded_pulses(table, gas=None, *, ambiguous=False):
     """Return the pulses of a table that say which part of the seeds activated.
 
     Parameters
     ----------
     table : Table
         The table.
+    gas : Gas, optional
+        The carrier, which tells the density of the gas from its temperature.
     ambiguous : bool
         Whether ambiguous pulses are taken.
 
@@ -209,13 +214,13 @@ def seeded_pulses(table, *, ambiguous=False):
         "failed": verdict == "failed",
         "ambiguous": (verdict == "ambiguous") & (not ambiguous),
         "rejected": rejected & ~np.isfinite(limit),
-        "no_conditions": ~np.isfinite(known).all(axis=0),
-        "no_number": ~rejected & ~np.isfinite(number) & ~np.isfinite(limit),
+        "no-conditions": ~np.isfinite(known).all(axis=0),
+        "no-number": ~rejected & ~np.isfinite(number) & ~np.isfinite(limit),
     }
     cause = np.select(list(rules.values()), list(rules.keys()), default="")
     rows = np.flatnonzero(cause == "")
     none = (rejected | ~np.isfinite(number))[rows]
-    factor, density = _density_factor(table)
+    factor, density = _density_factor(table, gas)
     per_seed = factor[rows] / seeds[rows]
     fraction = np.where(none, 0.0, number[rows]) * per_seed
     data, shared = _fractions(table, rows, fraction, np.where(none, limit[rows], np.nan) * per_seed)
@@ -224,16 +229,28 @@ def seeded_pulses(table, *, ambiguous=False):
     return seeded, {name: int(np.sum(cause == name)) for name in REASONS_LEFT_OUT}, density
 
 
-def _density_factor(table):
-    """Return what takes a number during growth to the chamber's state, where seeds are counted."""
-    names = ("chamber.pressure_kPa", "growth_temperature_K", "growth_pressure_kPa",
-             "chamber.temperature_K")
-    if not all(table.has(name) for name in names):
-        return np.ones(len(table.names)), "number and seeds as given, at the same gas density"
-    above, also, below, under = (table.number(name) for name in names)
-    factor = above * also / (below * under)
+def _density_factor(table, gas):
+    """Return what takes a number during growth to the chamber's state, where seeds are counted.
+
+    By the two pressures where they are given, else along an adiabat of the carrier,
+    n / n0 = (T / T0)^(cp / R - 1).
+    """
+    pressures = ("chamber.pressure_kPa", "growth_pressure_kPa")
+    temperatures = ("growth_temperature_K", "chamber.temperature_K")
+    as_given = np.ones(len(table.names)), "number and seeds as given, at the same gas density"
+    if not all(map(table.has, temperatures)):
+        return as_given
+    cold, warm = map(table.number, temperatures)
+    if all(map(table.has, pressures)):
+        before, during = map(table.number, pressures)
+        factor, how = before * cold / (during * warm), "by temperature and pressure"
+    elif gas is not None:
+        power = gas.heat_capacity(0.5 * (cold + warm)) / GAS_CONSTANT - 1.0
+        factor, how = (warm / cold) ** power, "along an adiabat of the carrier"
+    else:
+        return as_given
     return (np.where(np.isfinite(factor), factor, 1.0),
-            "number taken from the state of growth to that of the chamber")
+            f"number taken from the gas density of growth to that of the chamber, {how}")
 
 
 def _fractions(table, rows, fraction, limit):

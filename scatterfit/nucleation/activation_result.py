@@ -206,23 +206,23 @@ def activation_reasons(run):
     data, curve, found = run.pulses.data, run.curve, []
     if curve is None:
         side = "below" if data.fraction.max() < 0.5 else "above"
-        return [("no_onset", f"every pulse is {side} half activation, from S = "
+        return [("no-onset", f"every pulse is {side} half activation, from S = "
                  f"{np.exp(data.x.min()):.4g} to {np.exp(data.x.max()):.4g}: pulses on the other "
                  "side would do")]
     if not curve.resolved:
-        found.append(("width_unresolved", "no pulse lies on the slope: the onset is between two "
+        found.append(("width-unresolved", "no pulse lies on the slope: the onset is between two "
                       "pulses, the width is not determined; finer steps of S would do"))
     if curve.plateau_free and abs(curve.plateau - 1.0) > 0.02:
         found.append(("plateau", f"the fraction levels off at {curve.plateau:.3g}, not at one: the "
                       "number's scale and the seeds disagree, or not all seeds take part"))
     if curve.resolved and data.x.max() < curve.centre + curve.width:
-        found.append(("no_plateau", "no pulse is far beyond the onset: that all seeds activate is "
+        found.append(("no-plateau", "no pulse is far beyond the onset: that all seeds activate is "
                       "assumed"))
     spread = float(np.ptp(run.pulses.temperature))
     if spread > 2.0:
-        found.append(("temperature_spread", f"temperatures differ by {spread:.2g} K within the "
+        found.append(("temperature-spread", f"temperatures differ by {spread:.2g} K within the "
                       "run: the thresholds are those of its mean"))
     if run.kelvin is not None and _below_kelvin(run):
-        found.append(("below_kelvin", "activation below the Kelvin limit of a wettable seed: it "
+        found.append(("below-kelvin", "activation below the Kelvin limit of a wettable seed: it "
                       "is soluble, or larger than stated"))
     return found

@@ -92,6 +92,8 @@ def with_limits(points, line, limits):
     >>> [round(with_limits(points, line, limits).slope, 2) for limits in (far, near)]
     [0.96, 1.00]
     """
+    points = points.reduced(line.own_x, line.own)
+    limits = replace(limits, variance_x=line.own * line.own_x * limits.variance_x)
     both, scatter2 = np.array([line.level, line.slope]), line.scatter**2
     for _ in range(_ROUNDS):
         old = both
@@ -99,8 +101,7 @@ def with_limits(points, line, limits):
         scatter2 = extra_variance(points, both[1])
         if np.all(np.abs(both - old) <= 1e-9 * (1.0 + np.abs(both))):
             break
-    shrunk = line.chi2_reduced if line.overstated else 1.0
-    covariance = np.linalg.inv(_curvature(both, points, limits, line.centre, scatter2)) * shrunk
+    covariance = np.linalg.inv(_curvature(both, points, limits, line.centre, scatter2))
     return replace(line, level=float(both[0]), slope=float(both[1]), covariance=covariance,
                    scatter=float(np.sqrt(scatter2)))
 

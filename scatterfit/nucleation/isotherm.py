@@ -198,8 +198,9 @@ def _shared(seen, settings, line, points, reference, temperature):
         moved["state"] = (line.slope * seen.errors["ratio"].shared / seen.ratio
                           - by_kelvin * seen.errors["temperature"].shared)
         if line.overstated:
-            stated = float(points.variance(line.slope).mean())
-            moved["hidden"] = float(np.sqrt(max(0.0, stated * (1.0 - line.chi2_reduced))))
+            own = points.reduced(line.own_x, line.own).variance(line.slope) + line.scatter**2
+            stated = points.variance(line.slope)
+            moved["hidden"] = float(np.sqrt(max(0.0, float(np.mean(stated - own)))))
     return moved
 
 

@@ -18,6 +18,7 @@ _OUTLIER = 3.5  # modified z-score of Iglewicz and Hoaglin 1993
 _TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution to its sigma
 _FEWEST_FOR_OUTLIERS = 5
 _ROUNDS = 200
+_HALVINGS = 14
 
 
 @dataclass(frozen=True)
@@ -45,6 +46,11 @@ class Points:
         total = self.variance_y + slope**2 * self.variance_x - 2.0 * slope * self.covariance
         return np.maximum(total, 0.0)
 
+    def reduced(self, own_x, own):
+        """Return the points with a part of the variance of x, and then of both, alone."""
+        return Points(self.x, self.y, own * own_x * self.variance_x, own * self.variance_y,
+                      own * np.sqrt(own_x) * self.covariance)
+
 
 @dataclass(frozen=True)
 class Line:
@@ -61,8 +67,15 @@ class Line:
     """Degrees of freedom of the interval; infinite where stated errors alone make it [-]."""
     chi2_reduced: float
     """Misfit in units of the stated errors, squared, per degree of freedom [-]."""
-    overstated: bool
-    """Whether the points scatter significantly less than the stated errors say."""
+    own_x: float = 1.0
+    """Part of the stated variance of x that single points have for themselves [-]."""
+    own: float = 1.0
+    """Part of all stated variance that they have [-]."""
+
+    @property
+    def overstated(self):
+        """Whether the points scatter significantly less than the stated errors say."""
+        return self.own_x < 1.0 or self.own < 1.0
 
     @property
     def slope_sigma(self):
@@ -114,8 +127,9 @@ def fit_line(points, *, extra=True):
     Notes
     -----
     Where the points scatter less than the stated errors say (beyond what happens in 2.5 percent
-    of cases), a part of the errors is shared by all points and does not bend the line: the
-    covariance is then scaled down to the scatter, and the line says so.
+    of cases), a part of the errors is shared by all points and does not bend the line. In an
+    expansion that is first of all the error of S, which hangs on one temperature: the variance of
+    x is reduced until chi-square is its expectation, and if that is not enough, all of it.
 
     References
     ----------
@@ -134,6 +148,29 @@ def fit_line(points, *, extra=True):
     """
     if points.x.size < 2 or np.ptp(points.x) <= 1e-12 * max(1.0, float(np.abs(points.x).max())):
         return None
+    line = _fitted(points, extra=extra)
+    freedom = points.x.size - 2
+    if not extra or freedom < 1 or line.scatter > 0 or \
+            line.chi2_reduced * freedom >= chi_square_quantile(0.025, freedom):
+        return line
+    own_x = _own_part(points)
+    reduced = _fitted(points.reduced(own_x, 1.0), extra=True)
+    own = 1.0 if own_x > 0 else max(reduced.chi2_reduced, 1e-12) if reduced.scatter == 0 else 1.0
+    return replace(reduced, covariance=own * reduced.covariance, own_x=own_x, own=own,
+                   chi2_reduced=line.chi2_reduced, freedom=freedom)
+
+
+def _own_part(points):
+    """Return the part of the variance of x at which chi-square is its expectation."""
+    low, high = 0.0, 1.0
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        too_much = _fitted(points.reduced(middle, 1.0), extra=False).chi2_reduced < 1.0
+        low, high = (low, middle) if too_much else (middle, high)
+    return low if low > 0 else 0.0
+
+
+def _fitted(points, *, extra):
     slope = _slope(points, np.ones_like(points.x), 0.0)
     scatter2 = 0.0
     for _ in range(_ROUNDS):
@@ -245,18 +282,14 @@ def _line(points, slope, scatter2):
     covariance = np.diag([1.0 / weights.sum(), 1.0 / float(weights @ u**2)])
     freedom, stated = points.x.size - 2, points.stated
     chi2 = np.nan
-    overstated = False
     if stated and freedom > 0:
         plain = _weights(points, slope, 0.0)
-        misfit = float(plain @ _residuals(points, slope, plain) ** 2)
-        chi2 = misfit / freedom
-        overstated = scatter2 == 0.0 and misfit < chi_square_quantile(0.025, freedom)
-        covariance = covariance * (chi2 if overstated else 1.0)
+        chi2 = float(plain @ _residuals(points, slope, plain) ** 2) / freedom
     elif not stated and freedom < 1:
         covariance = np.full((2, 2), np.nan)
-    by_scatter = freedom >= 1 and (not stated or scatter2 > 0 or overstated)
+    by_scatter = freedom >= 1 and (not stated or scatter2 > 0)
     return Line(centre, level, slope, covariance, float(np.sqrt(scatter2)),
-                freedom if by_scatter else np.inf, chi2, overstated)
+                freedom if by_scatter else np.inf, chi2)
 
 
 def robust_line(points, line):
@@ -295,7 +328,8 @@ def robust_line(points, line):
     count = points.x.size
     if count < 3:
         return None, np.zeros(count)
-    weights = _weights(points, line.slope, line.scatter**2)
+    reduced = points.reduced(line.own_x, line.own)
+    weights = _weights(reduced, line.slope, line.scatter**2)
     root = np.sqrt(weights)
     design = np.stack([root, root * (points.x - line.centre)], axis=1)
     target = root * points.y

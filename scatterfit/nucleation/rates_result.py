@@ -171,12 +171,12 @@ def reasons_of(isotherm, settings, lost=None):
                 "(rms)")
         text += ("; taken out by theory" if settings.to_isotherm else
                  "; --to-isotherm takes it out by theory, --tolerance-K divides more finely")
-        found.append(("temperature_spread", text))
+        found.append(("temperature-spread", text))
     if settings.substance.name == "water" and isotherm.temperature < FREEZING:
         found.append(("freezing", f"below about {FREEZING:g} K droplets of water may freeze as "
                                   "they grow: sizes and numbers assume liquid"))
     if isotherm.theory and not any(ratio.in_range for ratio in isotherm.theory.values()):
-        found.append(("theory_out_of_range", "no theory claims to hold at this temperature"))
+        found.append(("theory-out-of-range", "no theory claims to hold at this temperature"))
     if lost is not None and lost.survival < 0.95:
         found.append(("losses", f"the background takes {100 * (1 - lost.survival):.0f} percent of "
                                 "the droplets before they are seen: J is that much larger"))
@@ -186,7 +186,7 @@ def reasons_of(isotherm, settings, lost=None):
 def _about_the_fit(isotherm, count):
     line = isotherm.line
     if line is None or not np.isfinite(line.covariance).all():
-        yield ("few_pulses", f"{count} measured pulse{'s' * (count != 1)}, not enough different "
+        yield ("few-pulses", f"{count} measured pulse{'s' * (count != 1)}, not enough different "
                "supersaturations for a slope with an uncertainty: three or more would do")
         return
     if isotherm.outliers:
@@ -194,14 +194,14 @@ def _about_the_fit(isotherm, count):
         yield ("outliers", f"{names}: too far from the others to be chance; kept in the fit, the "
                "robust slope hardly feels them")
     if line.overstated:
-        yield ("overstated_sigmas", "pulses scatter less than their sigmas say (reduced "
+        yield ("overstated-sigmas", "pulses scatter less than their sigmas say (reduced "
                f"chi-square {line.chi2_reduced:.2g}): the rest counts as shared by all; "
                "_sigma_systematic columns would say it")
     elif line.chi2_reduced > chi_square_limit(line, count):
-        yield ("extra_scatter", f"pulses scatter more than their sigmas say (reduced chi-square "
+        yield ("extra-scatter", f"pulses scatter more than their sigmas say (reduced chi-square "
                f"{line.chi2_reduced:.2g}): {line.scatter:.2g} of ln J was added")
     if count < _FEWEST:
-        yield ("few_pulses", f"{count} measured pulses: the uncertainty rests on the stated ones")
+        yield ("few-pulses", f"{count} measured pulses: the uncertainty rests on the stated ones")
     logs = np.log(isotherm.measured.rate)
     for rate, ratio in isotherm.ratio_at:
         if ratio is not None and not logs.min() - _FAR < math.log(rate) < logs.max() + _FAR:

@@ -23,11 +23,13 @@ REASONS_LEFT_OUT = {
     "ambiguous": "another solution cannot be excluded (--ambiguous takes them)",
     "rejected": "rejected without an upper limit of the number",
     "blank": "blank pulses, taken without a hold",
-    "no_conditions": "no nucleation temperature or saturation ratio",
-    "not_supersaturated": "saturation ratio at or below one",
-    "no_rate": "neither a rate nor an upper limit of it",
+    "no-conditions": "no nucleation temperature or saturation ratio",
+    "not-supersaturated": "saturation ratio at or below one",
+    "no-rate": "neither a rate nor an upper limit of it",
 }
 """Why a row takes no part in a fit."""
+
+_NUMBER_SHARED = CONCENTRATION + "_sigma_systematic"
 
 
 @dataclass(frozen=True)
@@ -113,13 +115,30 @@ def rate_pulses(table, *, ambiguous=False):
     ).take(rows)
     errors = {"temperature": errors_of(table, TEMPERATURE, rows),
               "ratio": errors_of(table, SATURATION_RATIO, rows),
-              "rate": errors_of(table, RATE, rows, 1e6)}
+              "rate": _rate_errors(table, rows)}
     if all(entry is None for entry in errors.values()):
         errors = {}
     zero = Errors(np.zeros(rows.size), np.zeros(rows.size))
     left = {name: int(np.sum(cause == name)) for name in REASONS_LEFT_OUT}
     stated = {name: entry or zero for name, entry in errors.items()}
     return Pulses(**{**vars(chosen), "errors": stated}), left
+
+
+def _rate_errors(table, rows):
+    """Return the uncertainties of rates [1/(m^3 s)], divided as those of the numbers are.
+
+    A rate is a number over a duration: where its own uncertainty is not divided, the part that
+    the number's scale shares is taken to be the same part of both.
+    """
+    errors = errors_of(table, RATE, rows, 1e6)
+    if errors is None or errors.shared.any() or not table.has(_NUMBER_SHARED):
+        return errors
+    number = table.number(CONCENTRATION)[rows]
+    rate = to_si(table.number(RATE)[rows], "per_cm3")
+    with np.errstate(divide="ignore", invalid="ignore"):
+        part = np.nan_to_num(table.number(_NUMBER_SHARED)[rows] / number, posinf=0.0)
+    shared = np.minimum(np.nan_to_num(part * rate), errors.random)
+    return Errors(np.sqrt(errors.random**2 - shared**2), shared)
 
 
 def _cause(table, rate, limit, ambiguous):
@@ -133,9 +152,9 @@ def _cause(table, rate, limit, ambiguous):
         "blank": table.blanks() | (table.number(DURATION) == 0),
         "ambiguous": (verdict == "ambiguous") & (not ambiguous),
         "rejected": rejected & ~limited,
-        "no_conditions": unknown,
-        "not_supersaturated": ratio <= 1,
-        "no_rate": ~rejected & ~(rate > 0) & ~limited,
+        "no-conditions": unknown,
+        "not-supersaturated": ratio <= 1,
+        "no-rate": ~rejected & ~(rate > 0) & ~limited,
     }
     return np.select(list(rules.values()), list(rules.keys()), default="")
 
