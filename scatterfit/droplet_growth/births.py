@@ -4,6 +4,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+_NEGLIGIBLE = 1e-6
+_POINTS = 600
+
 
 @dataclass(frozen=True)
 class Births:
@@ -19,22 +22,33 @@ class Births:
     """Integral of the birth rate over its peak [s]; zero for births at one instant."""
     peak: float
     """When the birth rate is highest [s]."""
+    spread: float
+    """Standard deviation of the time of birth [s]."""
+    fine_times: np.ndarray
+    """Births of more classes, for light that varies faster than growth, shape (f,) [s]."""
+    fine_weights: np.ndarray
+    """Share of the droplets in each of them, shape (f,) [-]."""
+    carry: np.ndarray
+    """From values smooth in the time of birth at the classes to the finer ones, shape (f, c)."""
 
 
-def births_from_rate(time, log_rate, classes=8):
+def births_from_rate(time, log_rate, classes=6, fine=24):
     """Return the classes that stand for births along a nucleation rate.
 
     The classes are the nodes and weights of the Gauss rule whose weight function is the rate,
-    so that what is smooth in the time of birth is summed over exactly to degree 2 c - 1.
+    so that what is smooth in the time of birth is summed over exactly to degree 2 c - 1. Growth is
+    that smooth; the light of young droplets is not, and has a finer rule of its own.
 
     Parameters
     ----------
     time : ndarray, shape (n,)
         Increasing [s].
     log_rate : ndarray, shape (n,)
-        ln of the nucleation rate at those times [-].
+        ln of the nucleation rate at those times [-]; straight in between.
     classes : int
         Number of classes.
+    fine : int
+        Number of finer classes.
 
     Returns
     -------
@@ -57,21 +71,26 @@ def births_from_rate(time, log_rate, classes=8):
     >>> found.effective * 1e3
     1.0
     """
-    rate = np.exp(log_rate - np.max(log_rate))
-    share = np.zeros_like(rate)
-    step = np.diff(time)
-    share[:-1] += 0.5 * step * rate[:-1]
-    share[1:] += 0.5 * step * rate[1:]
-    total = share.sum()
-    kept = share > 1e-9 * share.max()
-    nodes, weights = _gauss_rule(time[kept], share[kept] / share[kept].sum(), classes)
-    cumulative = np.concatenate([[0.0], np.cumsum(0.5 * step * (rate[1:] + rate[:-1]))])
+    top = np.max(log_rate)
+    kept = np.flatnonzero(log_rate > top + np.log(_NEGLIGIBLE))
+    first, last = max(kept[0] - 1, 0), min(kept[-1] + 1, time.size - 1)
+    dense = np.linspace(time[first], time[last], _POINTS)
+    low = np.maximum(log_rate, top - 60.0)
+    rate = np.exp(np.interp(dense, time, low) - top)
+    step = dense[1] - dense[0]
+    share = step * rate
+    share[[0, -1]] *= 0.5
+    total = float(share.sum())
+    share = share / total
+    nodes, weights = _gauss_rule(dense, share, classes)
+    fine_nodes, fine_weights = _gauss_rule(dense, share, fine)
+    cumulative = np.cumsum(share) - 0.5 * share
+    centre = float(share @ dense)
     return Births(
-        times=nodes,
-        weights=weights,
-        median=float(np.interp(0.5 * cumulative[-1], cumulative, time)),
-        effective=float(total),
-        peak=float(time[np.argmax(rate)]),
+        times=nodes, weights=weights, median=float(np.interp(0.5, cumulative, dense)),
+        effective=total, peak=float(dense[np.argmax(rate)]),
+        spread=float(np.sqrt(share @ (dense - centre) ** 2)),
+        fine_times=fine_nodes, fine_weights=fine_weights, carry=_polynomial(nodes, fine_nodes),
     )
 
 
@@ -93,7 +112,19 @@ def births_at_once(time):
     >>> births_at_once(0.01).weights
     array([1.])
     """
-    return Births(np.array([float(time)]), np.ones(1), float(time), 0.0, float(time))
+    at = np.array([float(time)])
+    return Births(at, np.ones(1), float(time), 0.0, float(time), 0.0, at, np.ones(1),
+                  np.ones((1, 1)))
+
+
+def _polynomial(nodes, points):
+    """Return the matrix that carries a polynomial's values from nodes to points."""
+    matrix = np.ones((points.size, nodes.size))
+    for j in range(nodes.size):
+        for k in range(nodes.size):
+            if k != j:
+                matrix[:, j] *= (points - nodes[k]) / (nodes[j] - nodes[k])
+    return matrix
 
 
 def _gauss_rule(points, shares, count):
@@ -104,14 +135,17 @@ def _gauss_rule(points, shares, count):
         return np.array([centre]), np.ones(1)
     x = (points - centre) / scale
     diagonal, off = np.zeros(count), np.zeros(max(count - 1, 0))
-    previous, current = np.zeros_like(x), np.sqrt(shares)
+    basis = np.empty((count, x.size))
+    current = np.sqrt(shares)
     for i in range(count):
+        basis[i] = current
         image = x * current
         diagonal[i] = np.dot(image, current)
         if i + 1 == count:
             break
-        image -= diagonal[i] * current + (off[i - 1] * previous if i else 0.0)
+        for _ in range(2):
+            image -= basis[: i + 1].T @ (basis[: i + 1] @ image)
         off[i] = np.sqrt(np.dot(image, image))
-        previous, current = current, image / off[i]
+        current = image / off[i]
     values, vectors = np.linalg.eigh(np.diag(diagonal) + np.diag(off, 1) + np.diag(off, -1))
     return centre + scale * values, vectors[0] ** 2

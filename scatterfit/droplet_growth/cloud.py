@@ -63,7 +63,8 @@ class CloudGrowth:
     time: np.ndarray
     """Nodes, shape (m,) [s]."""
     square: np.ndarray
-    """(r + l)^2, the variable in which growth is smooth, shape (v, c, m) [m^2]."""
+    """(r + l)^2, the variable in which growth is smooth, shape (v, c, m) [m^2]; before its birth
+    a class is carried on backwards, so that it stays smooth there too."""
     square_rate: np.ndarray
     """Its time derivative, shape (v, c, m) [m^2/s]."""
     length: np.ndarray
@@ -92,7 +93,8 @@ class CloudGrowth:
     @property
     def radius(self):
         """Radius at the nodes, shape (v, c, m) [m]."""
-        return np.sqrt(self.square) - self.length[:, None, None]
+        length = self.length[:, None, None]
+        return np.sqrt(np.maximum(self.square, (self.start_radius + length) ** 2)) - length
 
     @property
     def number_density(self):
@@ -152,7 +154,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
             rate *= np.exp(creep[:, None, None] * along)
         if bend.any():
             rate *= np.exp(bend[:, None, None] * np.log(np.maximum(radius, _BENT_FROM) / _MICROMETRE))
-        grown = np.maximum(_since_birth(rate, step, place), 0.0)
+        since = _since_birth(rate, step, place)
+        grown = np.maximum(since, 0.0)
         new_square = floor + grown
         new_radius = np.sqrt(new_square) - length[:, None, None]
         cubes = np.einsum("c,vcm->vm", weights, new_radius**3) - start_radius**3
@@ -175,7 +178,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
             converged = True
             break
     return CloudGrowth(
-        time=path.time, square=square, square_rate=np.where(alive, rate, 0.0), length=length,
+        time=path.time, square=np.where(alive, square, floor + since), square_rate=rate,
+        length=length,
         start_radius=start_radius, birth_times=times, weights=weights, condensed=condensed,
         temperature=temperature, vapour_fraction=share, droplet_temperature=droplet_temperature,
         pressure=path.pressure, droplets_per_mole=number, converged=converged,

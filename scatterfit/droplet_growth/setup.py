@@ -15,6 +15,7 @@ from scatterfit.droplet_growth.pressure import smooth, undo_lag
 from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
 
 _FEW = 3
+_FEW_FINE = 9
 _BIRTH_RADIUS = 3e-9
 _SEED_RADIUS = 0.2e-6
 _CRITICAL_FREEZING = 235.0
@@ -100,7 +101,7 @@ def vapour_mole_fraction(apparatus, substance, pressure):
     return float(substance.saturation_pressure(vapour.dew_point)) / pressure
 
 
-def growth_setup(apparatus, time=None, pressure=None, duration=0.1, classes=8):
+def growth_setup(apparatus, time=None, pressure=None, duration=0.1, classes=6):
     """Return what growth needs, from the pressure trace or from the stated states.
 
     Parameters
@@ -167,7 +168,7 @@ def _measured(apparatus, substance, gas, record, classes):
         peak = int(np.argmax(saturation))
     else:
         births = births_from_rate(time, log_rate, classes)
-        few = births_from_rate(time, log_rate, _FEW)
+        few = births_from_rate(time, log_rate, _FEW, _FEW_FINE)
         peak = int(np.argmax(log_rate))
     hold = Hold(
         float(temperature[peak]), float(smoothed[peak]), float(saturation[peak]),
@@ -196,7 +197,7 @@ def _stated(apparatus, substance, gas, duration, classes):
     if length:
         grid = np.linspace(-0.5 * length, 0.5 * length, 201)
         births = births_from_rate(grid, np.zeros(grid.size), classes)
-        few = births_from_rate(grid, np.zeros(grid.size), _FEW)
+        few = births_from_rate(grid, np.zeros(grid.size), _FEW, _FEW_FINE)
     else:
         births = few = births_at_once(0.0)
     ends = (births.times[0], max(births.times[-1], births.times[0] + 1e-5))

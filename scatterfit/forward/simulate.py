@@ -10,7 +10,8 @@ from scatterfit.droplet_growth.gas_path import adiabatic_temperature
 from scatterfit.droplet_growth.setup import growth_setup, vapour_mole_fraction
 from scatterfit.errors import InvalidInputError
 from scatterfit.forward.light import spread_table
-from scatterfit.forward.model import Cloud, channel_signals
+from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.model import channel_signals
 
 _CLASSES = 16
 _FLOOR = 0.0013

@@ -6,6 +6,7 @@ MAINS = (50.0, 60.0)
 _HARMONICS = (1, 2, 3)
 _WORTH = 40.0
 _GLITCH = 6.0
+_NEIGHBOURS = 4
 
 
 def candidate_columns(time):
@@ -124,7 +125,7 @@ def stack_columns(time, names):
 
 
 def find_glitches(residual, used):
-    """Return samples that lie far outside the noise.
+    """Return samples that lie far outside the noise while their neighbours do not.
 
     Parameters
     ----------
@@ -136,13 +137,23 @@ def find_glitches(residual, used):
     Returns
     -------
     glitches : ndarray, shape (n,)
-        Samples to leave out [bool].
+        Samples to leave out [bool]. Runs of more than three outliers are not glitches but
+        something that the model misses.
 
     Examples
     --------
     >>> find_glitches(np.array([0.1, -9.0, 0.3, 1.0]), np.ones(4, dtype=bool))
     array([False,  True, False, False])
     """
-    centre = np.median(residual[used]) if used.any() else 0.0
-    spread = max(np.median(np.abs(residual[used] - centre)) / 0.6745, 1.0) if used.any() else 1.0
-    return used & (np.abs(residual - centre) > _GLITCH * spread)
+    if not used.any():
+        return np.zeros(residual.size, dtype=bool)
+    centre = np.median(residual[used])
+    spread = max(np.median(np.abs(residual[used] - centre)) / 0.6745, 1.0)
+    place = np.where(used, (residual - centre) / spread, 0.0)
+    far = used & (np.abs(place) > _GLITCH)
+    padded = np.pad(place, _NEIGHBOURS, mode="edge")
+    around = np.lib.stride_tricks.sliding_window_view(padded, 2 * _NEIGHBOURS + 1)
+    middle = np.zeros(residual.size)
+    index = np.flatnonzero(far)
+    middle[index] = np.median(around[index], axis=1)
+    return far & (np.abs(place - middle) > _GLITCH)

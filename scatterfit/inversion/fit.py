@@ -1,10 +1,11 @@
 """One pulse from samples to the best cloud, its rivals and what the residuals say."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from scatterfit.forward.model import Cloud, hermite
+from scatterfit.forward.cloud_state import hermite
+from scatterfit.forward.growth_model import Cloud
 from scatterfit.inversion.data import (
     ChannelData,
     bin_channels,
@@ -22,6 +23,7 @@ _COARSE = 260
 _FINE = 800
 _CANDIDATES = 4
 _APART = 4e-3
+_ROUGHLY = 0.012
 _RIVAL = 400.0
 _HOPELESS = 4.0
 _CONTINUED = 3
@@ -55,6 +57,8 @@ class Fit:
     """Names of drift and hum found in each channel."""
     glitches: int
     converged: bool
+    softening: float = 1.0
+    """Largest factor by which the variance of a channel's bins was raised [-]."""
 
 
 def fit_pulse(model, time, channels, options):
@@ -79,7 +83,7 @@ def fit_pulse(model, time, channels, options):
     channels = tuple(channels)
     coarse = bin_channels(time, channels, bin_edges(time, options.onset, _COARSE))
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
-                      tuple(np.empty((0, coarse.time.size)) for _ in channels))
+                      options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, _CANDIDATES)
     found = _explore(problem, [c.cloud for c in candidates])
     channels, found = _without_hops(problem, found, time, channels, options.onset)
@@ -97,9 +101,11 @@ def fit_pulse(model, time, channels, options):
         fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
         best = descend(problem, best.best.cloud, iterations=6, tolerance=0.05)
+    sharp = problem
     problem, best = _softened(problem, best)
     best = polish(problem, best)
-    return _finished(problem, best, time, (channels, others, disturbances, count))
+    softening = float(np.max(sharp.bins.weights / np.maximum(problem.bins.weights, 1e-300)) ** 2)
+    return _finished(problem, best, time, (channels, others, disturbances, count, softening))
 
 
 def _softened(problem, best):
@@ -176,7 +182,7 @@ def _best_of(problem, found):
     for rival in sorted(rivals, key=lambda r: r.delta_chi2):
         apart = [abs(np.log(rival.final_radius / r)) for r in
                  (_final(best), *(k.final_radius for k in kept))]
-        if min(apart) > _APART:
+        if min(apart) > _ROUGHLY:
             kept.append(rival)
     return best, tuple(kept)
 
@@ -203,16 +209,17 @@ def coarse_model(model):
 
 def _finished(problem, best, time, more):
     """Return the fit with its residuals at every sample."""
-    channels, rivals, disturbances, count = more
+    channels, rivals, disturbances, count, softening = more
     whole, residual = full_residual(problem, best.best, time, channels)
     chi2, lag1 = whiteness(residual, channels, len(problem.names))
     return Fit(
         problem, best.best, channels, whole, residual, chi2, lag1,
         null_chi2(problem), tuple(rivals), disturbances, count, best.converged,
+        softening,
     )
 
 
-def refine(fit, model, time, priors):
+def refine(fit, model, time, options):
     """Return a fit continued with another model of the same pulse, from where it ended.
 
     Parameters
@@ -223,18 +230,19 @@ def refine(fit, model, time, priors):
         With tables at other angles; the cloud's angle shifts start again at zero.
     time : ndarray, shape (n,)
         Samples [s].
-    priors : dict
-        For the new model.
+    options : FitOptions
+        With priors and limits for the new model.
 
     Returns
     -------
     fit : Fit
         The continued fit; rivals are carried over.
     """
-    problem = replace(fit.problem, model=model, priors=priors)
+    problem = replace(fit.problem, model=model, priors=options.priors, limits=options.limits)
     start = replace(fit.best.cloud, angles=(0.0,) * len(fit.best.cloud.angles))
     best = polish(problem, descend(problem, start, iterations=6, tolerance=0.02))
-    return _finished(problem, best, time, (fit.channels, fit.rivals, fit.disturbances, fit.glitches))
+    return _finished(problem, best, time, (fit.channels, fit.rivals, fit.disturbances, fit.glitches,
+                                           fit.softening))
 
 
 @dataclass(frozen=True)
@@ -260,6 +268,8 @@ class FitOptions:
     """To be searched [s]."""
     widest: float
     """Largest |ln growth scale| to search [-]."""
+    limits: dict[str, tuple[float, float]] = field(default_factory=dict)
+    """Parameter to limits that are not the usual ones."""
 
 
 def _with(problem, bins, disturbances):

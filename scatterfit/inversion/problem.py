@@ -4,7 +4,8 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from scatterfit.forward.model import Cloud, PulseModel, channel_signals
+from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.model import PulseModel, channel_signals
 from scatterfit.inversion.data import Bins
 
 # A change of each parameter that matters a little, so that all are of order one to the solver.
@@ -31,6 +32,8 @@ class Problem:
     """Free parameters of the cloud."""
     priors: dict[str, tuple[float, float]] = field(default_factory=dict)
     """Parameter to mean and standard deviation."""
+    limits: dict[str, tuple[float, float]] = field(default_factory=dict)
+    """Parameter to its least and largest value, where they are not those of ``LIMITS``."""
     extras: tuple[np.ndarray, ...] = ()
     """Per channel: more linear columns (drift, hum), each shape (k, m) [-]."""
 
@@ -98,8 +101,26 @@ def value_of(cloud, name):
     return cloud.angles[int(index)] if kind == "angle" else getattr(cloud, kind)
 
 
+def limits_of(problem, name):
+    """Return the least and largest value of a parameter.
+
+    Parameters
+    ----------
+    problem : Problem
+        What is fitted.
+    name : str
+        Parameter.
+
+    Returns
+    -------
+    low, high : float
+        Limits [any].
+    """
+    return problem.limits.get(name, LIMITS[family(name)])
+
+
 def shifted(cloud, names, values):
-    """Return a cloud with parameters set and kept within their limits.
+    """Return a cloud with parameters set.
 
     Parameters
     ----------
@@ -118,8 +139,7 @@ def shifted(cloud, names, values):
     changes, angles = {}, list(cloud.angles)
     for name, value in zip(names, values, strict=True):
         kind, _, index = name.partition(":")
-        low, high = LIMITS[kind]
-        value = float(min(max(value, low), high))
+        value = float(value)
         if kind == "angle":
             angles[int(index)] = value
         else:

@@ -9,13 +9,14 @@ from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
 from scatterfit.forward.light import spread_table
-from scatterfit.forward.model import Cloud, per_mole
+from scatterfit.forward.growth_model import Cloud, per_mole
 
 _NODES = 70
 _STICKING = (0.0, -1.2)
 _DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
 _VARIANCE = 2e-5
 _PHASE = 0.35
+_GRID_ERROR = 0.05
 _VAPOUR_SIGMAS = 2.5
 
 
@@ -177,7 +178,7 @@ def _sampled(curves, scales, clock):
         values = values[:, 0] if curves.stretched else values
         return values[..., index] + t * (values[..., index + 1] - values[..., index])
 
-    radius = np.sqrt(at(curves.square)) - curves.length
+    radius = np.maximum(np.sqrt(np.maximum(at(curves.square), 0.0)) - curves.length, 0.0)
     born = age > 0.0 if curves.stretched else clock > curves.births
     return np.where(born, radius, 0.0), at(curves.density)
 
@@ -239,7 +240,8 @@ def _misfits(problem, table, radius, density):
     total = np.zeros(radius.shape[:2])
     amplitudes = []
     for i, channel in enumerate(model.channels):
-        weight, data = bins.weights[i], bins.values[i]
+        data = bins.values[i]
+        weight = _blunted(bins.weights[i], data, channel.kind)
         row = model.extinction_row if channel.kind == "scatter" else channel.row
         depth = density * table.cells[row].take(index) * born * channel.path
         if channel.kind == "scatter":
@@ -254,6 +256,21 @@ def _misfits(problem, table, radius, density):
                           else np.full(total.shape, np.nan))
         total += np.where(amplitude > 0.0, 0.0, 1e3 + 0.1 * np.abs(misfit))
     return total, np.array(amplitudes)
+
+
+def _blunted(weight, data, kind):
+    """Return weights that know how coarse the grid is: a few percent of the light.
+
+    With the noise alone the misfit of every template would be dominated by the few bins where
+    the light is strong and steep.
+    """
+    some = weight > 0.0
+    if not some.any():
+        return weight
+    rest = np.percentile(data[some], 2.0)
+    top = np.ptp(data[some]) if kind == "transmission" else np.maximum(data - rest, 0.0)
+    coarse = _GRID_ERROR * top
+    return np.where(some, weight / np.sqrt(1.0 + (coarse * weight) ** 2), 0.0)
 
 
 def _optical_depth(depth, data, weight, born):
@@ -284,8 +301,7 @@ def _disagreement(problem, amplitude, level):
         return 0.0
     level = level[:, None]
     apart = np.abs(np.mean(amplitude[known], axis=0))
-    scale = 0.002 * sum(float((problem.bins.weights[i] * problem.bins.values[i]) @
-                              (problem.bins.weights[i] * problem.bins.values[i])) for i in known)
+    scale = 4.0 * problem.bins.time.size
     # Below a percent of depletion the level stands for every smaller number.
     lowest = (level == level.min()) & (np.mean(amplitude[known], axis=0) < 0)
     return np.where(lowest, 0.0, np.maximum(apart - 0.25, 0.0) ** 2 * scale)

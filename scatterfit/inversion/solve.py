@@ -4,13 +4,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from scatterfit.forward.model import linear_growth
+from scatterfit.forward.growth_model import linear_growth
 from scatterfit.inversion.problem import (
-    LIMITS,
     SCALES,
     Evaluation,
     evaluate,
     family,
+    limits_of,
     shifted,
     value_of,
 )
@@ -90,7 +90,7 @@ def _descend_linear(problem, cloud, linear, iterations, tolerance):
     """Return the best evaluation with growth followed to first order, turns and convergence."""
     scale = np.array([SCALES[family(name)] for name in problem.names])
     best = evaluate(problem, cloud, linear=linear)
-    low, high = _bounds(problem.names, linear)
+    low, high = _bounds(problem, linear)
     damping, turn = _DAMPING, 0
     for turn in range(1, iterations + 1):
         here = np.array([value_of(best.cloud, name) for name in problem.names])
@@ -123,10 +123,10 @@ def _descend_linear(problem, cloud, linear, iterations, tolerance):
     return best, turn, False
 
 
-def _bounds(names, linear):
+def _bounds(problem, linear):
     """Return the least and largest value of each parameter in one round, shape (p,)."""
-    low = np.array([LIMITS[family(name)][0] for name in names])
-    high = np.array([LIMITS[family(name)][1] for name in names])
+    names = problem.names
+    low, high = np.array([limits_of(problem, name) for name in names]).T
     for i, name in enumerate(names):
         if name in linear.log_radius_by:
             centre = getattr(linear.cloud, name)
@@ -168,7 +168,7 @@ def polish(problem, solution):
     start = np.array([value_of(solution.best.cloud, name) for name in names])
     parameters = lmfit.Parameters()
     for i, name in enumerate(names):
-        low, high = LIMITS[family(name)]
+        low, high = limits_of(problem, name)
         parameters.add(f"p{i}", value=0.0, min=(low - start[i]) / scale[i] - 1e-9,
                        max=(high - start[i]) / scale[i] + 1e-9)
     seen, linear, near = {}, solution.best.state.linear, solution.best.state.table

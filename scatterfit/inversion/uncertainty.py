@@ -4,7 +4,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.forward.model import linear_growth
+from scatterfit.forward.growth_model import linear_growth
 from scatterfit.inversion.problem import evaluate
 
 _WHITE = 1.25

@@ -7,7 +7,9 @@ import numpy as np
 SEEN = 40.0
 EXCLUDED = 13.8
 _WHITE = 1.3
-_DESCRIBED = 6.0
+_DESCRIBED = 3.0
+_LEFT_OVER = 0.01
+_LEFT_OVER_DEPTH = 0.05
 _SCALE_SIGMAS = 3.5
 _STRUCTURE = 0.15
 
@@ -82,7 +84,8 @@ def describes(fit):
     """
     if fit.chi2_reduced < _DESCRIBED:
         return True
-    return unexplained(fit) < 0.05**2
+    scatter = any(channel.kind == "scatter" for channel in fit.problem.model.channels)
+    return unexplained(fit) < (_LEFT_OVER if scatter else _LEFT_OVER_DEPTH) ** 2
 
 
 def unexplained(fit):

@@ -2,7 +2,8 @@
 
 import numpy as np
 
-from scatterfit.forward.model import Cloud, channel_signals
+from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.model import channel_signals
 
 _FEW = 1e4
 _SCALES = (-2.0, 0.0, 2.0)

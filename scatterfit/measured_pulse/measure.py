@@ -136,7 +136,7 @@ def _settle_angles(prepared, fit, base):
             break
         base = tuple(b + s for b, s in zip(base, shifts, strict=True))
         prepared = reangled(prepared, base)
-        fit = refine(fit, prepared.model, prepared.time, fit_options(prepared, base).priors)
+        fit = refine(fit, prepared.model, prepared.time, fit_options(prepared, base))
     return prepared, fit
 
 
@@ -180,7 +180,7 @@ def _result(prepared, fit, gas, warnings):
     budget += more
     scale = q.exponential(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
     turns = _matched(prepared, fit, curve)
-    left = rivals_left(fit, after.inflation, _final_radius(fit.best))
+    left = rivals_left(fit, after.inflation * fit.softening, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)
     reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
     verdict = ("rejected" if not describes(fit) else "ambiguous" if left else "accepted")

@@ -13,7 +13,10 @@ from scatterfit.inversion.data import channel_data
 from scatterfit.inversion.noise import resolution_step
 
 _FEWEST = 20
-_REACH = 3.0
+ANGLE_SIGMAS = 3.0
+"""How many of its sigmas a detector's angle may be off [-]."""
+LARGEST_ANGLE = np.radians(1.6)
+"""How far a detector's angle may be off at the most [rad]."""
 _LEAST_SIZE = 0.25
 _STRIDE = 2
 INDEX_STEP = 2e-4
@@ -110,8 +113,8 @@ def pulse_kernel(setup, store=None):
     if liquid is None:
         liquid = setup.substance.refractive_index(wavelength, setup.droplet_temperature)
     relative = complex(liquid) / float(gas_index)
-    reach = [_REACH * apparatus.sigmas.get(f"detector.{d.column}.angle_deg", 0.0)
-             for d in apparatus.detectors]
+    reach = [min(ANGLE_SIGMAS * apparatus.sigmas.get(f"detector.{d.column}.angle_deg", 0.0),
+                 LARGEST_ANGLE) for d in apparatus.detectors]
     kernel = build_kernel(
         apparatus, float(gas_index), [relative, relative + INDEX_STEP], store, angle_reach=reach
     )

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from scatterfit.forward.model import Cloud, grow
+from scatterfit.forward.growth_model import Cloud, grow
 from scatterfit.inversion.data import bin_channels, bin_edges
 from scatterfit.inversion.fit import FitOptions
 from scatterfit.inversion.onset import find_onset
@@ -11,6 +11,7 @@ from scatterfit.measured_pulse.bench_inputs import (
     temperature_relative_sigma,
     vapour_relative_sigma,
 )
+from scatterfit.measured_pulse.prepare import ANGLE_SIGMAS, LARGEST_ANGLE
 
 _STICKING = 0.7
 _BEND = 0.01
@@ -46,11 +47,14 @@ def fit_options(prepared, angle_base):
         "accommodation": (0.0, _STICKING), "bend": (0.0, _BEND),
         "depletion": (0.0, float(np.hypot(depletion_sigma(setup), _path_sigma(apparatus)))),
     }
+    limits = {}
     for i, detector in enumerate(apparatus.detectors):
         sigma = apparatus.sigmas.get(f"detector.{detector.column}.angle_deg")
         if sigma:
             names.append(f"angle:{i}")
             priors[f"angle:{i}"] = (-angle_base[i], sigma)
+            reach = min(ANGLE_SIGMAS * sigma, LARGEST_ANGLE)
+            limits[f"angle:{i}"] = (-reach - angle_base[i], reach - angle_base[i])
     stated = {"temperature": temperature_relative_sigma(apparatus),
               "vapour": vapour_relative_sigma(apparatus)}
     free = [name for name, sigma in stated.items() if sigma]
@@ -65,7 +69,8 @@ def fit_options(prepared, angle_base):
     widest = min(_WIDEST_SIGMAS * growth_scale_sigma(setup), _WIDEST)
     if setup.clock_known:
         priors["delay"] = (0.0, _CLOCK)
-        return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest)
+        return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest,
+                          limits)
     bins = bin_channels(
         prepared.time, prepared.channels,
         bin_edges(prepared.time, float(prepared.time[0]), _ONSET_BINS),
@@ -74,7 +79,7 @@ def fit_options(prepared, angle_base):
     lag = _visible_after(prepared)
     priors["delay"] = (onset - 0.3 * lag, _LOOSE_CLOCK + lag)
     delays = tuple(onset - lag * np.linspace(0.0, 1.0, 5))
-    return FitOptions(tuple(names), priors, onset, delays, widest)
+    return FitOptions(tuple(names), priors, onset, delays, widest, limits)
 
 
 def _path_sigma(apparatus):
