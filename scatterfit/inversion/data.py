@@ -198,12 +198,14 @@ def bin_channels(time, channels, edges):
         moment = np.add.reduceat(inverse * time, edges)
         some = strength > 0.0
         mean = np.where(some, top / np.where(some, strength, 1.0), 0.0)
-        # A bin with samples left out has its centre elsewhere: shift its mean back along the slope.
+        # A bin with samples left out has its centre elsewhere: shift its mean back along the slope,
+        # which empty bins must not take part in.
         centre = np.where(some, moment / np.where(some, strength, 1.0), middle)
-        slope = np.gradient(mean, middle) if mean.size > 2 else np.zeros_like(mean)
+        slope = np.zeros_like(mean)
+        if some.sum() > 2:
+            slope[some] = np.gradient(mean[some], centre[some])
         full = np.add.reduceat(data.used.astype(float), edges)
-        shifted = np.where(full < total, 0.0, slope) * (middle - centre)
-        values.append(mean + shifted)
+        values.append(mean + slope * (middle - centre))
         weights.append(np.sqrt(strength))
         counts.append(full)
     end = ((0, 0), (0, closing))
