@@ -31,6 +31,8 @@ _ANGLE_STEPS = np.radians([0.2, 0.4, 0.8])
 _CHECKED_SIZES = 24
 _LARGEST_AVERAGED = 10.0
 _TOLERANCE = 1e-5
+_TOLERANCE_AVERAGED = 3e-4
+_NEAR_ZERO = 0.1
 
 
 class KernelStore(Protocol):
@@ -144,7 +146,8 @@ def check_node(recipe: Recipe, node: Node, relative_index: complex) -> None:
     ------
     KernelError
         If single droplets at two dozen sizes over the whole table, or the averages at four small
-        sizes, where an average over three droplets is enough, differ by more than 1e-5.
+        sizes, where an average over three droplets comes close, differ by more than 1e-5 and
+        3e-4; near a zero of the light, by that part of the light at neighbouring sizes.
     """
     grid = recipe.size_parameter
     sizes = np.geomspace(grid[0], grid[-1], _CHECKED_SIZES)
@@ -160,13 +163,15 @@ def check_node(recipe: Recipe, node: Node, relative_index: complex) -> None:
     near = (grid[points, None] * np.exp(three)).ravel()
     theirs = _independent_curves(recipe, relative_index, near)
     theirs = theirs.reshape(-1, points.size, 3) @ (np.array([1.0, 4.0, 1.0]) / 6)
-    _compare(rows[:, points], theirs, grid[points], "averages")
+    _compare(rows[:, points], theirs, grid[points], "averages", _TOLERANCE_AVERAGED)
 
 
-def _compare(ours, theirs, sizes, what):
+def _compare(ours, theirs, sizes, what, tolerance=_TOLERANCE):
     """Raise where two sets of curves differ."""
-    error = np.abs(ours - theirs) / theirs
-    if not np.all(error < _TOLERANCE):
+    beside = np.pad(theirs, ((0, 0), (1, 1)), mode="edge")
+    around = (beside[:, :-2] * beside[:, 1:-1] * beside[:, 2:]) ** (1.0 / 3.0)
+    error = np.abs(ours - theirs) / np.maximum(theirs, _NEAR_ZERO * around)
+    if not np.all(error < tolerance):
         row, column = np.unravel_index(np.nanargmax(error), error.shape)
         message = (
             f"kernel {what} differ from miepython by {error[row, column]:.1e} in curve {row} at "

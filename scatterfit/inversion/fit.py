@@ -16,7 +16,7 @@ from scatterfit.inversion.data import (
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
 from scatterfit.inversion.problem import Evaluation, Problem, evaluate
 from scatterfit.inversion.search import search
-from scatterfit.inversion.solve import descend, polish
+from scatterfit.inversion.solve import Solution, descend, polish
 from scatterfit.inversion.uncertainty import channel_inflation
 
 _COARSE = 260
@@ -28,6 +28,8 @@ _RIVAL = 400.0
 _HOPELESS = 4.0
 _CONTINUED = 3
 _COMPARABLE = 2.5
+_SLOW_MISFIT = 0.01
+_LEAST_RADIUS = 8e-8
 _SOFT = 1.6
 _SOFTENINGS = 3
 _HOP_ROUNDS = 5
@@ -81,7 +83,7 @@ def fit_pulse(model, time, channels, options):
         Best cloud, rivals and residuals.
     """
     channels = tuple(channels)
-    coarse = bin_channels(time, channels, bin_edges(time, options.onset, _COARSE))
+    coarse = _coarse_bins(time, channels, options.onset)
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, _CANDIDATES)
@@ -89,7 +91,10 @@ def fit_pulse(model, time, channels, options):
     channels, found = _without_hops(problem, found, time, channels, options.onset)
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
-    best, others = _best_of(replace(_with(problem, fine, ((),) * len(channels))), found)
+    start = fine if any(data.kind == "scatter" for data in channels) else _blunted(fine)
+    best, others = _best_of(_with(problem, start, ((),) * len(channels)), found)
+    best = Solution(evaluate(_with(problem, fine, ((),) * len(channels)), best.best.cloud,
+                             linear=best.best.state.linear), best.iterations, best.converged)
     problem, best, disturbances = _undisturbed(problem, fine, best)
     glitchy = tuple(
         find_glitches(r, d.used)
@@ -123,6 +128,22 @@ def _softened(problem, best):
     return problem, best
 
 
+def _coarse_bins(time, channels, onset):
+    """Return few bins for first looks.
+
+    Transmitted light alone is precise but has little structure: its shoulders would count for
+    nothing beside a slow misfit of one percent, so such a misfit is let pass at first.
+    """
+    bins = bin_channels(time, channels, bin_edges(time, onset, _COARSE))
+    return bins if any(data.kind == "scatter" for data in channels) else _blunted(bins)
+
+
+def _blunted(bins):
+    """Return bins whose weights allow for a misfit of one percent of the change of light."""
+    allowed = _SLOW_MISFIT * np.ptp(bins.values, axis=1)[:, None]
+    return replace(bins, weights=bins.weights / np.sqrt(1.0 + (allowed * bins.weights) ** 2))
+
+
 def _without_hops(problem, found, time, channels, onset):
     """Return the channels with the laser's hops decided by the fit, and the clouds fitted anew."""
     for _ in range(_HOP_ROUNDS):
@@ -134,7 +155,7 @@ def _without_hops(problem, found, time, channels, onset):
         moved = sum(int(np.sum(a.hops.upper != b.hops.upper))
                     for a, b in zip(again, channels, strict=True) if a.hops is not None)
         channels = again
-        problem = replace(problem, bins=bin_channels(time, channels, bin_edges(time, onset, _COARSE)))
+        problem = replace(problem, bins=_coarse_bins(time, channels, onset))
         found = _explore(problem, [s.best.cloud for s in found[:_CANDIDATES]])
         if moved < _HOPS_SETTLED * time.size:
             break
@@ -307,6 +328,7 @@ def _descend_all(problem, clouds):
         (descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds),
         key=lambda s: s.best.chi2,
     )
+    rough = [s for s in rough if _final(s) > _LEAST_RADIUS] or rough
     limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
     kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
     if len(kept) == 1:

@@ -17,6 +17,7 @@ _DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
 _VARIANCE = 2e-5
 _PHASE = 0.35
 _GRID_ERROR = 0.05
+_DEPTH_ERROR = 0.01
 _VAPOUR_SIGMAS = 2.5
 
 
@@ -269,7 +270,7 @@ def _blunted(weight, data, kind):
         return weight
     rest = np.percentile(data[some], 2.0)
     top = np.ptp(data[some]) if kind == "transmission" else np.maximum(data - rest, 0.0)
-    coarse = _GRID_ERROR * top
+    coarse = (_DEPTH_ERROR if kind == "transmission" else _GRID_ERROR) * top
     return np.where(some, weight / np.sqrt(1.0 + (coarse * weight) ** 2), 0.0)
 
 

@@ -183,7 +183,7 @@ def _result(prepared, fit, gas, warnings):
     left = rivals_left(fit, after.inflation * fit.softening, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)
     reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
-    verdict = ("rejected" if not describes(fit) else "ambiguous" if left else "accepted")
+    verdict = _verdict(fit, reasons, left)
     gas = {**gas, "nucleation": q.nucleation_conditions(setup, number.concentration)}
     return MeasuredPulse(
         verdict=verdict, reasons=(*reasons, *warnings), final_radius=final,
@@ -195,6 +195,15 @@ def _result(prepared, fit, gas, warnings):
         residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
         **rates, **gas,
     )
+
+
+def _verdict(fit, reasons, left):
+    """Return the verdict on a pulse with a cloud."""
+    codes = {reason.code for reason in reasons}
+    strange = codes & {"structured-residuals", "growth-scale-off", "birth-off"}
+    if not describes(fit) or ("extrema-disagree" in codes and strange):
+        return "rejected"
+    return "ambiguous" if left or "extrema-disagree" in codes else "accepted"
 
 
 def _final_radius(evaluation):
