@@ -61,8 +61,8 @@ def rates(
                                          "at; repeatable, 1e7 by default.")
     ] = None,
     convention: Annotated[
-        int, typer.Option("--convention", metavar="1|2", min=1, max=2, help="Nucleation theorem: "
-                          "slope = n* + 1 or n* + 2.")
+        int, typer.Option("--convention", metavar="N", min=1, max=2, help="N of the nucleation "
+                          "theorem, slope = n* + N: 1 or 2.")
     ] = 1,
     hold_series: Annotated[
         bool, typer.Option("--hold-series", help="Where only the duration of the hold differs, "

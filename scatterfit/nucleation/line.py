@@ -18,7 +18,9 @@ _OUTLIER = 3.5  # modified z-score of Iglewicz and Hoaglin 1993
 _TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution to its sigma
 _FEWEST_FOR_OUTLIERS = 5
 _ROUNDS = 200
-_HALVINGS = 14
+_HALVINGS = 12
+_TURNS = 2
+_FLOOR = 1e-24  # variance of ln J far below anything measured, which keeps weights finite
 
 
 @dataclass(frozen=True)
@@ -39,7 +41,7 @@ class Points:
     @property
     def stated(self):
         """Whether any point has an error of its own."""
-        return bool(np.any(self.variance_x > 0) or np.any(self.variance_y > 0))
+        return bool(self.variance_x.any() or self.variance_y.any())
 
     def variance(self, slope):
         """Return the variance of the distance y - slope x, shape (n,) [-]."""
@@ -153,21 +155,24 @@ def fit_line(points, *, extra=True):
     if not extra or freedom < 1 or line.scatter > 0 or \
             line.chi2_reduced * freedom >= chi_square_quantile(0.025, freedom):
         return line
-    own_x = _own_part(points)
-    reduced = _fitted(points.reduced(own_x, 1.0), extra=True)
+    reduced = line
+    for _ in range(_TURNS):  # the slope hardly depends on the part, nor the part on the slope
+        own_x = _own_part(points, reduced.slope)
+        reduced = _fitted(points.reduced(own_x, 1.0), extra=True)
     own = 1.0 if own_x > 0 else max(reduced.chi2_reduced, 1e-12) if reduced.scatter == 0 else 1.0
     return replace(reduced, covariance=own * reduced.covariance, own_x=own_x, own=own,
                    chi2_reduced=line.chi2_reduced, freedom=freedom)
 
 
-def _own_part(points):
+def _own_part(points, slope):
     """Return the part of the variance of x at which chi-square is its expectation."""
     low, high = 0.0, 1.0
     for _ in range(_HALVINGS):
         middle = 0.5 * (low + high)
-        too_much = _fitted(points.reduced(middle, 1.0), extra=False).chi2_reduced < 1.0
-        low, high = (low, middle) if too_much else (middle, high)
-    return low if low > 0 else 0.0
+        weights = _weights(points.reduced(middle, 1.0), slope, 0.0)
+        misfit = float(weights @ _residuals(points, slope, weights) ** 2)
+        low, high = (low, middle) if misfit < points.x.size - 2 else (middle, high)
+    return low
 
 
 def _fitted(points, *, extra):
@@ -176,20 +181,15 @@ def _fitted(points, *, extra):
     for _ in range(_ROUNDS):
         scatter2 = extra_variance(points, slope) if extra else 0.0
         new = _slope(points, _weights(points, slope, scatter2), slope)
-        done = abs(new - slope) <= 1e-13 * abs(new)
+        done = abs(new - slope) <= 1e-12 * abs(new)
         slope = new
         if done:
             break
     return _line(points, slope, scatter2)
 
 
-def _floor(points):
-    """Return a variance far below anything measured, which keeps weights finite."""
-    return 1e-26 * (1.0 + float(np.var(points.y)))
-
-
 def _weights(points, slope, scatter2):
-    return 1.0 / (points.variance(slope) + scatter2 + _floor(points))
+    return 1.0 / (points.variance(slope) + scatter2 + _FLOOR)
 
 
 def _adjusted(points, weights, slope):
@@ -256,7 +256,7 @@ def extra_variance(points, slope):
     freedom = points.x.size - 2
     if freedom < 1:
         return 0.0
-    stated = points.variance(slope) + _floor(points)
+    stated = points.variance(slope) + _FLOOR
     plain = _residuals(points, slope, np.ones_like(points.x))
     if not points.stated:
         return float(plain @ plain) / freedom

@@ -250,9 +250,11 @@ class Losses:
     """Part of the droplets that reaches the detected size [-]."""
     detected: float
     """That size [m]."""
+    vapour: float | None = None
+    """Part of the vapour that the background takes during the hold [-]."""
 
 
-def losses(surroundings, background, detected=None):
+def losses(surroundings, background, detected=None, duration=None):
     """Return what a background takes from the droplets of a pulse.
 
     Parameters
@@ -264,6 +266,8 @@ def losses(surroundings, background, detected=None):
     detected : float, optional
         Diameter at which a droplet counts [m]; that of the background when absent, beyond which
         it is no smaller than what it meets.
+    duration : float, optional
+        Of the hold [s].
 
     Returns
     -------
@@ -287,6 +291,9 @@ def losses(surroundings, background, detected=None):
     sizes = np.geomspace(first, max(detected, 1.1 * first), _STEPS)
     growing = growth_rate(surroundings, sizes)
     met = coagulation_coefficient(surroundings, sizes, background.diameter, density)
-    return Losses(condensation_sink(surroundings, background),
+    sink = condensation_sink(surroundings, background)
+    taken = None if duration is None else float(-np.expm1(-sink * duration))
+    return Losses(sink,
                   float(growth_rate(surroundings, [2.0 * float(critical)])[0]),
-                  survival(sizes, met * background.concentration, growing), float(sizes[-1]))
+                  survival(sizes, met * background.concentration, growing), float(sizes[-1]),
+                  taken)

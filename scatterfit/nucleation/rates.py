@@ -16,6 +16,7 @@ from scatterfit.nucleation.select import rate_pulses
 from scatterfit.nucleation.table import (
     BACKGROUND,
     BACKGROUND_DIAMETER,
+    DURATION,
     PRESSURE,
     group_rows,
 )
@@ -145,7 +146,8 @@ def _losses(table, isotherm, settings):
         return None
     ratio = float(np.exp(np.mean(np.log(seen.ratio))))
     around = Surroundings(isotherm.temperature, pressure, ratio, settings.substance, settings.gas)
-    return losses(around, background)
+    duration = _middle(table, DURATION, seen.row, "ms")
+    return losses(around, background, duration=duration if duration > 0 else None)
 
 
 def _middle(table, name, rows, unit):

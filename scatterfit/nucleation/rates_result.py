@@ -18,6 +18,7 @@ _PER_CM3 = 1e-6
 _FEWEST = 3
 _LARGE_CORRECTION = 0.1  # rms of ln J
 _FAR = math.log(10.0)
+_HARDLY_ANY = 0.95  # what is left, from where on losses are worth a caution
 
 
 def rates_to_dict(rates):
@@ -90,7 +91,8 @@ def _isotherm(isotherm, lost, settings):
         "temperature_correction": _correction(isotherm, settings),
         "losses": None if lost is None else {
             "condensation_sink_per_s": lost.sink, "growth_rate_nm_per_ms": lost.growth * 1e6,
-            "survival": lost.survival, "detected_diameter_nm": lost.detected * 1e9},
+            "survival": lost.survival, "detected_diameter_nm": lost.detected * 1e9,
+            "vapour_taken": _plain(lost.vapour)},
         "reasons": [{"code": code, "text": text}
                     for code, text in reasons_of(isotherm, settings, lost)],
     }
@@ -177,10 +179,20 @@ def reasons_of(isotherm, settings, lost=None):
                                   "they grow: sizes and numbers assume liquid"))
     if isotherm.theory and not any(ratio.in_range for ratio in isotherm.theory.values()):
         found.append(("theory-out-of-range", "no theory claims to hold at this temperature"))
-    if lost is not None and lost.survival < 0.95:
-        found.append(("losses", f"the background takes {100 * (1 - lost.survival):.0f} percent of "
-                                "the droplets before they are seen: J is that much larger"))
+    if lost is not None:
+        found += _about_losses(isotherm, lost)
     return found
+
+
+def _about_losses(isotherm, lost):
+    if lost.survival < _HARDLY_ANY:
+        yield ("losses", f"the background takes {100 * (1 - lost.survival):.2g} percent of the "
+               "droplets before they are seen: J is that much larger")
+    slope = isotherm.slope.value if isotherm.slope else 0.0
+    lower = 1.0 - (1.0 - (lost.vapour or 0.0)) ** max(slope, 0.0)
+    if lower > 1.0 - _HARDLY_ANY:
+        yield ("vapour-taken", f"the background takes {100 * lost.vapour:.2g} percent of the "
+               f"vapour during the hold, which lowers J by {100 * lower:.2g} percent at its end")
 
 
 def _about_the_fit(isotherm, count):

@@ -27,6 +27,8 @@ _SMALL, _TEXT = 6.5, 7.5
 _STYLE = {"labelsize": _SMALL, "length": 2.5, "width": 0.6, "direction": "in", "which": "both"}
 _FINE = 200
 _MOST_BARS = 400
+_MOST_LABELS = 16
+_LONGEST = 14
 
 
 def check_suffix(path):
@@ -150,6 +152,8 @@ def _finish_rates(axis, drawn, looks, reference):
     handles = [Line2D([], [], color=colour, marker=marker, ms=3, mew=0.5, mfc="white", lw=1,
                       label=_label(isotherm))
                for isotherm, (colour, marker) in zip(drawn, looks, strict=True)]
+    handles = handles[:: -(-len(handles) // _MOST_LABELS)] if handles else []
+    columns = 4 if max((len(handle.get_label()) for handle in handles), default=0) < 9 else 3
     handles.append(Line2D([], [], color=_GREY, lw=0.8, ls=(0, (4, 2)), label=reference.label))
     if any(isotherm.censored.names for isotherm in drawn):
         handles.append(Line2D([], [], ls="none", marker="$\\downarrow$", ms=5, color=_GREY,
@@ -157,14 +161,19 @@ def _finish_rates(axis, drawn, looks, reference):
     if any(isotherm.outliers for isotherm in drawn):
         handles.append(Line2D([], [], ls="none", marker="o", ms=7, mfc="none", mec=_BLACK, mew=0.8,
                               label="outlier"))
-    axis.legend(handles=handles, fontsize=5.5, frameon=False, loc="lower center", ncols=4,
+    axis.legend(handles=handles, fontsize=5.5, frameon=False, loc="lower center", ncols=columns,
                 bbox_to_anchor=(0.45, 1.0), handlelength=1.8, columnspacing=1.0, borderpad=0.2,
                 labelspacing=0.3)
 
 
 def _label(isotherm):
     text = f"{isotherm.temperature:.1f} K"
-    return text if isotherm.by is None else f"{text}, {isotherm.by}"
+    return text if isotherm.by is None else f"{text}, {_short(isotherm.by)}"
+
+
+def _short(text):
+    """Return the end of a long text, where names differ."""
+    return text if len(text) <= _LONGEST else f"…{text[-_LONGEST:]}"
 
 
 def _draw_ratios(axis, rates):
@@ -242,7 +251,7 @@ def _run_label(run):
     if run.diameter is not None:
         parts.append(f"{run.diameter * 1e9:.3g} nm")
     if run.by is not None:
-        parts.append(str(run.by))
+        parts.append(_short(run.by))
     return ", ".join(parts)
 
 
