@@ -6,6 +6,8 @@ import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT
 
+_BEYOND = 1e-3
+
 
 @dataclass(frozen=True)
 class GasPath:
@@ -70,17 +72,17 @@ def choose_nodes(time, pressure, births, count=150):
     Returns
     -------
     nodes : ndarray, shape (m,)
-        From just before the first birth to the last sample [s].
+        From just before the first birth to a millisecond after the last sample [s].
 
     Examples
     --------
     >>> time = np.linspace(0.0, 0.1, 501)
     >>> nodes = choose_nodes(time, np.full(501, 7e4), (0.01, 0.011), count=50)
     >>> bool(nodes[0] < 0.01), float(nodes[-1])
-    (True, 0.1)
+    (True, 0.101)
     """
     first, last = births
-    end = float(time[-1])
+    end = float(time[-1]) + _BEYOND
     start = max(float(time[0]), first - 0.02 * (last - first) - 1e-6)
     fine = np.unique(np.concatenate([
         np.linspace(start, end, 4 * count),
@@ -91,7 +93,7 @@ def choose_nodes(time, pressure, births, count=150):
     middle = 0.5 * (fine[1:] + fine[:-1])
     moving = np.abs(np.diff(np.interp(fine, time, pressure))) / np.diff(fine) / np.mean(pressure)
     age = np.maximum(middle - first, 0.02 * (last - first) + 1e-5)
-    density = 1.0 / (end - start) + 0.35 / age + np.minimum(15.0 * moving, 0.5 / max(last - first, 1e-4))
+    density = 1.0 / (end - start) + 0.35 / age + np.minimum(15.0 * moving, 3.0 / max(last - first, 1e-4))
     density = density + np.where(middle < last, 0.5 / max(last - first, 1e-6), 0.0)
     cumulative = np.concatenate([[0.0], np.cumsum(density * np.diff(fine))])
     return np.interp(np.linspace(0.0, cumulative[-1], count), cumulative, fine)

@@ -212,9 +212,10 @@ def _truth(setup, model, scenario, state, where):
     time, cloud = where
     median = setup.births.median + cloud.delay
     chosen = np.linspace(median, time[-1], 6)[1:]
-    weights = setup.births.weights
+    # The droplet of median age: between the classes born before and after it.
     radius = np.array([
-        weights @ np.array([np.interp(t, time, r) for r in state.radius]) for t in chosen
+        np.interp(setup.births.median, setup.births.times,
+                  [np.interp(t, time, r) for r in state.radius]) for t in chosen
     ])
     hold = setup.hold
     path = setup.path

@@ -11,6 +11,7 @@ _CERTAIN = 7.5
 _WIDTH = 9
 _TOLERANCE = 0.04
 _LEAST_SHARE = 0.004
+_STILL = 0.5
 
 
 @dataclass(frozen=True)
@@ -93,6 +94,63 @@ def _vertex(time, values, weights, index):
     return float(time[index] - scale * b / (2.0 * a))
 
 
+def find_shoulders(time, values, weights, start):
+    """Return where a trace that keeps rising or falling stands nearly still.
+
+    Parameters
+    ----------
+    time : ndarray, shape (m,)
+        Bins [s].
+    values : ndarray, shape (m,)
+        Means [V].
+    weights : ndarray, shape (m,)
+        One over their standard deviations; zero where there is none [1/V].
+    start : float
+        Nothing before it counts [s].
+
+    Returns
+    -------
+    shoulders : list of Turn
+        In order of time, of kind ``"shoulder"``.
+
+    Examples
+    --------
+    >>> time = np.linspace(0.0, 1.0, 400)
+    >>> found = find_shoulders(time, time + 0.9 * np.sin(12 * time) / 12, np.full(400, 1e5), 0.0)
+    >>> [round(s.time, 2) for s in found]
+    [0.26, 0.79]
+    """
+    some = (weights > 0) & (time > start)
+    time, values, weights = time[some], values[some], weights[some]
+    half = _WIDTH
+    if time.size < 8 * half:
+        return []
+    slope, sigma = _slopes(time, values, weights, half)
+    sign = np.sign(np.median(slope[np.abs(slope) > np.percentile(np.abs(slope), 60)]))
+    slope = sign * slope
+    found = []
+    for index, kind in _alternating(slope, _CERTAIN * sigma):
+        if kind != "minimum" or not half <= index < time.size - half:
+            continue
+        before = slope[max(index - 12 * half, 0):index].max()
+        after = slope[index:index + 12 * half].max()
+        low = slope[index]
+        if -0.3 * min(before, after) < low < _STILL * min(before, after):
+            found.append(Turn(float(time[index]), "shoulder", float(min(before, after) / sigma[index])))
+    return found
+
+
+def _slopes(time, values, weights, half):
+    """Return the slope of a straight line through the bins about each, and its deviation."""
+    width = 2 * half + 1
+    view = np.lib.stride_tricks.sliding_window_view
+    t = view(np.pad(time, half, mode="reflect", reflect_type="odd"), width)
+    v = view(np.pad(values, half, mode="reflect", reflect_type="odd"), width)
+    t = t - t.mean(axis=1, keepdims=True)
+    power = np.sum(t**2, axis=1)
+    return np.sum(t * v, axis=1) / power, 1.0 / (weights * np.sqrt(power))
+
+
 def match_turns(turns, radius_at, log_radius, curve):
     """Return the kernel's extremum that each turn of a trace belongs to.
 
@@ -116,7 +174,10 @@ def match_turns(turns, radius_at, log_radius, curve):
     slope = np.diff(curve)
     peaks = np.flatnonzero((slope[:-1] > 0) & (slope[1:] <= 0)) + 1
     troughs = np.flatnonzero((slope[:-1] < 0) & (slope[1:] >= 0)) + 1
-    places = {"maximum": log_radius[peaks], "minimum": log_radius[troughs]}
+    steep = np.diff(np.log(np.maximum(curve, 1e-300)))
+    still = np.flatnonzero((steep[1:-1] < steep[:-2]) & (steep[1:-1] <= steep[2:])) + 1
+    places = {"maximum": log_radius[peaks], "minimum": log_radius[troughs],
+              "shoulder": log_radius[still]}
     matches = []
     for turn in turns:
         radius = radius_at(turn.time)

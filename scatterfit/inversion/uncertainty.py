@@ -1,6 +1,6 @@
 """What the data and the stated uncertainties leave open, to first order about the best cloud."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -10,6 +10,7 @@ from scatterfit.inversion.problem import evaluate
 _WHITE = 1.25
 _BLOCKS = (1, 4, 16)
 _FEWEST_BLOCKS = 12
+_CHANCE = 3.0
 _DETERMINED = 0.6
 
 
@@ -29,6 +30,8 @@ class Posterior:
     """Factor on the noise covariance for residuals that are not white [-]."""
     handles: dict
     """Handle on the number to (shift of ln number, its sigma); only those that are determined."""
+    priors: dict = field(default_factory=dict)
+    """Parameter to mean and standard deviation of what was known beforehand."""
     state: object = None
     """The cloud at the bins, with derivatives by all cloud parameters (CloudState)."""
 
@@ -104,7 +107,7 @@ def posterior(problem, best, inputs):
         for k, name in enumerate(priors)
     }
     handles = _handles(wide, all_names, inflation)
-    return Posterior(all_names, step, noise, by_prior, inflation, handles, wide.state)
+    return Posterior(all_names, step, noise, by_prior, inflation, handles, priors, wide.state)
 
 
 def _inverse(jacobian):
@@ -137,7 +140,9 @@ def channel_inflation(problem, best):
             count = residual.size // block
             if count >= _FEWEST_BLOCKS:
                 means = residual[: count * block].reshape(count, block).sum(axis=1)
-                most = max(most, float(np.mean(means**2)) / block)
+                ratio = float(np.mean(means**2)) / block
+                if ratio > 1.0 + _CHANCE * np.sqrt(2.0 / count):
+                    most = max(most, ratio)
         factors.append(most)
     return factors
 

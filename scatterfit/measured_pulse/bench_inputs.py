@@ -7,8 +7,8 @@ from scatterfit.inversion.prior import depletion_sigma
 
 
 
-_CREEP = 0.01
-"""One percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
+_CREEP = 0.02
+"""Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
 
 
 def bench_inputs(prepared, problem, best, index_shift=2e-4):

@@ -5,8 +5,9 @@ from dataclasses import replace
 import numpy as np
 
 from scatterfit.forward.light import spread_table
-from scatterfit.inversion.extrema import find_turns, match_turns
+from scatterfit.inversion.extrema import find_shoulders, find_turns, match_turns
 from scatterfit.inversion.fit import fit_pulse, refine
+from scatterfit.inversion.problem import value_of
 from scatterfit.inversion.uncertainty import posterior
 from scatterfit.inversion.verdict import (
     Finding,
@@ -27,6 +28,7 @@ from scatterfit.measured_pulse.record import (
     BudgetLine,
     ChannelView,
     Extremum,
+    Learnt,
     MeasuredPulse,
     Quantity,
     Reason,
@@ -40,6 +42,7 @@ _BASE_SPREAD = 0.003
 _LARGEST = 0.98
 _FEW = 3
 _DISAGREE = 0.015
+_STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
 _INPUTS = {
     "scale": "computed growth rate", "bend": "shape of the growth law",
     "creep": "creep of the gas during growth", "depletion": "computed depletion", "accommodation": "vapour.mass_accommodation",
@@ -142,9 +145,10 @@ def _settle_angles(prepared, fit, base):
 
 def _views(prepared, fit):
     """Return the channels for figures."""
-    labels = {"scatter": "scattered light", "transmission": "transmitted light"}
+    angles = {d.column: f"scattered light, {np.degrees(d.angle):g}\N{DEGREE SIGN}"
+              for d in prepared.setup.apparatus.detectors}
     return tuple(
-        ChannelView(d.column, labels[d.kind], prepared.time, d.signal, fit.model[i],
+        ChannelView(d.column, angles.get(d.column, "transmitted light"), prepared.time, d.signal, fit.model[i],
                     fit.residual[i], d.used)
         for i, d in enumerate(fit.channels)
     )
@@ -154,7 +158,12 @@ def _nothing(prepared, fit, gas, warnings):
     """Return the result of a pulse without a cloud."""
     limit = upper_limit(prepared, fit.problem)
     text = "no rise of the light that growing droplets would explain"
+    after = prepared.time > prepared.setup.births.median
+    if prepared.setup.clock_known and not any((d.used & after).any() for d in fit.channels):
+        text = "nothing is left to fit after the births: narrow --exclude-ms or widen the window"
+        limit = None
     text += (f": fewer than {limit * 1e-6:.3g} per cm3 (95 percent)" if limit is not None
+             else "" if "nothing is left" in text
              else "; without a gain or a transmission there is no limit on their number")
     return MeasuredPulse(
         verdict="rejected", reasons=(Reason("no-cloud", text), *warnings),
@@ -193,7 +202,7 @@ def _result(prepared, fit, gas, warnings):
         curve=curve, extrema=tuple(e for e in turns if e.radius > 0.0),
         alternatives=_alternatives(fit, number), chi2_reduced=fit.chi2_reduced,
         residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
-        **rates, **gas,
+        learnt=_learnt(fit, after), **rates, **gas,
     )
 
 
@@ -233,10 +242,32 @@ def _rates(setup, fit, after, reference):
     return rates, _budget("growth_rate_um_per_s", 1e6, noise, parts, floor, fit)
 
 
+def _learnt(fit, after):
+    """Return what the trace says about inputs that the chamber file states with a sigma."""
+    columns = _input_names(fit)
+    sigmas = np.sqrt(np.maximum(np.diag(after.covariance), 0.0))
+    found = []
+    for i, name in enumerate(after.names):
+        prior = after.priors.get(name)
+        if prior is None or name not in _STATED and not name.startswith(("angle:", *_STATED)):
+            continue
+        shift = float(after.step[i])
+        if name in fit.problem.names:
+            shift += value_of(fit.best.cloud, name) - prior[0]
+        found.append(Learnt(columns.get(name, _INPUTS.get(name, name)), shift / prior[1],
+                            float(sigmas[i] / prior[1])))
+    return tuple(found)
+
+
+def _input_names(fit):
+    """Return the chamber file's names of the angles."""
+    return {f"angle:{i}": f"detector.{d.column}.angle_deg"
+            for i, d in enumerate(fit.problem.model.setup.apparatus.detectors)}
+
+
 def _budget(name, factor, noise, parts, floor, fit):
     """Return the lines of one quantity's budget, largest first."""
-    columns = {f"angle:{i}": f"detector.{d.column}.angle_deg"
-               for i, d in enumerate(fit.problem.model.setup.apparatus.detectors)}
+    columns = _input_names(fit)
     variances = {"noise": noise, "model": floor**2}
     variances |= {columns.get(key, _INPUTS.get(key, key)): value for key, value in parts.items()}
     total = sum(variances.values())
@@ -260,12 +291,16 @@ def _matched(prepared, fit, curve):
         return float(np.interp(time, curve.time, curve.radius))
 
     for i, channel in enumerate(fit.problem.model.channels):
-        if channel.kind != "scatter":
-            continue
-        bins = fit.problem.bins
-        turns = find_turns(bins.time, bins.values[i], bins.weights[i], start)
-        for turn, radius in match_turns(turns, radius_at, log_radius, table.values[channel.row]):
+        bins, row = fit.problem.bins, table.values[channel.row]
+        samples = bins.time, bins.values[i], bins.weights[i] * np.sqrt(fit.softening)
+        turns = find_turns(*samples, start) if channel.kind == "scatter" else []
+        for turn, radius in match_turns(turns, radius_at, log_radius, row):
             found.append(Extremum(turn.time, radius or 0.0, turn.kind, channel.column))
+        shoulders = find_shoulders(*samples, start)
+        for turn, radius in match_turns(shoulders, radius_at, log_radius, row):
+            if radius:
+                found.append(Extremum(turn.time, radius, turn.kind, channel.column))
+    found.sort(key=lambda extremum: extremum.time)
     return found
 
 
@@ -297,6 +332,7 @@ def _extrema_findings(turns, fit):
     """Return what the peaks and troughs say about the fit."""
     if not any(c.kind == "scatter" for c in fit.problem.model.channels):
         return []
+    turns = [turn for turn in turns if turn.kind != "shoulder"]
     matched = sum(1 for turn in turns if turn.radius > 0.0)
     if len(turns) >= _FEW and matched < 0.6 * len(turns):
         return [Finding("extrema-disagree", (

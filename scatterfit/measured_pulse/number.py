@@ -10,6 +10,7 @@ from scatterfit.measured_pulse.quantities import Derived, quantity
 from scatterfit.measured_pulse.record import Concentration, Quantity
 
 _DETERMINED = 0.5
+_DETERMINED_ALONE = 0.3
 _KERNEL = 1e-3
 _THICK = 0.05
 _SECOND_ORDER = 0.1
@@ -55,7 +56,8 @@ def number_results(prepared, fit, posterior):
     counting = _counting(prepared, log.value)
     handles = _handles(prepared, cloud, posterior, second, counting)
     findings = _depth_finding(prepared, depth)
-    if not log.sigma < _DETERMINED:
+    alone = handles["gain"] is None and handles["transmission"] is None
+    if not log.sigma < (_DETERMINED_ALONE if alone else _DETERMINED):
         findings.append(Finding("no-number", (
             "nothing here fixes the number: give detector gain_V_m (a calibration), a "
             "transmission with its path, or more droplets so that the vapour visibly depletes"
@@ -69,7 +71,7 @@ def number_results(prepared, fit, posterior):
         value, float(np.hypot(statistical, systematic)), float(statistical), float(systematic)
     )
     findings += _tension(handles)
-    if handles["gain"] is None and handles["transmission"] is None:
+    if alone:
         findings.append(Finding("number-from-depletion", (
             "the number rests on the depletion of the vapour alone, so on temperature and "
             "humidity; a gain or a transmission would check it"

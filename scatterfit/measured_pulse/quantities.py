@@ -16,6 +16,7 @@ from scatterfit.measured_pulse.record import Curve, NucleationConditions, Quanti
 
 _BIRTH_CLOCK = 5e-5
 _EFFECTIVE = 0.03
+_PRESSURE = 2e-4
 _POINTS = 200
 
 
@@ -359,28 +360,54 @@ def nucleation_conditions(setup, concentration):
     hold = setup.hold
     if hold is None:
         return NucleationConditions()
-    sigmas = relative_sigmas(setup)
-    ratio, by = state_derivatives(setup, hold.temperature, hold.pressure)
-    parts = np.array([by["temperature"] * sigmas["temperature"], sigmas["vapour"],
-                      sigmas["saturation"]])
-    sigma_t = hold.temperature * sigmas["temperature"]
-    saturation = Quantity(hold.saturation_ratio, hold.saturation_ratio * float(np.hypot.reduce(parts)))
-    covariance = float(sigma_t * hold.saturation_ratio * parts[0])
+    sigmas = _hold_sigmas(setup)
+    _, by = state_derivatives(setup, hold.temperature, hold.pressure)
+    coupling = by["temperature"] if setup.clock_known else by["temperature"] - (
+        setup.vapour_by_temperature)
+    # One pressure enters temperature and saturation ratio: adiabatic where there is a gauge.
+    cooling = GAS_CONSTANT / setup.properties.heat_capacity if setup.clock_known else 0.0
+    warm = np.array([sigmas["temperature"], -cooling * sigmas["start"], cooling * sigmas["pressure"]])
+    wet = np.array([coupling * sigmas["temperature"], -cooling * by["temperature"] * sigmas["start"],
+                    (1.0 + cooling * by["temperature"]) * sigmas["pressure"],
+                    sigmas["vapour"], sigmas["saturation"]])
+    sigma_t = hold.temperature * float(np.hypot.reduce(warm))
+    saturation = Quantity(hold.saturation_ratio, hold.saturation_ratio * float(np.hypot.reduce(wet)))
+    covariance = float(hold.temperature * hold.saturation_ratio * (warm @ wet[:3]))
     effective, rate = None, None
     if hold.effective and setup.threshold is None:
-        effective = Quantity(hold.effective, hold.effective * _EFFECTIVE)
+        spread = sigmas["effective"]
+        effective = Quantity(hold.effective, hold.effective * spread)
         if concentration is not None:
             path = setup.path
             denser = (hold.pressure / hold.temperature) / (
                 path.reference_pressure / path.reference_temperature
             )
             value = concentration.value * denser / hold.effective
-            relative = np.hypot(concentration.sigma / concentration.value, _EFFECTIVE)
+            relative = np.hypot(concentration.sigma / concentration.value, spread)
             rate = Quantity(value, value * float(relative))
     return NucleationConditions(
-        Quantity(hold.temperature, sigma_t), Quantity(hold.pressure, 2e-4 * hold.pressure),
+        Quantity(hold.temperature, sigma_t),
+        Quantity(hold.pressure, sigmas["pressure"] * hold.pressure),
         saturation, effective, rate, covariance,
     )
+
+
+def _hold_sigmas(setup):
+    """Return relative standard uncertainties of what the hold's state rests on [-]."""
+    apparatus = setup.apparatus
+    known, hold = apparatus.sigmas, setup.hold
+    sigmas = relative_sigmas(setup)
+    if setup.clock_known:
+        offset = known.get("pressure.offset_kPa", 0.0)
+        start = np.hypot(known.get("chamber.pressure_kPa", 0.0), offset) / setup.start_pressure
+        return {**sigmas, "start": float(start), "effective": _EFFECTIVE,
+                "pressure": float(np.hypot(_PRESSURE, offset / hold.pressure))}
+    effective = known.get("pulse.hold_ms", 0.0) / hold.effective if hold.effective else 0.0
+    return {
+        **sigmas, "temperature": known.get("pulse.temperature_K", 0.0) / hold.temperature,
+        "start": 0.0, "effective": float(np.hypot(_EFFECTIVE, effective)),
+        "pressure": float(np.hypot(_PRESSURE, known.get("pulse.pressure_kPa", 0.0) / hold.pressure)),
+    }
 
 
 def birth_time(setup, cloud, posterior):

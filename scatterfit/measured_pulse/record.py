@@ -126,6 +126,17 @@ class BudgetLine:
 
 
 @dataclass(frozen=True)
+class Learnt:
+    """What the trace says about an input that was stated with a standard uncertainty."""
+
+    input: str
+    moved: float
+    """How far from the stated value, in stated sigmas [-]."""
+    left: float
+    """Sigma afterwards over the stated sigma [-]."""
+
+
+@dataclass(frozen=True)
 class ChannelView:
     """A channel as measured and as fitted, for figures."""
 
@@ -173,6 +184,7 @@ class MeasuredPulse:
     chi2_reduced: float | None = None
     residual_lag1: float | None = None
     budget: tuple[BudgetLine, ...] = ()
+    learnt: tuple[Learnt, ...] = ()
     provenance: Mapping[str, object] = field(default_factory=dict)
     channels: tuple[ChannelView, ...] = ()
 
@@ -219,6 +231,11 @@ class MeasuredPulse:
                 {"input": line.input, "quantity": line.quantity,
                  "sigma": _finite(line.sigma), "share": _finite(line.share)}
                 for line in self.budget
+            ],
+            "learnt": [
+                {"input": line.input, "moved_sigmas": _finite(line.moved),
+                 "sigma_left": _finite(line.left)}
+                for line in self.learnt
             ],
             "provenance": dict(self.provenance),
         }
