@@ -5,7 +5,6 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from scatterfit.forward.cloud_state import hermite
-from scatterfit.forward.growth_model import Cloud
 from scatterfit.inversion.data import (
     ChannelData,
     bin_channels,
@@ -14,23 +13,23 @@ from scatterfit.inversion.data import (
     without,
 )
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
+from scatterfit.inversion.explore import (
+    CANDIDATES,
+    SOFT,
+    Rival,
+    best_of,
+    blunted,
+    coarse_bins,
+    coarse_model,
+    explore,
+    soften,
+)
 from scatterfit.inversion.problem import Evaluation, Problem, evaluate
 from scatterfit.inversion.search import search
 from scatterfit.inversion.solve import Solution, descend, polish
 from scatterfit.inversion.uncertainty import channel_inflation
 
-_COARSE = 260
 _FINE = 800
-_CANDIDATES = 4
-_APART = 4e-3
-_ROUGHLY = 0.012
-_RIVAL = 400.0
-_HOPELESS = 4.0
-_CONTINUED = 3
-_COMPARABLE = 2.5
-_SLOW_MISFIT = 0.01
-_LEAST_RADIUS = 8e-8
-_SOFT = 1.6
 _SOFTENINGS = 3
 _HOP_ROUNDS = 5
 _HOPS_SETTLED = 1e-3
@@ -53,7 +52,7 @@ class Fit:
     """Correlation of neighbouring residuals [-]."""
     chi2_null: float
     """Misfit without droplets, in the bins [-]."""
-    rivals: tuple["Rival", ...]
+    rivals: tuple[Rival, ...]
     """Other clouds, best first."""
     disturbances: tuple[tuple[str, ...], ...]
     """Names of drift and hum found in each channel."""
@@ -83,16 +82,16 @@ def fit_pulse(model, time, channels, options):
         Best cloud, rivals and residuals.
     """
     channels = tuple(channels)
-    coarse = _coarse_bins(time, channels, options.onset)
+    coarse = coarse_bins(time, channels, options.onset)
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
-    candidates = search(problem, options.delays, options.widest, _CANDIDATES)
-    found = _explore(problem, [c.cloud for c in candidates])
+    candidates = search(problem, options.delays, options.widest, CANDIDATES)
+    found = explore(problem, [c.cloud for c in candidates])
     channels, found = _without_hops(problem, found, time, channels, options.onset)
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
-    start = fine if any(data.kind == "scatter" for data in channels) else _blunted(fine)
-    best, others = _best_of(_with(problem, start, ((),) * len(channels)), found)
+    start = fine if any(data.kind == "scatter" for data in channels) else blunted(fine)
+    best, others = best_of(_with(problem, start, ((),) * len(channels)), found)
     best = Solution(evaluate(_with(problem, fine, ((),) * len(channels)), best.best.cloud,
                              linear=best.best.state.linear), best.iterations, best.converged)
     problem, best, disturbances = _undisturbed(problem, fine, best)
@@ -121,27 +120,11 @@ def _softened(problem, best):
     """
     for _ in range(_SOFTENINGS):
         factors = np.array(channel_inflation(problem, best.best))
-        if factors.max() < _SOFT:
+        if factors.max() < SOFT:
             break
-        problem = _soften(problem, factors)
+        problem = soften(problem, factors)
         best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
     return problem, best
-
-
-def _coarse_bins(time, channels, onset):
-    """Return few bins for first looks.
-
-    Transmitted light alone is precise but has little structure: its shoulders would count for
-    nothing beside a slow misfit of one percent, so such a misfit is let pass at first.
-    """
-    bins = bin_channels(time, channels, bin_edges(time, onset, _COARSE))
-    return bins if any(data.kind == "scatter" for data in channels) else _blunted(bins)
-
-
-def _blunted(bins):
-    """Return bins whose weights allow for a misfit of one percent of the change of light."""
-    allowed = _SLOW_MISFIT * np.ptp(bins.values, axis=1)[:, None]
-    return replace(bins, weights=bins.weights / np.sqrt(1.0 + (allowed * bins.weights) ** 2))
 
 
 def _without_hops(problem, found, time, channels, onset):
@@ -155,8 +138,8 @@ def _without_hops(problem, found, time, channels, onset):
         moved = sum(int(np.sum(a.hops.upper != b.hops.upper))
                     for a, b in zip(again, channels, strict=True) if a.hops is not None)
         channels = again
-        problem = replace(problem, bins=_coarse_bins(time, channels, onset))
-        found = _explore(problem, [s.best.cloud for s in found[:_CANDIDATES]])
+        problem = replace(problem, bins=coarse_bins(time, channels, onset))
+        found = explore(problem, [s.best.cloud for s in found[:CANDIDATES]])
         if moved < _HOPS_SETTLED * time.size:
             break
     return channels, found
@@ -174,58 +157,6 @@ def _undisturbed(problem, fine, best):
         problem = _with(problem, fine, disturbances)
         best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
     return problem, best, disturbances
-
-
-def _best_of(problem, found):
-    """Return the best cloud in the finer bins, and its rivals."""
-    close = [found[0], *(s for s in found[1:] if s.best.chi2 - found[0].best.chi2 < _RIVAL)]
-    refined = sorted(
-        (descend(problem, s.best.cloud, iterations=10, tolerance=0.05) for s in close[:3]),
-        key=lambda s: s.best.chi2,
-    )
-    best = refined[0]
-    if len(refined) > 1:
-        # Only the order is decided with softer weights; the fit itself starts from the trace's own.
-        soft = _soften(problem, np.array(channel_inflation(problem, best.best)))
-        best = min(refined, key=lambda s: evaluate(
-            soft, s.best.cloud, derivatives=False, linear=s.best.state.linear).chi2)
-        refined.remove(best)
-        refined.insert(0, best)
-    rivals = [
-        Rival(s.best.cloud, _final(s), float(s.best.chi2 - best.best.chi2))
-        for s in _distinct(refined)[1:]
-    ]
-    rivals += [
-        Rival(s.best.cloud, _final(s), float(s.best.chi2 - found[0].best.chi2))
-        for s in found if s not in close[:3]
-    ]
-    kept = []
-    for rival in sorted(rivals, key=lambda r: r.delta_chi2):
-        apart = [abs(np.log(rival.final_radius / r)) for r in
-                 (_final(best), *(k.final_radius for k in kept))]
-        if min(apart) > _ROUGHLY:
-            kept.append(rival)
-    return best, tuple(kept)
-
-
-def coarse_model(model):
-    """Return a model with fewer classes of droplets and fewer nodes, for first looks.
-
-    Parameters
-    ----------
-    model : PulseModel
-        Of the pulse.
-
-    Returns
-    -------
-    model : PulseModel
-        Good to a few percent of the light.
-    """
-    setup, path = model.setup, model.setup.path
-    chosen = np.unique(np.append(np.arange(0, path.time.size, 2), path.time.size - 1))
-    path = replace(path, time=path.time[chosen], pressure=path.pressure[chosen],
-                   temperature=path.temperature[chosen])
-    return replace(model, setup=replace(setup, path=path, births=setup.few_births))
 
 
 def _finished(problem, best, time, more):
@@ -267,17 +198,6 @@ def refine(fit, model, time, options):
 
 
 @dataclass(frozen=True)
-class Rival:
-    """Another minimum of the misfit."""
-
-    cloud: Cloud
-    final_radius: float
-    """[m]."""
-    delta_chi2: float
-    """Misfit beyond that of the best cloud [-]."""
-
-
-@dataclass(frozen=True)
 class FitOptions:
     """What is free in a fit and where it starts."""
 
@@ -297,61 +217,6 @@ def _with(problem, bins, disturbances):
     """Return the problem with other bins and disturbances."""
     extras = tuple(stack_columns(bins.time, names) for names in disturbances)
     return replace(problem, bins=bins, extras=extras)
-
-
-def _explore(problem, clouds):
-    """Return where descents from several clouds end, ordered by misfit and prior, best first.
-
-    Where the misfit is not noise, what is known beforehand would count for nothing beside it: the
-    order of close rivals is then that with the weights which the best of them deserves.
-    """
-    found = _descend_all(problem, clouds)
-    close = [s for s in found if s.best.chi2 < _COMPARABLE * found[0].best.chi2]
-    factors = np.array(channel_inflation(problem, found[0].best))
-    if len(close) < 2 or factors.max() < _SOFT:
-        return found
-    soft = _soften(problem, factors)
-    again = [descend(soft, s.best.cloud, iterations=8, tolerance=0.1) for s in close]
-    return _distinct([*sorted(again, key=lambda s: s.best.chi2),
-                      *(s for s in found if s not in close)])
-
-
-def _soften(problem, factors):
-    """Return the problem with the variance of each channel's bins multiplied by its factor."""
-    weights = problem.bins.weights / np.sqrt(np.where(factors < _SOFT, 1.0, factors))[:, None]
-    return replace(problem, bins=replace(problem.bins, weights=weights))
-
-
-def _descend_all(problem, clouds):
-    """Return where descents from several clouds end, best first; hopeless ones are cut short."""
-    rough = sorted(
-        (descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds),
-        key=lambda s: s.best.chi2,
-    )
-    rough = [s for s in rough if _final(s) > _LEAST_RADIUS] or rough
-    limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
-    kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
-    if len(kept) == 1:
-        return _distinct(rough)
-    found = [
-        descend(problem, s.best.cloud, iterations=8, tolerance=0.1, linear=s.best.state.linear)
-        for s in kept
-    ]
-    return _distinct([*sorted(found, key=lambda s: s.best.chi2), *rough])
-
-
-def _distinct(solutions, apart=_APART):
-    """Return solutions that ended in different places, best first."""
-    kept = []
-    for solution in solutions:
-        radius = _final(solution)
-        if all(abs(np.log(radius / _final(other))) > apart for other in kept):
-            kept.append(solution)
-    return kept
-
-
-def _final(solution):
-    return max(float(solution.best.state.radius[:, -1].mean()), 1e-9)
 
 
 def full_residual(problem, evaluation, time, channels):

@@ -10,7 +10,9 @@ from scatterfit.measured_pulse.quantities import Derived, quantity
 from scatterfit.measured_pulse.record import Concentration, Quantity
 
 _DETERMINED = 0.5
-_DETERMINED_ALONE = 0.3
+# What depletes little rests on the shape of the computed growth, to be known to parts in a thousand.
+_DETERMINED_ALONE = 0.12
+_DEPLETION = 0.2
 _KERNEL = 1e-3
 _THICK = 0.05
 _SECOND_ORDER = 0.1
@@ -91,7 +93,7 @@ def _handles(prepared, cloud, posterior, second, counting):
             continue
         extra = {"gain": np.hypot(second, counting)}.get(key, 0.0)
         relative = float(np.sqrt(sigma**2 + extra**2 + _KERNEL**2))
-        if relative < _DETERMINED and abs(shift) < 2.0:
+        if relative < (_DEPLETION if key == "depletion" else _DETERMINED) and abs(shift) < 2.0:
             value = float(np.exp(cloud.number + shift))
             found[key] = Quantity(value, value * relative)
     return found
