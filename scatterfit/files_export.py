@@ -3,7 +3,7 @@
 import csv
 import json
 import os
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from datetime import UTC, datetime
 from pathlib import Path
 
@@ -86,7 +86,8 @@ def _in_place(path):
         yield part
         part.replace(path)
     finally:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
 
 
 class _Column:

@@ -19,7 +19,7 @@ class Column:
     """Whether a column ``NAME_sigma`` with the standard uncertainty stands beside it."""
 
 
-_SAME = "number of droplets by this handle alone, at the undisturbed growth state"
+_BY = "droplets per volume at the undisturbed growth state, by {} alone"
 
 COLUMNS = (
     Column("final_radius_um", "um", "radius of the median-age droplet at the last fitted sample",
@@ -36,7 +36,8 @@ COLUMNS = (
            ("droplet_temperature_K",)),
     Column("concentration_per_cm3", "cm-3", "droplets per volume at the undisturbed growth state",
            ("concentration_per_cm3",)),
-    *(Column(f"concentration_by_{handle}_per_cm3", "cm-3", _SAME, ("concentration_by", handle))
+    *(Column(f"concentration_by_{handle}_per_cm3", "cm-3", _BY.format(handle),
+             ("concentration_by", handle))
       for handle in ("gain", "transmission", "depletion")),
     Column("upper_limit_per_cm3", "cm-3", "95 percent upper limit where no cloud is seen",
            ("upper_limit_per_cm3",), has_sigma=False),

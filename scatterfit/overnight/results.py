@@ -153,6 +153,33 @@ class Results:
             return columns
         return pd.DataFrame(columns)
 
+    def sheets(self):
+        """Yield each pulse, also excluded ones, in the order in which they were recorded.
+
+        Yields
+        ------
+        row : sqlite3.Row
+            All columns of the view ``night``, ``said`` (the reasons as JSON) and ``thinned`` (trace
+            and fit with fewer points as JSON).
+        """
+        yield from self._query(
+            "SELECT night.*, json_extract(details.result, '$.reasons') AS said, details.thinned "
+            "FROM night JOIN details ON details.pulse = night.id ORDER BY mtime_ns, trace")
+
+    def provenance(self):
+        """Return what the newest result that has any says about versions and sources."""
+        row = next(self._query(
+            "SELECT json_extract(result, '$.provenance') AS found FROM pulses JOIN details "
+            "ON details.pulse = pulses.id WHERE verdict != 'failed' "
+            "ORDER BY fitted_utc DESC LIMIT 1"), None)
+        return {} if row is None else json.loads(row["found"])
+
+    def chambers(self):
+        """Return the chamber files that pulses were fitted with, as a list of mappings."""
+        return [dict(row) for row in self._query(
+            "SELECT name, sha256, text FROM chambers WHERE sha256 IN "
+            "(SELECT chamber_sha256 FROM pulses)")]
+
     def exclusions(self):
         """Return every exclusion and its withdrawal, oldest first, as a list of mappings."""
         return [dict(row) for row in self._query(
