@@ -8,6 +8,7 @@ from scatterfit.inversion.hops import Hops, find_hops, refine_hops
 from scatterfit.inversion.noise import NoiseModel, estimate_noise, running_mean
 
 _SMOOTHING = 15
+_SPIKE = 8.0
 
 
 @dataclass(frozen=True)
@@ -28,6 +29,8 @@ class ChannelData:
     """Samples left out as clipped."""
     missing: int
     """Samples left out as not finite."""
+    spikes: int = 0
+    """Samples left out because they stand alone far above or below their neighbours."""
     hops: Hops | None = None
     """Where the laser hops; the signal is then as if it had stayed dimmer."""
     raw: np.ndarray | None = None
@@ -76,12 +79,35 @@ def channel_data(column, kind, signal, window, baseline, clipped=None):
     good = finite & window
     clipped = np.zeros(signal.size, dtype=bool) if clipped is None else clipped & good
     used = good & ~clipped
+    spikes = _spikes(signal, used)
+    used = used & ~spikes
     hops = find_hops(signal, used) if kind == "transmission" else None
     data = ChannelData(
         column, kind, signal, used, np.ones(signal.size), NoiseModel(1.0, 0.0, 0.0, 0.0, 0.0),
-        int(clipped.sum()), int((~finite & window).sum()), hops, signal,
+        int(clipped.sum()), int((~finite & window).sum()), int(spikes.sum()), hops, signal,
     )
     return _weighed(data, good, baseline & good)
+
+
+def _spikes(signal, used):
+    """Return the samples that stand alone: far from the mean of their quiet neighbours [bool]."""
+    found = np.zeros(signal.size, dtype=bool)
+    index = np.flatnonzero(used)
+    if index.size < 60:
+        return found
+    values = signal[index]
+    bend = np.zeros(values.size)
+    bend[1:-1] = values[1:-1] - 0.5 * (values[:-2] + values[2:])
+    quiet = np.median(np.abs(bend)) / 0.6745
+    local = np.sqrt(running_mean(np.minimum(np.abs(bend), 6.0 * quiet) ** 2, 101))
+    size = np.abs(bend)
+    far = size > _SPIKE * np.maximum(local, 1e-300)
+    # A lone sample bends its two neighbours half as much the other way, and nobody else.
+    beside = np.maximum(np.roll(size, 2), np.roll(size, -2))
+    lone = far & (size > np.roll(size, 1)) & (size > np.roll(size, -1)) & (beside < 0.35 * size)
+    lone[:3] = lone[-3:] = False
+    found[index[lone]] = True
+    return found
 
 
 def _weighed(data, good, before):

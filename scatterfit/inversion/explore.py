@@ -10,8 +10,8 @@ from scatterfit.inversion.problem import evaluate
 from scatterfit.inversion.solve import descend
 from scatterfit.inversion.uncertainty import channel_inflation
 
-CANDIDATES = 4
-"""How many candidates of the search are followed up."""
+CANDIDATES = 30
+"""How many candidates of the search may be followed up."""
 SOFT = 1.6
 """From which inflation on a channel's weights are lowered [-]."""
 
@@ -22,7 +22,12 @@ _RIVAL = 400.0
 _HOPELESS = 4.0
 _CONTINUED = 3
 _COMPARABLE = 2.5
-_SLOW_MISFIT = 0.01
+_SLOW_MISFIT = 0.02
+_SLOW_DEPTH = 0.01
+_BATCHES = (1, 3, 6, 10, 10)
+_RIVALS = 4
+_NEAR_TEMPLATE = 2.0
+_DESCRIBED = 1.6
 _LEAST_RADIUS = 8e-8
 
 
@@ -90,60 +95,161 @@ def coarse_model(model):
 
 
 def coarse_bins(time, channels, onset):
-    """Return few bins for first looks.
+    """Return few bins for first looks, whose weights allow for a slow misfit.
 
-    Transmitted light alone is precise but has little structure: its shoulders would count for
-    nothing beside a slow misfit of one percent, so such a misfit is let pass at first.
+    A coarse model is good to a percent or two, and transmitted light alone is so precise that
+    its shoulders would count for nothing beside a slow misfit of one percent: such misfits are
+    let pass at first.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        Samples [s].
+    channels : sequence of ChannelData
+        Channels of the trace.
+    onset : float
+        About when droplets are born [s].
+
+    Returns
+    -------
+    bins : Bins
+        With lowered weights.
     """
-    bins = bin_channels(time, channels, bin_edges(time, onset, _COARSE))
-    return bins if any(data.kind == "scatter" for data in channels) else blunted(bins)
+    kinds = [data.kind for data in channels]
+    return blunted(bin_channels(time, channels, bin_edges(time, onset, _COARSE)), kinds)
 
 
-def blunted(bins):
-    """Return bins whose weights allow for a misfit of one percent of the change of light."""
-    allowed = _SLOW_MISFIT * np.ptp(bins.values, axis=1)[:, None]
-    return replace(bins, weights=bins.weights / np.sqrt(1.0 + (allowed * bins.weights) ** 2))
+def blunted(bins, kinds):
+    """Return bins whose weights allow for a misfit of a percent or two of the light.
+
+    Parameters
+    ----------
+    bins : Bins
+        Binned channels.
+    kinds : sequence of str
+        ``"scatter"`` or ``"transmission"`` of each.
+
+    Returns
+    -------
+    bins : Bins
+        The same means with lowered weights.
+    """
+    weights = []
+    alone = "scatter" not in kinds
+    for kind, values, weight in zip(kinds, bins.values, bins.weights, strict=True):
+        some = weight > 0.0
+        light = np.maximum(values - np.percentile(values[some], 2.0), 0.0) if some.any() else values
+        allowed = _SLOW_MISFIT * light
+        if kind == "transmission":
+            allowed = (_SLOW_DEPTH if alone else 0.0) * np.ptp(values[some])
+        weights.append(weight / np.sqrt(1.0 + (allowed * weight) ** 2))
+    return replace(bins, weights=np.array(weights))
 
 
-def explore(problem, clouds):
-    """Return where descents from several clouds end, ordered by misfit and prior, best first.
+def explore(problem, candidates):
+    """Return where descents from the candidates end, ordered by misfit and prior, best first.
+
+    The most likely candidate is followed first. If it describes the trace, only those whose
+    templates came near are followed too, as possible rivals; if not, the others are, more and
+    more of them, until one does or none is left.
+
+    Parameters
+    ----------
+    problem : Problem
+        Coarse model and bins.
+    candidates : sequence of Candidate
+        Best first.
+
+    Returns
+    -------
+    found : list of Solution
+        Distinct ends.
+    """
+    rough, start = [], 0
+    for size in _BATCHES:
+        batch = candidates[start:start + size]
+        if rough and _good(rough[0]):
+            near = _NEAR_TEMPLATE * candidates[0].chi2 + _RIVAL
+            batch = [c for c in candidates[start:start + _RIVALS] if c.chi2 < near]
+        rough = sorted([*rough, *_descents(problem, [c.cloud for c in batch])],
+                       key=lambda s: s.best.chi2)
+        start += size
+        if len(rough) > 1 and _good(rough[0]) or start >= len(candidates):
+            break
+    return settle(problem, rough)
+
+
+def _good(solution):
+    """Return whether a solution describes the coarse bins."""
+    residual = solution.best.residual
+    return solution.best.chi2 < _DESCRIBED * residual.size
+
+
+def _descents(problem, clouds):
+    """Return short descents from clouds; those that end in nothing to see are dropped."""
+    ends = [descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds]
+    return [s for s in ends if final_radius(s) > _LEAST_RADIUS]
+
+
+def follow(problem, clouds):
+    """Return where descents from clouds that are near the answer end, best first.
+
+    Parameters
+    ----------
+    problem : Problem
+        Coarse model and bins.
+    clouds : sequence of Cloud
+        Where to start.
+
+    Returns
+    -------
+    found : list of Solution
+        Distinct ends.
+    """
+    ends = _descents(problem, clouds)
+    return settle(problem, sorted(ends, key=lambda s: s.best.chi2))
+
+
+def settle(problem, rough):
+    """Return the ends of descents continued where they are close, best first.
 
     Where the misfit is not noise, what is known beforehand would count for nothing beside it: the
     order of close rivals is then that with the weights which the best of them deserves.
+
+    Parameters
+    ----------
+    problem : Problem
+        Coarse model and bins.
+    rough : list of Solution
+        Best first.
+
+    Returns
+    -------
+    found : list of Solution
+        Distinct ends.
     """
-    found = _descend_all(problem, clouds)
+    if not rough:
+        return []
+    limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
+    kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
+    if len(kept) == 1 and _good(kept[0]):
+        return _distinct(rough)
+    found = sorted(
+        (descend(problem, s.best.cloud, iterations=8, tolerance=0.1, linear=s.best.state.linear)
+         for s in kept), key=lambda s: s.best.chi2)
     close = [s for s in found if s.best.chi2 < _COMPARABLE * found[0].best.chi2]
     factors = np.array(channel_inflation(problem, found[0].best))
-    if len(close) < 2 or factors.max() < SOFT:
-        return found
-    soft = soften(problem, factors)
-    again = [descend(soft, s.best.cloud, iterations=8, tolerance=0.1) for s in close]
-    return _distinct([*sorted(again, key=lambda s: s.best.chi2),
-                      *(s for s in found if s not in close)])
+    if len(close) > 1 and factors.max() > SOFT:
+        soft = soften(problem, factors)
+        again = [descend(soft, s.best.cloud, iterations=8, tolerance=0.1) for s in close]
+        found = [*sorted(again, key=lambda s: s.best.chi2), *(s for s in found if s not in close)]
+    return _distinct([*found, *rough])
 
 
 def soften(problem, factors):
     """Return the problem with the variance of each channel's bins multiplied by its factor."""
     weights = problem.bins.weights / np.sqrt(np.where(factors < SOFT, 1.0, factors))[:, None]
     return replace(problem, bins=replace(problem.bins, weights=weights))
-
-
-def _descend_all(problem, clouds):
-    """Return where descents from several clouds end, best first; hopeless ones are cut short."""
-    rough = sorted(
-        (descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds),
-        key=lambda s: s.best.chi2,
-    )
-    rough = [s for s in rough if final_radius(s) > _LEAST_RADIUS] or rough
-    limit = _HOPELESS * rough[0].best.chi2 + _RIVAL
-    kept = [s for s in _distinct(rough) if s.best.chi2 < limit][:_CONTINUED]
-    if len(kept) == 1:
-        return _distinct(rough)
-    found = [
-        descend(problem, s.best.cloud, iterations=8, tolerance=0.1, linear=s.best.state.linear)
-        for s in kept
-    ]
-    return _distinct([*sorted(found, key=lambda s: s.best.chi2), *rough])
 
 
 def _distinct(solutions, apart=_APART):

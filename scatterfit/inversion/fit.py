@@ -22,6 +22,7 @@ from scatterfit.inversion.explore import (
     coarse_bins,
     coarse_model,
     explore,
+    follow,
     soften,
 )
 from scatterfit.inversion.problem import Evaluation, Problem, evaluate
@@ -30,6 +31,7 @@ from scatterfit.inversion.solve import Solution, descend, polish
 from scatterfit.inversion.uncertainty import channel_inflation
 
 _FINE = 800
+_FOLLOWED = 5
 _SOFTENINGS = 3
 _HOP_ROUNDS = 5
 _HOPS_SETTLED = 1e-3
@@ -86,11 +88,12 @@ def fit_pulse(model, time, channels, options):
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, CANDIDATES)
-    found = explore(problem, [c.cloud for c in candidates])
+    found = explore(problem, candidates)
     channels, found = _without_hops(problem, found, time, channels, options.onset)
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
-    start = fine if any(data.kind == "scatter" for data in channels) else blunted(fine)
+    kinds = [data.kind for data in channels]
+    start = fine if "scatter" in kinds else blunted(fine, kinds)
     best, others = best_of(_with(problem, start, ((),) * len(channels)), found)
     best = Solution(evaluate(_with(problem, fine, ((),) * len(channels)), best.best.cloud,
                              linear=best.best.state.linear), best.iterations, best.converged)
@@ -109,7 +112,8 @@ def fit_pulse(model, time, channels, options):
     problem, best = _softened(problem, best)
     best = polish(problem, best)
     softening = float(np.max(sharp.bins.weights / np.maximum(problem.bins.weights, 1e-300)) ** 2)
-    return _finished(problem, best, time, (channels, others, disturbances, count, softening))
+    return _finished(problem, best, time, (channels, others, disturbances,
+                                           count + sum(d.spikes for d in channels), softening))
 
 
 def _softened(problem, best):
@@ -139,7 +143,7 @@ def _without_hops(problem, found, time, channels, onset):
                     for a, b in zip(again, channels, strict=True) if a.hops is not None)
         channels = again
         problem = replace(problem, bins=coarse_bins(time, channels, onset))
-        found = explore(problem, [s.best.cloud for s in found[:CANDIDATES]])
+        found = follow(problem, [s.best.cloud for s in found[:_FOLLOWED]])
         if moved < _HOPS_SETTLED * time.size:
             break
     return channels, found

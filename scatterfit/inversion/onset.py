@@ -6,6 +6,7 @@ from scatterfit.inversion.noise import running_mean
 
 _SIGMAS = 4.0
 _WIDTH = 11
+_SHARE = 0.03
 
 
 def find_onset(bins, kinds):
@@ -32,7 +33,9 @@ def find_onset(bins, kinds):
         baseline = np.median(signal[:first])
         mean = running_mean(sign * (signal - baseline), _WIDTH)
         noise = running_mean(1.0 / weights[some], _WIDTH) / np.sqrt(_WIDTH)
-        above = mean > _SIGMAS * noise * np.sqrt(1.0 + _WIDTH / first)
+        # Hum and drift of a few percent of the light are no onset.
+        least = _SHARE * np.percentile(mean, 98.0)
+        above = mean > np.maximum(_SIGMAS * noise * np.sqrt(1.0 + _WIDTH / first), least)
         still = np.flatnonzero(~above[: int(0.95 * above.size)])
         last = still[-1] if still.size else 0
         # After the onset the light may touch the baseline again in a deep trough: half is enough.

@@ -59,7 +59,6 @@ def search(problem, delays, widest, count=6):
     axis = _axis(problem)
     if axis == "vapour":
         widest = min(_VAPOUR_SIGMAS * problem.priors["vapour"][1], 0.3)
-        count = 2 * count
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
     levels = _levels(setup)
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))

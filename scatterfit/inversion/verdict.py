@@ -8,6 +8,7 @@ SEEN = 40.0
 EXCLUDED = 13.8
 _WHITE = 1.3
 _DESCRIBED = 3.0
+_NOTHING = 3.0
 _LEFT_OVER = 0.01
 _LEFT_OVER_DEPTH = 0.05
 _SCALE_SIGMAS = 3.5
@@ -67,6 +68,23 @@ def visible(fit):
         Whether there is a cloud.
     """
     return fit.chi2_null - fit.best.chi2 > SEEN * max(1.0, fit.chi2_reduced)
+
+
+def empty(fit):
+    """Return whether the trace holds nothing but its baseline.
+
+    Parameters
+    ----------
+    fit : Fit
+        Best cloud and null.
+
+    Returns
+    -------
+    nothing : bool
+        What the baseline leaves is little more than noise.
+    """
+    count = sum(int(np.count_nonzero(weight)) for weight in fit.problem.bins.weights)
+    return fit.chi2_null < _NOTHING * count
 
 
 def describes(fit):
@@ -201,7 +219,7 @@ def sample_findings(fit):
             )))
     if fit.glitches:
         found.append(Finding("glitches", (
-            f"{fit.glitches} samples lie more than 6 noise widths from the fit and were left out"
+            f"{fit.glitches} samples stand alone far outside the noise and were left out"
         )))
     return found
 

@@ -12,6 +12,7 @@ from scatterfit.inversion.uncertainty import posterior
 from scatterfit.inversion.verdict import (
     Finding,
     describes,
+    empty,
     growth_findings,
     residual_findings,
     rivals_left,
@@ -41,6 +42,7 @@ _ANGLE_SETTLED = 2e-5
 _BASE_SPREAD = 0.003
 _LARGEST = 0.98
 _FEW = 3
+_UNSURE = 1.5
 _DISAGREE = 0.015
 _STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
 _INPUTS = {
@@ -106,6 +108,8 @@ def measure(apparatus, time, columns, *, trace="", store=None, exclude=(), prove
     options = fit_options(prepared, base)
     fit = fit_pulse(prepared.model, prepared.time, prepared.channels, options)
     if not visible(fit):
+        if not empty(fit):
+            return _puzzle(prepared, fit, gas, warnings)
         return _nothing(prepared, fit, gas, warnings)
     prepared, fit = _settle_angles(prepared, fit, base)
     return _result(prepared, fit, gas, warnings)
@@ -172,6 +176,18 @@ def _nothing(prepared, fit, gas, warnings):
     )
 
 
+def _puzzle(prepared, fit, gas, warnings):
+    """Return the result of a pulse whose light changes in a way that no cloud found explains."""
+    reason = Reason("not-described", (
+        "the light changes far beyond its noise, but no cloud was found that explains it: check "
+        "columns, angle, index and wavelength, or exclude what is not droplets (--exclude-ms)"
+    ))
+    return MeasuredPulse(
+        verdict="rejected", reasons=(reason, *warnings), channels=_views(prepared, fit),
+        chi2_reduced=fit.chi2_reduced, residual_lag1=fit.lag1, **gas,
+    )
+
+
 def _result(prepared, fit, gas, warnings):
     """Return the result of a pulse with a cloud."""
     setup, problem = prepared.setup, fit.problem
@@ -212,7 +228,13 @@ def _verdict(fit, reasons, left):
     strange = codes & {"structured-residuals", "growth-scale-off", "birth-off"}
     if not describes(fit) or ("extrema-disagree" in codes and strange):
         return "rejected"
-    return "ambiguous" if left or "extrema-disagree" in codes else "accepted"
+    count = sum(int(data.used.sum()) for data in fit.channels)
+    noisy = fit.chi2_reduced > 1.0 + 5.0 * np.sqrt(2.0 / count)
+    scatter = any(channel.kind == "scatter" for channel in fit.problem.model.channels)
+    # A lobe is only as sure as the fit that tells it from the next.
+    unsure = scatter and ((fit.chi2_reduced > _UNSURE and fit.lag1 > 0.3)
+                          or ("few-extrema" in codes and noisy and fit.lag1 > 0.05))
+    return "ambiguous" if left or unsure or "extrema-disagree" in codes else "accepted"
 
 
 def _final_radius(evaluation):
