@@ -24,7 +24,7 @@ BY = Annotated[
                              "such as an override's.")
 ]
 TOLERANCE = Annotated[
-    float | None, typer.Option("--tolerance-K", metavar="K", min=1e-6, help="Largest distance of a "
+    float | None, typer.Option("--tolerance-K", metavar="K", min=1e-3, help="Largest distance of a "
                                "pulse from the middle of its isotherm; found from the data by "
                                "default.")
 ]

@@ -179,6 +179,8 @@ def fit_curve(data, *, free_plateau=None):
         if tied is None or not tied.resolved:
             free = _try_free(data)
             return free if tied is None else tied
+        if not _off_plateau(data, tied):
+            return tied
         free = _try_free(data)
         sure = free is not None and free.resolved and _contradicts(free, data)
         return free if sure else tied
@@ -187,6 +189,12 @@ def fit_curve(data, *, free_plateau=None):
     if not (data.fraction.min() < 0.5 * top < data.fraction.max()):
         return None
     return _fitted(data, _start(data, top), prior)
+
+
+def _off_plateau(data, tied):
+    """Return whether pulses beyond the onset make another plateau worth a try."""
+    above = data.fraction[data.x > tied.centre]
+    return above.size >= 3 and abs(np.median(above[above > 0.8 * np.median(above)]) - 1.0) > 0.005
 
 
 def _try_free(data):

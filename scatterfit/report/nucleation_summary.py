@@ -144,7 +144,7 @@ def activation_text(result):
     runs = result["isotherms"]
     pulses = sum(run["pulses"] for run in runs)
     head = (f"ACTIVATION OF SEEDS  {result['source']}\n  {pulses} pulses of {result['substance']} "
-            f"in {len(runs)} run{'s' * (len(runs) != 1)}; {result['density']}")
+            f"in {len(runs)} run{'s' * (len(runs) != 1)}\n  {result['density']}")
     parts = [head, *map(_run, runs),
              _lines("Compared", map(_onsets, result["comparison"])),
              _cautions(runs), _left_out(result["left_out"])]
@@ -161,12 +161,12 @@ def _run(run):
         ("Kelvin-equivalent diameter", _quantity(run["kelvin_equivalent_diameter_nm"], "nm")),
     ]
     if run["kelvin"]:
-        ratio = format_number(run["kelvin"]["saturation_ratio"], digits=5)
-        rows.append(("Kelvin limit, wettable seed", f"S = {ratio}; onset over it "
+        ratio = format_number(run["kelvin"]["saturation_ratio"], digits=4)
+        rows.append(("Kelvin limit, wettable seed", f"S = {ratio}; onset over it: "
                      f"{_quantity(run['kelvin']['onset_over_it'])}"))
     if run["koehler"]:
-        ratio = format_number(run["koehler"]["saturation_ratio"], digits=5)
-        rows.append((f"Koehler, kappa {run['koehler']['kappa']:g}", f"S = {ratio}; onset over it "
+        ratio = format_number(run["koehler"]["saturation_ratio"], digits=4)
+        rows.append((f"Koehler, kappa {run['koehler']['kappa']:g}", f"S = {ratio}; onset over it: "
                      f"{_quantity(run['koehler']['onset_over_it'])}"))
     if run["kappa"]:
         rows.append(("kappa that would explain it", _quantity(run["kappa"])))
@@ -174,7 +174,7 @@ def _run(run):
         rows.append(("contact angle that would", _quantity(run["contact_angle_deg"], "deg")))
         rows.append(("barrier left with it", format_number(run["fletcher_factor"], digits=3)))
     return "\n".join([f"{title}, {run['pulses']} pulses",
-                      *(f"  {label:<29}{text}" for label, text in rows)])
+                      *(f"  {label:<28}{text}" for label, text in rows)])
 
 
 def _onsets(found):

@@ -1,0 +1,254 @@
+"""The commands rates and activation: tables read, JSON, figures, one-line errors."""
+
+import json
+import math
+
+import numpy as np
+import pytest
+from water_isotherms import VIISANEN_STREY_REISS, WOELK_STREY, columns
+
+from scatterfit.cli import main
+from scatterfit.errors import InvalidInputError
+from scatterfit.files_table import is_ledger, read_table
+from scatterfit.matter import substance
+from scatterfit.nucleation.isotherm import RateSettings
+from scatterfit.nucleation.rates import analyse_rates
+from scatterfit.report.nucleation_figures import rates_figure
+
+T, S, J = "nucleation_temperature_K", "nucleation_saturation_ratio", "nucleation_rate_per_cm3_s"
+ISOTHERM_KEYS = {"temperature_K", "pulses", "slope", "slope_robust", "critical_cluster",
+                 "saturation_ratio_at", "theory_log10_ratio", "outliers", "censored"}
+
+
+def run(capsys, *words):
+    """Return exit code, standard output and standard error of one command."""
+    code = main([str(word) for word in words])
+    out, err = capsys.readouterr()
+    return code, out, err
+
+
+def write(path, cells, delimiter=","):
+    rows = zip(*cells.values(), strict=True)
+    lines = [delimiter.join(cells), *(delimiter.join(map(str, row)) for row in rows)]
+    path.write_text("\n".join(lines) + "\n", encoding="utf-8")
+    return path
+
+
+@pytest.fixture(scope="module")
+def water(tmp_path_factory):
+    """Return a table of the published isotherms of water, with their campaign."""
+    cells = columns([WOELK_STREY, VIISANEN_STREY_REISS])
+    first = sum(len(pair[0].split()) for pair in WOELK_STREY.values())
+    count = len(cells[T])
+    cells["campaign"] = ["2001"] * first + ["1993"] * (count - first)
+    return write(tmp_path_factory.mktemp("tables") / "water.csv", cells)
+
+
+@pytest.fixture(scope="module")
+def seeds(tmp_path_factory):
+    """Return a table of an invented seeded run."""
+    random = np.random.default_rng(41)
+    x = np.linspace(math.log(1.1), math.log(1.35), 40)
+    part = 0.5 * np.array([math.erfc(-z / math.sqrt(2)) for z in (x - math.log(1.22)) / 0.03])
+    cells = {T: np.full(40, 268.0), S: np.exp(x), "concentration_per_cm3":
+             random.poisson(900 * part), "seed_concentration_per_cm3": np.full(40, 900.0),
+             "seed_diameter_nm": np.full(40, 14.0)}
+    return write(tmp_path_factory.mktemp("tables") / "seeds.csv", cells)
+
+
+def numbers_in(value):
+    if isinstance(value, dict):
+        value = list(value.values())
+    if isinstance(value, list):
+        for part in value:
+            yield from numbers_in(part)
+    elif isinstance(value, float):
+        yield value
+
+
+# --- rates ---------------------------------------------------------------------------------------
+
+
+@pytest.mark.published
+def test_rates_as_json(capsys, water):
+    code, out, _ = run(capsys, "rates", water, "--json", "--substance", "water")
+    assert code == 0
+    result = json.loads(out)
+    assert [one["pulses"] for one in result["isotherms"]][:3] == [45, 20, 17]
+    for isotherm in result["isotherms"]:
+        assert set(isotherm) >= ISOTHERM_KEYS
+        assert isotherm["censored"] == 0
+        (at,) = isotherm["saturation_ratio_at"]
+        assert at["rate_per_cm3_s"] == 1e7
+        for quantity in (isotherm["slope"], at["saturation_ratio"], isotherm["critical_cluster"]):
+            assert quantity["value"] > 0
+            assert quantity["sigma"] > 0
+        assert set(isotherm["theory_log10_ratio"]) == set(result["theories"])
+        shift = isotherm["slope"]["value"] - isotherm["critical_cluster"]["value"]
+        assert shift == pytest.approx(1.0)
+    assert all(map(math.isfinite, numbers_in(result)))
+    slip = next(one for one in result["isotherms"] if one["temperature_K"] == 249.75)
+    assert slip["outliers"] == ["row 71"]  # the header is row 1, the slip the 70th pulse
+
+
+def test_rates_as_text(capsys, water):
+    code, out, err = run(capsys, "rates", water, "--by", "campaign", "--methods")
+    assert code == 0
+    assert "2001: 259.86  45     33.3 ± 2.1" in out
+    assert "[outliers] row 71" in out
+    assert "Kashchiev 1982" in out
+    assert err.startswith("vapour not stated: water assumed")
+
+
+def test_convention_rates_and_tolerance(capsys, water):
+    words = ("--json", "--convention", "2", "--at-rate", "1e6", "--at-rate", "1e8",
+             "--tolerance-K", "1")
+    result = json.loads(run(capsys, "rates", water, *words)[1])
+    assert len(result["isotherms"]) < 14  # 259.86 and 259.0 K are one now
+    for isotherm in result["isotherms"]:
+        shift = isotherm["slope"]["value"] - isotherm["critical_cluster"]["value"]
+        assert shift == pytest.approx(2.0)
+        assert [at["rate_per_cm3_s"] for at in isotherm["saturation_ratio_at"]] == [1e6, 1e8]
+        assert isotherm["temperature_spread_K"] <= 2.0
+
+
+def test_two_campaigns_compared(capsys, tmp_path):
+    first = write(tmp_path / "a.csv", columns([WOELK_STREY], corrected=True))
+    second = write(tmp_path / "b.csv", columns([VIISANEN_STREY_REISS]))
+    result = json.loads(run(capsys, "rates", first, "--compare", second, "--json")[1])
+    ratios = {one["temperature_K"]: one["log10_rate_difference"] for one in result["comparison"]}
+    # The rates of 1993 as copied lie a factor of 8 to 22 below those of 2001.
+    assert set(ratios) == {259.86, 239.58}
+    for ratio in ratios.values():
+        assert -math.log10(22) - 0.1 < ratio["value"] < -math.log10(8) + 0.1
+
+
+@pytest.mark.parametrize("suffix", [".png", ".pdf", ".svg"])
+def test_rates_are_drawn(capsys, water, tmp_path, suffix):
+    path = tmp_path / f"rates{suffix}"
+    code, _, err = run(capsys, "rates", water, "--figure", path)
+    assert code == 0
+    assert f"wrote {path}" in err
+    assert path.stat().st_size > 10_000
+
+
+def test_the_figure_shows_every_pulse_every_fit_and_the_outlier(water):
+    figure = rates_figure(analyse_rates(read_table(water), RateSettings(substance("water"))))
+    above, below = figure.axes
+    drawn = [line for line in above.lines if line.get_linestyle() == "None"]
+    assert sum(len(line.get_xdata()) for line in drawn) == 341 + 3  # three outliers are ringed
+    assert sum(line.get_linestyle() == "-" for line in above.lines) == 14
+    assert sum(line.get_linestyle() == "--" for line in above.lines) == 14
+    assert above.get_xscale() == above.get_yscale() == below.get_yscale() == "log"
+    labels = {text.get_text() for text in above.get_legend().get_texts()}
+    assert {"259.9 K", "Woelk and Strey 2001", "outlier"} <= labels
+
+
+def test_ten_thousand_rows(capsys, tmp_path):
+    random = np.random.default_rng(42)
+    kelvin = np.repeat([235.0, 240.0, 245.0, 250.0], 2500) + 0.05 * random.normal(size=10_000)
+    x = random.uniform(-0.08, 0.08, 10_000)
+    ratio, rate = 12 * np.exp(x), 1e7 * np.exp(30 * x + 0.1 * random.normal(size=10_000))
+    cells = {"trace": [f"p{place}.csv" for place in range(10_000)], T: kelvin, S: ratio,
+             f"{S}_sigma": 0.001 * ratio, J: rate, f"{J}_sigma": 0.1 * rate}
+    result = json.loads(run(capsys, "rates", write(tmp_path / "big.csv", cells), "--json")[1])
+    assert [one["pulses"] for one in result["isotherms"]] == [2500] * 4
+    for isotherm in result["isotherms"]:
+        slope = isotherm["slope"]
+        assert abs(slope["value"] - 30) < 4 * slope["sigma"]
+        assert slope["sigma"] < 0.1
+
+
+# --- activation ----------------------------------------------------------------------------------
+
+
+def test_activation_as_json_and_figure(capsys, seeds, tmp_path):
+    path = tmp_path / "activation.png"
+    code, out, _ = run(capsys, "activation", seeds, "--json", "--figure", path, "--kappa", "0.3")
+    assert code == 0
+    (found,) = json.loads(out)["isotherms"]
+    assert abs(found["onset"]["value"] - 1.22) < 4 * found["onset"]["sigma"]
+    assert abs(found["width"]["value"] - 0.03) < 4 * found["width"]["sigma"]
+    assert found["koehler"]["kappa"] == 0.3
+    assert found["kelvin"]["saturation_ratio"] > found["koehler"]["saturation_ratio"]
+    assert len(found["points"]) == 40
+    assert all(map(math.isfinite, numbers_in(found)))
+    assert path.stat().st_size > 10_000
+
+
+def test_activation_as_text(capsys, seeds):
+    code, out, _ = run(capsys, "activation", seeds, "--methods")
+    assert code == 0
+    assert "onset, S at half            1.2" in out
+    assert "Petters and Kreidenweis 2007" in " ".join(out.split())
+    assert max(map(len, out.splitlines())) <= 80
+
+
+# --- tables and errors ---------------------------------------------------------------------------
+
+
+def test_a_table_with_semicolons_decimal_commas_and_a_mark(tmp_path):
+    path = tmp_path / "table.csv"
+    lines = ["\ufeff# a remark", f"{T};{S};{J};trace", "240,5;12,1;1,5e7;a,b.csv", "",
+             "240,5;12;;c", ""]
+    path.write_bytes("\r\n".join(lines).encode())
+    table = read_table(path)
+    assert table.names == ("a,b.csv", "c")
+    assert table.numbers[T].tolist() == [240.5, 240.5]
+    assert table.numbers[J][0] == 1.5e7
+    assert math.isnan(table.numbers[J][1])
+
+
+def test_columns_nobody_knows_are_kept_as_text(tmp_path):
+    cells = {T: [240, 241], S: [12, 11], J: [1e7, ""], "x.y": ["a", "b"]}
+    assert read_table(write(tmp_path / "t.tsv", cells, "\t")).texts["x.y"] == ("a", "b")
+
+
+@pytest.mark.parametrize(("text", "expected"), [
+    (f"{T},{S},{J}\n240,12,abc\n", f"row 2, column {J} = abc: must be a number"),
+    (f"{T},{S},{J}\n240,12,1e7\n240,-1,1e7\n", f"row 3, column {S} = -1: must be finite and pos"),
+    (f"{T},{S},{J}\n240,12,inf\n", f"row 2, column {J} = inf: must be finite"),
+    (f"{T},{S},{J}\n240,12\n", "row 2: 2 cells, the header has 3"),
+    (f"{T},{S},{S}\n240,12,1e7\n", f"column {S} is there twice"),
+    (f"{T},{S},verdict,{J}\n240,12,good,1e7\n", "row 2, column verdict = good: must be one of"),
+    (f"{T},{S},{J}_sigma,{J}\n240,12,-1,1e7\n", f"row 2, column {J}_sigma = -1"),
+    (f"{T},{S},nucleation_rate\n240,12,1e7\n", f"no column {J}; did you mean nucleation_rate?"),
+    ("a,b\n1,2\n", f"no column {T}; there are a, b"), ("", "no pulses"),
+    (f"{T},{S},{J}\n", "no pulses"),
+])
+def test_a_damaged_table_is_one_line_and_exit_1(capsys, tmp_path, text, expected):
+    path = tmp_path / "table.csv"
+    path.write_text(text, encoding="utf-8")
+    code, out, err = run(capsys, "rates", path, "--substance", "water")
+    assert (code, out) == (1, "")
+    assert err.count("\n") == 1
+    assert expected in err
+    assert str(path) in err
+
+
+def test_a_missing_file_is_one_line_and_exit_1(capsys, tmp_path):
+    code, out, err = run(capsys, "rates", tmp_path / "none.csv")
+    assert (code, out, err.count("\n")) == (1, "", 1)
+    assert "none.csv" in err
+
+
+def test_bytes_that_are_no_text_are_refused(tmp_path):
+    path = tmp_path / "t.csv"
+    path.write_bytes(b"a,b\n\xff\xfe,1\n")
+    with pytest.raises(InvalidInputError, match="not UTF-8"):
+        read_table(path)
+    assert not is_ledger(path)
+
+
+@pytest.mark.parametrize(("words", "expected"), [
+    (["--by", "campain"], "did you mean campaign?"), (["--substance", "watter"], "water"),
+    (["--figure", "x.bmp"], ".png"), (["--convention", "3"], "equal to 2"),
+    (["--tolerance-K", "0"], "0.001"),
+    (["--carrier", "argn"], "argon"), (["--background-per-cm3", "100"], "belong together"),
+    (["--figure", "/nowhere/at/all/x.png"], "no folder"),
+])
+def test_a_wrong_option_is_one_line_and_exit_2(capsys, water, words, expected):
+    code, out, err = run(capsys, "rates", water, *words)
+    assert (code, out) == (2, "")
+    assert err.count("\n") == 1
+    assert expected in err
