@@ -63,6 +63,40 @@ def batch(
 
 
 @app.command()
+def watch(
+    chamber: CHAMBER,
+    folder: FOLDER,
+    out: OUT,
+    page: Annotated[
+        Path | None, typer.Option("--page", metavar="FILE.html", help="Page of the night to keep "
+                                  "up to date; an open one shows news by itself.")
+    ] = None,
+    recursive: RECURSIVE = False,
+    jobs: JOBS = None,
+    poll: Annotated[
+        bool | None, typer.Option("--poll/--no-poll", help="Look at the files again and again, in "
+                                  "place of being told by the system; by default on network "
+                                  "shares.")
+    ] = None,
+    settle_s: Annotated[
+        float, typer.Option("--settle-s", metavar="S", min=0.05, help="A file that stands still "
+                            "for so long is complete [s].")
+    ] = 0.3,
+    time_limit_s: LIMIT_S = 120.0,
+    settings: SET = None,
+):
+    """Fit each trace of a folder as it is written, until Ctrl-C.
+
+    Example: scatterfit watch bench.toml night --out night.sqlite --page night.html
+    """
+    from scatterfit.cli_watch import watch_folder
+    from scatterfit.overnight.watch import Watching
+
+    plan = _plan(chamber, folder, settings, time_limit_s)
+    watch_folder(plan, out, Watching(recursive, jobs, settle_s, poll), page)
+
+
+@app.command()
 def show(
     results: RESULTS,
     trace: PULSE,

@@ -68,6 +68,10 @@ class Crew:
         window = self._window() if self._warm >= _FIRST_ALONE else 1
         return max(0, window - len(self._flying))
 
+    def wake(self):
+        """Start the workers before there is work, so that the first job need not wait."""
+        self._executor.submit(nothing)
+
     def submit(self, job):
         """Hand in one job; return whether the executor took it, or it waits to be tried alone."""
         try:

@@ -120,13 +120,15 @@ def plural(count, noun):
     return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
-def pulse_line(row):
+def pulse_line(row, reasons=()):
     """Return one line for one pulse.
 
     Parameters
     ----------
     row : mapping
         Its flat columns.
+    reasons : sequence of mapping
+        ``code`` and ``text`` of each reason; the texts are told of a pulse that failed.
 
     Returns
     -------
@@ -142,6 +144,8 @@ def pulse_line(row):
             row["concentration_per_cm3"], row["concentration_per_cm3_sigma"], "1/cm3"))
     elif row["upper_limit_per_cm3"] is not None:
         parts.append(f"number below {format_number(row['upper_limit_per_cm3'], '1/cm3', 2)}")
-    if row["reasons"]:
+    if row["verdict"] == "failed" and reasons:
+        parts.append("; ".join(reason["text"] for reason in reasons))
+    elif row["reasons"]:
         parts.append(row["reasons"].replace(";", ", "))
     return "  ".join(parts)

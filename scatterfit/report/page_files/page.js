@@ -169,7 +169,7 @@
     if (!(high > low)) { const half = Math.abs(low) * 0.01 || 1; low -= half; high += half; }
     const pad = 0.08 * (high - low);
     low -= pad; high += pad;
-    const left = 52, right = width - 18, top = 6, bottom = height - 22;
+    const left = 62, right = width - 18, top = 6, bottom = height - 22;
     const px = (v) => left + ((v - data.place_low) / (data.place_high - data.place_low || 1)) * (right - left);
     const py = (v) => bottom - ((Math.min(Math.max(scale(v), low), high) - low) / (high - low)) * (bottom - top);
     pen.font = "11px system-ui, sans-serif";
