@@ -26,8 +26,8 @@ def isotherms(temperature, tolerance=None):
 
     Returns
     -------
-    groups : list of ndarray
-        Indices of the pulses of each isotherm, the warmest first.
+    groups : list of ndarray, each of shape (m,)
+        Indices of the pulses of each isotherm, the warmest first [-].
 
     Raises
     ------
@@ -81,8 +81,8 @@ def natural_groups(values, resolution):
 
     Returns
     -------
-    groups : list of ndarray
-        Indices of the members of each group, ascending in value.
+    groups : list of ndarray, each of shape (m,)
+        Indices of the members of each group, ascending in value [-].
 
     Notes
     -----
