@@ -2,12 +2,13 @@
 
 For each temperature of the hold the vapour is set so that classical theory gives the wanted number
 of droplets in about a millisecond. All pulses share an error of the start temperature, as those of
-a bench do. Run: ``python examples/simulated_night.py FOLDER``, then
-``scatterfit batch examples/bench.toml FOLDER --out night.sqlite`` and
+a bench do. Run: ``python examples/simulated_night.py --out night``, then
+``scatterfit batch examples/bench.toml night --out night.sqlite`` and
 ``scatterfit rates night.sqlite --figure rates.png``.
 """
 
-import sys
+import argparse
+import tempfile
 from dataclasses import replace
 from math import exp, log
 from pathlib import Path
@@ -67,4 +68,7 @@ def main(folder):
 
 
 if __name__ == "__main__":
-    main(Path(sys.argv[1] if len(sys.argv) > 1 else "night"))
+    parser = argparse.ArgumentParser()
+    parser.add_argument("--out", type=Path, help="folder for the traces; a temporary one if absent")
+    chosen, _ = parser.parse_known_args()
+    main(chosen.out or Path(tempfile.mkdtemp(prefix="night-")))

@@ -75,9 +75,9 @@ def natural_groups(values, resolution):
     Parameters
     ----------
     values : array_like, shape (n,)
-        The numbers.
+        The numbers [any unit].
     resolution : float
-        Width :math:`\delta` below which a group is not resolved, in the unit of the values [-].
+        Width :math:`\delta` below which a group is not resolved [unit of the values].
 
     Returns
     -------
