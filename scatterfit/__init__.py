@@ -17,7 +17,7 @@ _PUBLIC = {
     "ScatterfitError": ("scatterfit.errors", "ScatterfitError"),
 }
 
-__all__ = ["__version__", *sorted(_PUBLIC)]
+__all__ = list(_PUBLIC)
 
 
 def __getattr__(name):

@@ -7,8 +7,10 @@ from scatterfit.forward.simulate import Scenario, simulate_pulse
 from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model
 
 
-def simulate(apparatus, *, count=1, number=5e9, duration=0.1, rate=50e3, noise=0.01, seed=1,
-             store=None, cloud=None):
+def simulate(  # noqa: PLR0913  (one argument per option of the command)
+    apparatus, *, count=1, number=5e9, duration=0.1, rate=50e3, noise=0.01, seed=1,
+    store=None, cloud=None,
+):
     """Simulate pulses of a bench.
 
     Parameters

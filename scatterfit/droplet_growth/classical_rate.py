@@ -58,7 +58,7 @@ def classical_log_rate(temperature, vapour_pressure, saturation_ratio, liquid):
     safe = np.where(supersaturated, log_ratio, 1.0)
     barrier = 16.0 * np.pi * volume**2 * tension**3 / (3.0 * thermal**3 * safe**2)
     monomers = np.maximum(np.asarray(vapour_pressure, dtype=float) / thermal, 1e-300)
-    prefactor = 0.5 * np.log(2.0 * tension / (np.pi * mass)) + np.log(volume) + 2.0 * np.log(monomers)
+    prefactor = 0.5 * np.log(2.0 * tension / (np.pi * mass)) + np.log(volume * monomers**2)
     return np.where(supersaturated, prefactor - safe - barrier, -np.inf)
 
 

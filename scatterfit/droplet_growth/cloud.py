@@ -22,6 +22,7 @@ _SMALLEST_FRACTION = 1e-9
 _MICROMETRE = 1e-6
 _BENT_FROM = 5e-8
 _LARGEST_EXPONENT = 40.0
+_TYPICAL_RATE = 4e-11
 
 
 @dataclass(frozen=True)
@@ -126,71 +127,99 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
     cloud : CloudGrowth
         The solution for all variants.
     """
-    number, scale, mass, thermal, fraction, factor, bend, creep = parameters.columns()
-    times, weights = births
-    times = np.broadcast_to(times, (number.size, weights.size))
-    length = _typical_length(properties, path, mass)
-    gas = _Gas(properties, path, fraction, factor)
-    floor = (start_radius + length[:, None, None]) ** 2
-    square, condensed, warmth = _first_guess(path, times, floor, length, start)
-    moles = (4.0 * np.pi / 3.0 / properties.molar_volume) * number
-    temperature, share = gas.state(condensed)
+    weights = births[1]
+    cloud = _Cloud(properties, path, births, parameters, start_radius)
+    square, condensed, warmth = _first_guess(path, cloud.times, cloud.floor, cloud.length, start)
+    temperature, share = cloud.gas.state(condensed)
     droplet_temperature = temperature[:, None, :] + warmth
-    accommodation = (mass[:, None, None], thermal[:, None, None])
-    place = _birth_cells(path.time, times)
-    step = np.diff(path.time)
-    along = (path.time - path.time[0]) / (path.time[-1] - path.time[0])
-    converged = False
-    for turn in range(_ROUNDS):
-        radius = np.sqrt(square) - length[:, None, None]
-        surroundings = (temperature[:, None, :], path.pressure, share[:, None, :])
-        rate, droplet_temperature, by_vapour, surface_slope = growth_rate(
-            properties, radius, surroundings, accommodation, droplet_temperature,
-            steps=3 if turn == 0 and start is None else 1,
+    steps, converged = (3 if start is None else 1), False
+    for _ in range(_ROUNDS):
+        radius = np.sqrt(square) - cloud.length
+        rate, droplet_temperature, slope = cloud.rate(
+            radius, (temperature, share), droplet_temperature, steps
         )
-        factor_now = (2.0 * scale[:, None, None]) * (radius + length[:, None, None])
-        rate *= factor_now
-        if creep.any():
-            rate *= np.exp(creep[:, None, None] * along)
-        if bend.any():
-            rate *= np.exp(bend[:, None, None] * np.log(np.maximum(radius, _BENT_FROM) / _MICROMETRE))
-        since = _since_birth(rate, step, place)
+        since = _since_birth(rate, cloud.step, cloud.place)
         grown = np.maximum(since, 0.0)
-        new_square = floor + grown
-        new_radius = np.sqrt(new_square) - length[:, None, None]
-        cubes = np.einsum("c,vcm->vm", weights, new_radius**3) - start_radius**3
-        error = moles[:, None] * cubes - condensed
-        slope = -factor_now * by_vapour * (
-            1.0 + surface_slope * gas.warming(temperature)[:, None, :]
-        )
         alive = grown > 0.0
-        gain = (1.5 * moles[:, None, None]) * new_radius**2 / (new_radius + length[:, None, None])
-        gain = np.einsum("c,vcm->vm", weights, np.where(alive, gain, 0.0))
-        response = np.einsum("c,vcm->vm", weights, slope * np.where(alive, 1.0, 0.0))
-        inner = _coupled(error, gain, response, step)
-        change = error + gain * inner
-        condensed = np.clip(condensed + change, 0.0, 0.999 * fraction[:, None])
-        new_square = np.maximum(new_square + np.where(alive, inner[:, None, :], 0.0), floor)
+        inner, condensed = cloud.taken(cloud.floor + grown, alive, slope, condensed)
+        moving = np.where(alive, inner[:, None, :], 0.0)
+        new_square = np.maximum(cloud.floor + grown + moving, cloud.floor)
         moved = np.max(np.abs(new_square - square) / new_square)
-        square = new_square
-        temperature, share = gas.state(condensed)
+        square, steps = new_square, 1
+        temperature, share = cloud.gas.state(condensed)
         if moved < _TOLERANCE:
             converged = True
             break
     return CloudGrowth(
-        time=path.time, square=np.where(alive, square, floor + since), square_rate=rate,
-        length=length,
-        start_radius=start_radius, birth_times=times, weights=weights, condensed=condensed,
-        temperature=temperature, vapour_fraction=share, droplet_temperature=droplet_temperature,
-        pressure=path.pressure, droplets_per_mole=number, converged=converged,
+        time=path.time, square=np.where(alive, square, cloud.floor + since), square_rate=rate,
+        length=cloud.length[:, 0, 0], start_radius=start_radius, birth_times=cloud.times,
+        weights=weights, condensed=condensed, temperature=temperature, vapour_fraction=share,
+        droplet_temperature=droplet_temperature, pressure=path.pressure,
+        droplets_per_mole=cloud.number, converged=converged,
     )
+
+
+class _Cloud:
+    """What stays the same from round to round, with arrays shaped to broadcast."""
+
+    def __init__(self, properties, path, births, parameters, start_radius):
+        number, scale, mass, thermal, fraction, factor, bend, creep = parameters.columns()
+        times, self.weights = births
+        self.properties, self.path, self.number = properties, path, number
+        self.start_radius = start_radius
+        self.times = np.broadcast_to(times, (number.size, self.weights.size))
+        self.length = _typical_length(properties, path, mass)[:, None, None]
+        self.floor = (start_radius + self.length) ** 2
+        self.moles = (4.0 * np.pi / 3.0 / properties.molar_volume) * number[:, None]
+        self.accommodation = (mass[:, None, None], thermal[:, None, None])
+        self.scale, self.bend = scale[:, None, None], bend[:, None, None]
+        along = (path.time - path.time[0]) / (path.time[-1] - path.time[0])
+        self.creep = np.exp(creep[:, None, None] * along) if creep.any() else 1.0
+        self.fraction = fraction[:, None]
+        self.gas = _Gas(properties, path, fraction, factor)
+        self.place = _birth_cells(path.time, self.times)
+        self.step = np.diff(path.time)
+
+    def rate(self, radius, gas, droplet_temperature, steps):
+        """Return d(r + l)^2/dt, the droplets' temperature, and d(rate)/dq at fixed radius."""
+        temperature, share = gas
+        speed, droplet_temperature, by_vapour, surface_slope = growth_rate(
+            self.properties, radius,
+            (temperature[:, None, :], self.path.pressure, share[:, None, :]),
+            self.accommodation, droplet_temperature, steps=steps,
+        )
+        factor = (2.0 * self.scale) * (radius + self.length)
+        slope = -factor * by_vapour * (
+            1.0 + surface_slope * self.gas.warming(temperature)[:, None, :]
+        )
+        rate = speed * factor * self.creep
+        if self.bend.any():
+            bent = np.log(np.maximum(radius, _BENT_FROM) / _MICROMETRE)
+            rate *= np.exp(self.bend * bent)
+        return rate, droplet_temperature, slope
+
+    def taken(self, square, alive, slope, condensed):
+        """Return by how much less is grown as vapour is taken, (v, m), and what has condensed.
+
+        Newton's method for the integral equation of what has condensed.
+        """
+        root = np.sqrt(square)
+        radius = root - self.length
+        cubes = np.einsum("c,vcm->vm", self.weights, radius**3) - self.start_radius**3
+        error = self.moles * cubes - condensed
+        gain = np.where(alive, radius**2 / root, 0.0)
+        gain = 1.5 * self.moles * np.einsum("c,vcm->vm", self.weights, gain)
+        response = np.einsum("c,vcm->vm", self.weights, np.where(alive, slope, 0.0))
+        inner = _coupled(error, gain, response, self.step)
+        condensed = np.clip(condensed + error + gain * inner, 0.0, 0.999 * self.fraction)
+        return inner, condensed
 
 
 def _first_guess(path, times, floor, length, start):
     """Return where to start: (r + l)^2, what has condensed, and how warm the droplets are."""
     shape = (*times.shape, path.time.size)
     if start is None:
-        square = floor + 4e-11 * np.maximum(path.time - times[:, :, None], 0.0)
+        square = floor + _TYPICAL_RATE * np.maximum(path.time - times[:, :, None], 0.0)
         return square, np.zeros((shape[0], shape[2])), np.zeros(shape)
     warmth = start.droplet_temperature[0] - start.temperature[0]
     radius = start.radius[0]
@@ -198,7 +227,7 @@ def _first_guess(path, times, floor, length, start):
         # Other classes: each takes the nearest in time of birth.
         nearest = np.argmin(np.abs(start.birth_times[0] - times[0][:, None]), axis=1)
         radius, warmth = radius[nearest], warmth[nearest]
-    square = np.maximum((radius + length[:, None, None]) ** 2, floor)
+    square = np.maximum((radius + length) ** 2, floor)
     condensed = np.broadcast_to(start.condensed[0], (shape[0], shape[2])).copy()
     return square, condensed, np.broadcast_to(warmth, shape)
 

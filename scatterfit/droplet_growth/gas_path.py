@@ -93,7 +93,8 @@ def choose_nodes(time, pressure, births, count=150):
     middle = 0.5 * (fine[1:] + fine[:-1])
     moving = np.abs(np.diff(np.interp(fine, time, pressure))) / np.diff(fine) / np.mean(pressure)
     age = np.maximum(middle - first, 0.02 * (last - first) + 1e-5)
-    density = 1.0 / (end - start) + 0.35 / age + np.minimum(15.0 * moving, 3.0 / max(last - first, 1e-4))
+    moving = np.minimum(15.0 * moving, 3.0 / max(last - first, 1e-4))
+    density = 1.0 / (end - start) + 0.35 / age + moving
     density = density + np.where(middle < last, 0.5 / max(last - first, 1e-6), 0.0)
     cumulative = np.concatenate([[0.0], np.cumsum(density * np.diff(fine))])
     return np.interp(np.linspace(0.0, cumulative[-1], count), cumulative, fine)

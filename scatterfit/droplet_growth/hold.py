@@ -51,12 +51,13 @@ def settle_hold(time, recorded, smoothed, log_rate, noise):
     x = x / max(np.abs(x).max(), 1e-300)
     y = recorded[part]
     settled = smoothed.copy()
-    for degree in (0, 1, 2):
+    best = np.full(x.size, y[good].mean())
+    for degree in (1, 2):
         if good.sum() < degree + _FEWEST:
             break
         fit = np.polyfit(x[good], y[good], degree)
         curve = np.polyval(fit, x)
-        if degree == 0 or _gain(y[good], np.polyval(fit, x[good]), best[good], noise):
+        if _gain(y[good], np.polyval(fit, x[good]), best[good], noise):
             best = curve
     settled[part] = best
     return settled

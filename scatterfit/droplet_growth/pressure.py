@@ -41,9 +41,7 @@ def smooth(values):
     count = values.size
     noise = _noise(values)
     widest = max(count // _WIDEST_FRACTION, 1)
-    padded = np.concatenate(
-        [2.0 * values[0] - values[widest:0:-1], values, 2.0 * values[-1] - values[-2 : -widest - 2 : -1]]
-    )
+    padded = np.pad(values, widest, mode="reflect", reflect_type="odd")
     total = np.concatenate([[0.0], np.cumsum(padded - values[0])])
     centre = np.arange(count) + widest
     low = np.full(count, -np.inf)

@@ -8,6 +8,11 @@ from scatterfit import matter
 from scatterfit.apparatus.records import Apparatus
 from scatterfit.constants import GAS_CONSTANT, STANDARD_PRESSURE
 from scatterfit.droplet_growth.births import Births, births_at_once, births_from_rate
+from scatterfit.droplet_growth.cautions import (
+    freezing_warnings,
+    pressure_warnings,
+    range_warnings,
+)
 from scatterfit.droplet_growth.classical_rate import classical_log_rate
 from scatterfit.droplet_growth.gas_path import GasPath, adiabatic_temperature, choose_nodes
 from scatterfit.droplet_growth.hold import settle_hold
@@ -18,7 +23,6 @@ _FEW = 3
 _FEW_FINE = 9
 _BIRTH_RADIUS = 3e-9
 _SEED_RADIUS = 0.2e-6
-_CRITICAL_FREEZING = 235.0
 
 
 @dataclass(frozen=True)
@@ -139,7 +143,7 @@ def _measured(apparatus, substance, gas, record, classes):
     smoothed = undo_lag(time, smoothed, gauge.time_constant)
     plateau = _plateau(smoothed, noise)
     start = apparatus.chamber.pressure or plateau
-    warnings = _pressure_warnings(apparatus, start, plateau, noise)
+    warnings = pressure_warnings(apparatus, start, plateau, noise)
     fraction = vapour_mole_fraction(apparatus, substance, start)
     settled = float(np.median(smoothed[time > 0.5 * (time[0] + time[-1])]))
     lowest = min(float(smoothed.min()), settled)
@@ -147,24 +151,17 @@ def _measured(apparatus, substance, gas, record, classes):
     reference, heat_capacity = _expanded(
         gas, substance, fraction, apparatus.chamber.temperature, (start, settled)
     )
-    def gas_at(values):
-        warmth = adiabatic_temperature(
-            values, apparatus.chamber.temperature, start, heat_capacity
-        )
-        ratio = fraction * values / substance.saturation_pressure(warmth)
-        rate = classical_log_rate(warmth, fraction * values, ratio, _liquid(substance)(warmth))
-        return warmth, ratio, rate
-
-    temperature, saturation, log_rate = gas_at(smoothed)
+    bench = (apparatus, substance, gas)
+    before = (fraction, start, heat_capacity)
+    temperature, saturation, log_rate = _states(bench, before, smoothed)
     if apparatus.seed is None and not gauge.time_constant and np.isfinite(log_rate).any():
         smoothed = settle_hold(time, recorded, smoothed, log_rate, noise)
-        temperature, saturation, log_rate = gas_at(smoothed)
-    threshold, ramp = None, None
+        temperature, saturation, log_rate = _states(bench, before, smoothed)
+    more = {"clock_known": True, "warnings": warnings}
     if apparatus.seed is not None:
-        threshold = _threshold(apparatus, substance, reference)
-        births = few = births_at_threshold(time, saturation, threshold)
-        ramp = (time, saturation)
-        hold = None
+        more["threshold"] = _threshold(apparatus, substance, reference)
+        more["ramp"] = (time, saturation)
+        births = few = births_at_threshold(time, saturation, more["threshold"])
         peak = int(np.argmax(saturation))
     else:
         births = births_from_rate(time, log_rate, classes)
@@ -177,15 +174,22 @@ def _measured(apparatus, substance, gas, record, classes):
     first, last = births.times[0], births.times[-1]
     nodes = choose_nodes(time, smoothed, (first, max(last, first + 1e-5)))
     at_nodes = np.interp(nodes, time, smoothed)
-    path = GasPath(
-        nodes, at_nodes,
-        adiabatic_temperature(at_nodes, apparatus.chamber.temperature, start, heat_capacity),
-        settled, reference,
+    path = GasPath(nodes, at_nodes, _states(bench, before, at_nodes)[0], settled, reference)
+    return _finish(bench, path, (births, few, hold), (fraction, start, low), **more)
+
+
+def _states(bench, before, pressure):
+    """Return temperature [K], saturation ratio and ln of the classical rate at each pressure."""
+    apparatus, substance, _ = bench
+    fraction, start, heat_capacity = before
+    temperature = adiabatic_temperature(
+        pressure, apparatus.chamber.temperature, start, heat_capacity
     )
-    return _finish(
-        (apparatus, substance, gas), path, (births, few), hold, fraction, start, low,
-        clock_known=True, threshold=threshold, ramp=ramp, warnings=warnings,
+    ratio = fraction * pressure / substance.saturation_pressure(temperature)
+    rate = classical_log_rate(
+        temperature, fraction * pressure, ratio, _liquid(substance)(temperature)
     )
+    return temperature, ratio, rate
 
 
 def _stated(apparatus, substance, gas, duration, classes):
@@ -223,14 +227,15 @@ def _stated(apparatus, substance, gas, duration, classes):
         hold = Hold(pulse.temperature, pulse.pressure, saturation, pulse.hold, float(log_rate))
     low = min(growth.temperature, pulse.temperature if held else growth.temperature)
     return _finish(
-        (apparatus, substance, gas), path, (births, few), hold, fraction, start, low,
+        (apparatus, substance, gas), path, (births, few, hold), (fraction, start, low),
         clock_known=False,
     )
 
 
-def _finish(bench, path, births, hold, fraction, start, low, **more):
+def _finish(bench, path, births, before, **more):
     """Return the setup, with properties over the range that the pulse can reach."""
     apparatus, substance, gas = bench
+    hold, (fraction, start, low) = births[2], before
     reference = path.reference_temperature
     high = max(apparatus.chamber.temperature, reference) + 15.0
     saturated = float(substance.saturation_pressure(reference))
@@ -241,18 +246,14 @@ def _finish(bench, path, births, hold, fraction, start, low, **more):
     if apparatus.seed is not None:
         radius = 0.5 * apparatus.seed.diameter if apparatus.seed.diameter else _SEED_RADIUS
     warnings = more.pop("warnings", ())
-    if hold is not None and hold.temperature < _CRITICAL_FREEZING and substance.name == "water":
-        warnings += ((
-            "may-freeze",
-            f"the hold is at {hold.temperature:.1f} K: below about 235 K water droplets may "
-            "freeze; radius and number assume liquid droplets",
-        ),)
+    warnings += freezing_warnings(substance, hold.temperature if hold is not None else reference)
     if apparatus.vapour.saturation_ratio is not None:
         start_temperature = apparatus.chamber.temperature
         latent = float(substance.latent_heat(start_temperature))
         more["vapour_by_temperature"] = latent / (GAS_CONSTANT * start_temperature)
+    warnings += range_warnings(substance, gas, (low, droplet))
     return GrowthSetup(
-        apparatus, substance, gas, properties, path, *births, hold, fraction, start,
+        apparatus, substance, gas, properties, path, *births, fraction, start,
         growth_ratio, radius, droplet, warnings=warnings, **more,
     )
 
@@ -287,24 +288,6 @@ def _plateau(smoothed, noise):
     near = np.abs(smoothed - first) < max(4.0 * noise, 1e-3 * first)
     end = int(np.argmin(near)) if not near.all() else smoothed.size
     return float(np.mean(smoothed[: max(end, 5)]))
-
-
-def _pressure_warnings(apparatus, stated, measured, noise):
-    """Return a reason where the stated and the measured start pressure disagree."""
-    if apparatus.chamber.pressure is None:
-        return ()
-    sigma = np.hypot(
-        apparatus.sigmas.get("chamber.pressure_kPa", 0.0),
-        apparatus.sigmas.get("pressure.offset_kPa", 0.0),
-    )
-    allowed = 3.0 * max(sigma, 3e-4 * stated, 0.1 * noise)
-    if abs(stated - measured) <= allowed:
-        return ()
-    return ((
-        "pressure-disagrees",
-        f"chamber.pressure_kPa is {stated / 1e3:.3f} kPa but the trace starts at "
-        f"{measured / 1e3:.3f} kPa: check pressure.offset_kPa or the stated value",
-    ),)
 
 
 def _liquid(substance):

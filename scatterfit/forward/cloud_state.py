@@ -122,8 +122,7 @@ def _classes(linear, cloud, clock, place, names, births=None):
 
 
 def _unresolved(growth, births, clock):
-    """Return how many of the first samples have radii spread by birth beyond what a few classes
-    resolve."""
+    """Return how many of the first samples have radii that the few classes do not resolve."""
     middle = growth.weights.size // 2
     length = growth.length[0]
     floor = (growth.start_radius + length) ** 2

@@ -82,7 +82,8 @@ def per_mole(setup, log_number):
         Droplets per mole [1/mol].
     """
     path = setup.path
-    return np.exp(log_number) * (GAS_CONSTANT * path.reference_temperature) / path.reference_pressure
+    volume = GAS_CONSTANT * path.reference_temperature / path.reference_pressure
+    return np.exp(log_number) * volume
 
 
 def _parameters(setup, cloud, names):

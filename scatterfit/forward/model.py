@@ -90,8 +90,8 @@ def channel_signals(model, cloud, time, names=(), linear=None, near=None):
         name: np.concatenate([part[1][name] for part in parts], axis=1) for name in parts[0][1]
     }
     signals = [
-        _one_channel(model, i, channel, state, mean, mean_by, time, names)
-        for i, channel in enumerate(model.channels)
+        _one_channel(model, i, (state, mean, mean_by), time, names)
+        for i in range(len(model.channels))
     ]
     return signals, replace(state, table=table)
 
@@ -116,8 +116,10 @@ def _cross_sections(model, cloud, table, segment, names):
     return mean, mean_by
 
 
-def _one_channel(model, position, channel, state, mean, mean_by, time, names):
+def _one_channel(model, position, cloud_light, time, names):
     """Return one channel's signal."""
+    state, mean, mean_by = cloud_light
+    channel = model.channels[position]
     density = state.number_density
     scatter = channel.kind == "scatter"
     row = model.extinction_row if scatter else channel.row

@@ -9,8 +9,8 @@ from scatterfit.droplet_growth.classical_rate import classical_log_rate
 from scatterfit.droplet_growth.gas_path import adiabatic_temperature
 from scatterfit.droplet_growth.setup import growth_setup, vapour_mole_fraction
 from scatterfit.errors import InvalidInputError
-from scatterfit.forward.light import spread_table
 from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.light import spread_table
 from scatterfit.forward.model import channel_signals
 
 _CLASSES = 16

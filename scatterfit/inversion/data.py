@@ -176,7 +176,7 @@ def bin_edges(time, start, most):
     Returns
     -------
     edges : ndarray, shape (m,)
-        Index of the first sample of each bin, increasing, first is 0.
+        Index of the first sample of each bin, increasing, first is 0 [-].
 
     Examples
     --------
@@ -205,7 +205,7 @@ def bin_channels(time, channels, edges):
     channels : sequence of ChannelData
         Channels of the trace.
     edges : ndarray, shape (m,)
-        First sample of each bin.
+        First sample of each bin [-].
 
     Returns
     -------

@@ -43,7 +43,22 @@ class Rival:
 
 
 def best_of(problem, found):
-    """Return the best cloud in the finer bins, and its rivals."""
+    """Return the best cloud in the finer bins, and its rivals.
+
+    Parameters
+    ----------
+    problem : Problem
+        With the fine bins.
+    found : list of Solution
+        Ends of the descents in the coarse bins, best first.
+
+    Returns
+    -------
+    best : Solution
+        In the fine bins.
+    rivals : tuple of Rival
+        The others, best first.
+    """
     close = [found[0], *(s for s in found[1:] if s.best.chi2 - found[0].best.chi2 < _RIVAL)]
     refined = sorted(
         (descend(problem, s.best.cloud, iterations=10, tolerance=0.05) for s in close[:3]),
@@ -174,7 +189,7 @@ def explore(problem, candidates):
         rough = sorted([*rough, *_descents(problem, [c.cloud for c in batch])],
                        key=lambda s: s.best.chi2)
         start += size
-        if len(rough) > 1 and _good(rough[0]) or start >= len(candidates):
+        if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
     return settle(problem, rough)
 
@@ -247,7 +262,20 @@ def settle(problem, rough):
 
 
 def soften(problem, factors):
-    """Return the problem with the variance of each channel's bins multiplied by its factor."""
+    """Return the problem with the variance of each channel's bins multiplied by its factor.
+
+    Parameters
+    ----------
+    problem : Problem
+        What is fitted.
+    factors : ndarray, shape (channels,)
+        From :func:`channel_inflation`; those next to one are left [-].
+
+    Returns
+    -------
+    problem : Problem
+        With lower weights.
+    """
     weights = problem.bins.weights / np.sqrt(np.where(factors < SOFT, 1.0, factors))[:, None]
     return replace(problem, bins=replace(problem.bins, weights=weights))
 
@@ -263,4 +291,16 @@ def _distinct(solutions, apart=_APART):
 
 
 def final_radius(solution):
+    """Return the mean radius of the classes at the last sample.
+
+    Parameters
+    ----------
+    solution : Solution
+        End of a descent.
+
+    Returns
+    -------
+    radius : float
+        At least 1 nm [m].
+    """
     return max(float(solution.best.state.radius[:, -1].mean()), 1e-9)

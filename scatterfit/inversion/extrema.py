@@ -136,7 +136,8 @@ def find_shoulders(time, values, weights, start):
         after = slope[index:index + 12 * half].max()
         low = slope[index]
         if -0.3 * min(before, after) < low < _STILL * min(before, after):
-            found.append(Turn(float(time[index]), "shoulder", float(min(before, after) / sigma[index])))
+            height = float(min(before, after) / sigma[index])
+            found.append(Turn(float(time[index]), "shoulder", height))
     return found
 
 

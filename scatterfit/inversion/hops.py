@@ -68,7 +68,8 @@ def find_hops(signal, used):
     height = _typical(np.abs(rise[places]))
     like = places[np.abs(np.abs(rise[places]) - height) < _SPREAD * height]
     up = int((rise[like] > 0).sum())
-    if like.size < max(_FEWEST, 0.5 * places.size) or min(up, like.size - up) < _BALANCE * like.size:
+    lopsided = min(up, like.size - up) < _BALANCE * like.size
+    if like.size < max(_FEWEST, 0.5 * places.size) or lopsided:
         return None
     return _spread_out(signal.size, index, height, _follow(rise, like), like)
 

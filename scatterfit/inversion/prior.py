@@ -2,8 +2,8 @@
 
 import numpy as np
 
-from scatterfit.droplet_growth.single_droplet import growth_rate
 from scatterfit import matter
+from scatterfit.droplet_growth.single_droplet import growth_rate
 
 _TEMPERATURE = 0.3
 _FRACTION = 0.01
@@ -83,8 +83,8 @@ def depletion_sigma(setup):
     """Return the relative standard uncertainty of how strongly droplets deplete the vapour.
 
     What a droplet takes is known by the density of the liquid; what is left to take, the vapour
-    beyond saturation, carries the uncertainty of the vapour pressure. One and a half percent stands for the
-    closures: constant heat capacity, one molar volume (common practice, no source).
+    beyond saturation, carries the uncertainty of the vapour pressure. One and a half percent
+    stands for the closures: constant heat capacity, one molar volume (common practice, no source).
 
     Parameters
     ----------

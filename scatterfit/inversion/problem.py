@@ -1,4 +1,4 @@
-"""Misfit of one pulse: residuals with the linear parameters projected out, and their derivatives."""
+"""Misfit of one pulse: residuals with the linear parameters projected out, and derivatives."""
 
 from dataclasses import dataclass, field, replace
 
@@ -139,11 +139,10 @@ def shifted(cloud, names, values):
     changes, angles = {}, list(cloud.angles)
     for name, value in zip(names, values, strict=True):
         kind, _, index = name.partition(":")
-        value = float(value)
         if kind == "angle":
-            angles[int(index)] = value
+            angles[int(index)] = float(value)
         else:
-            changes[kind] = value
+            changes[kind] = float(value)
     return replace(cloud, angles=tuple(angles), **changes)
 
 
@@ -155,16 +154,16 @@ def linear_columns(channel, signal, extra):
     channel : Channel
         The channel.
     signal : ndarray, shape (m,)
-        Its shape from the model.
+        Its shape from the model [V or -].
     extra : ndarray, shape (k, m)
         Drift and hum [-].
 
     Returns
     -------
     columns : ndarray, shape (q, m)
-        Columns to be fitted.
+        Columns to be fitted [V or -].
     fixed : ndarray, shape (m,)
-        The part without a free factor.
+        The part without a free factor [V].
     """
     ones = np.ones_like(signal)
     if channel.kind == "transmission":

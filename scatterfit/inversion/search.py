@@ -8,8 +8,8 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
-from scatterfit.forward.light import spread_table
 from scatterfit.forward.growth_model import Cloud, per_mole
+from scatterfit.forward.light import spread_table
 
 _NODES = 70
 _STICKING = (0.0, -1.2)

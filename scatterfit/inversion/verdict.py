@@ -203,9 +203,10 @@ def sample_findings(fit):
             )))
         if data.hops is not None:
             found.append(Finding("mode-hops", (
-                f"the laser of {data.column} hops between modes {100 * np.expm1(data.hops.height):.1f} "
-                "percent apart; its brighter state was scaled to the other. A power monitor "
-                "([reference]) or a stabilised laser would remove it"
+                f"the laser of {data.column} hops between modes "
+                f"{100 * np.expm1(data.hops.height):.1f} percent apart; its brighter state was "
+                "scaled to the other. A power monitor ([reference]) or a stabilised laser would "
+                "remove it"
             )))
         hums = [name for name in names if name.startswith("hum")]
         if hums:

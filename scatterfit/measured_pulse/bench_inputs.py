@@ -5,8 +5,6 @@ import numpy as np
 from scatterfit.forward.model import channel_signals
 from scatterfit.inversion.prior import depletion_sigma
 
-
-
 _CREEP = 0.02
 """Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
 
@@ -108,7 +106,7 @@ def _signal_inputs(prepared, problem, best, index_shift):
             if sigma and channel.path:
                 parts[i] = signals[i].by["number_extinction"]
                 found.append(("transmission.path_mm", sigma / channel.path, parts))
-    found += _baselines(model, problem, signals, best)
+    found += _baselines(model, problem, best)
     sigma = apparatus.sigmas.get("chamber.path_mm", 0.0)
     if sigma and apparatus.chamber.path:
         parts = [s.by["number_extinction"] if c.kind == "scatter" else none
@@ -124,7 +122,7 @@ def _signal_inputs(prepared, problem, best, index_shift):
     return found
 
 
-def _baselines(model, problem, signals, best):
+def _baselines(model, problem, best):
     """Return slow drifts too small to be found, of each detector whose gain is known."""
     time, none = problem.bins.time, np.zeros_like(problem.bins.time)
     place = 2.0 * (time - time[0]) / (time[-1] - time[0]) - 1.0

@@ -4,8 +4,6 @@ from dataclasses import replace
 
 import numpy as np
 
-from scatterfit.forward.light import spread_table
-from scatterfit.inversion.extrema import find_shoulders, find_turns, match_turns
 from scatterfit.inversion.fit import fit_pulse, refine
 from scatterfit.inversion.problem import value_of
 from scatterfit.inversion.uncertainty import posterior
@@ -19,16 +17,17 @@ from scatterfit.inversion.verdict import (
     sample_findings,
     visible,
 )
+from scatterfit.measured_pulse import conditions
 from scatterfit.measured_pulse import quantities as q
 from scatterfit.measured_pulse.bench_inputs import bench_inputs
+from scatterfit.measured_pulse.extrema import extrema_findings, matched_extrema
 from scatterfit.measured_pulse.limit import upper_limit
-from scatterfit.measured_pulse.number import number_results
+from scatterfit.measured_pulse.number import final_depth, number_results
 from scatterfit.measured_pulse.prepare import optical_columns, prepare, reangled
 from scatterfit.measured_pulse.record import (
     Alternative,
     BudgetLine,
     ChannelView,
-    Extremum,
     Learnt,
     MeasuredPulse,
     Quantity,
@@ -41,19 +40,21 @@ _RATE_FLOOR = 2e-3
 _ANGLE_SETTLED = 2e-5
 _BASE_SPREAD = 0.003
 _LARGEST = 0.98
-_FEW = 3
 _UNSURE = 1.5
 _DISAGREE = 0.015
 _STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
 _INPUTS = {
     "scale": "computed growth rate", "bend": "shape of the growth law",
-    "creep": "creep of the gas during growth", "depletion": "computed depletion", "accommodation": "vapour.mass_accommodation",
+    "creep": "creep of the gas during growth", "depletion": "computed depletion",
+    "accommodation": "vapour.mass_accommodation",
     "delay": "clock of the births", "temperature": "chamber.temperature_K",
     "vapour": "vapour", "threshold": "threshold of the seeds",
 }
 
 
-def measure(apparatus, time, columns, *, trace="", store=None, exclude=(), provenance=None):
+def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a source of its own)
+    apparatus, time, columns, *, trace="", store=None, exclude=(), provenance=None
+):
     """Return what one pulse says.
 
     Parameters
@@ -89,12 +90,12 @@ def measure(apparatus, time, columns, *, trace="", store=None, exclude=(), prove
         return MeasuredPulse(trace, "rejected", flat, provenance=provenance)
     prepared = prepare(apparatus, time, columns, store, exclude)
     given = apparatus.vapour.refractive_index is not None
-    provenance["properties"] = q.property_sources(prepared.setup, given)
+    provenance["properties"] = conditions.property_sources(prepared.setup, given)
     provenance["refractive_index"] = prepared.index
-    temperature, saturation = q.gas_quantities(prepared.setup)
+    temperature, saturation = conditions.gas_quantities(prepared.setup)
     gas = {
         "growth_temperature": temperature, "growth_saturation_ratio": saturation,
-        "nucleation": q.nucleation_conditions(prepared.setup, None),
+        "nucleation": conditions.nucleation_conditions(prepared.setup, None),
         "provenance": provenance, "trace": trace,
     }
     warnings = tuple(Reason(*w) for w in prepared.setup.warnings)
@@ -152,8 +153,8 @@ def _views(prepared, fit):
     angles = {d.column: f"scattered light, {np.degrees(d.angle):g}\N{DEGREE SIGN}"
               for d in prepared.setup.apparatus.detectors}
     return tuple(
-        ChannelView(d.column, angles.get(d.column, "transmitted light"), prepared.time, d.signal, fit.model[i],
-                    fit.residual[i], d.used)
+        ChannelView(d.column, angles.get(d.column, "transmitted light"), prepared.time,
+                    d.signal, fit.model[i], fit.residual[i], d.used)
         for i, d in enumerate(fit.channels)
     )
 
@@ -204,17 +205,18 @@ def _result(prepared, fit, gas, warnings):
     rates, more = _rates(setup, fit, after, reference)
     budget += more
     scale = q.exponential(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
-    turns = _matched(prepared, fit, curve)
+    turns = matched_extrema(prepared, fit, curve)
     left = rivals_left(fit, after.inflation * fit.softening, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)
     reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
     verdict = _verdict(fit, reasons, left)
-    gas = {**gas, "nucleation": q.nucleation_conditions(setup, number.concentration)}
+    gas = {**gas, "nucleation": conditions.nucleation_conditions(setup, number.concentration)}
     return MeasuredPulse(
         verdict=verdict, reasons=(*reasons, *warnings), final_radius=final,
         final_time=float(problem.bins.time[-1]), growth_scale=scale,
         concentration=number.concentration, concentration_by=number.by_handle,
-        birth_time=q.birth_time(setup, fit.best.cloud, after), optical_depth=_depth(prepared, fit),
+        birth_time=q.birth_time(setup, fit.best.cloud, after),
+        optical_depth=final_depth(prepared, fit),
         curve=curve, extrema=tuple(e for e in turns if e.radius > 0.0),
         alternatives=_alternatives(fit, number), chi2_reduced=fit.chi2_reduced,
         residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
@@ -271,7 +273,7 @@ def _learnt(fit, after):
     found = []
     for i, name in enumerate(after.names):
         prior = after.priors.get(name)
-        if prior is None or name not in _STATED and not name.startswith(("angle:", *_STATED)):
+        if prior is None or (name not in _STATED and not name.startswith(("angle:", *_STATED))):
             continue
         shift = float(after.step[i])
         if name in fit.problem.names:
@@ -302,30 +304,6 @@ def _budget(name, factor, noise, parts, floor, fit):
     return sorted(lines, key=lambda line: -line.share)
 
 
-def _matched(prepared, fit, curve):
-    """Return the extrema of all channels and the kernel's that they match."""
-    table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
-    log_radius = table.log_radius
-    start = prepared.setup.births.median + fit.best.cloud.delay
-    found = []
-
-    def radius_at(time):
-        return float(np.interp(time, curve.time, curve.radius))
-
-    for i, channel in enumerate(fit.problem.model.channels):
-        bins, row = fit.problem.bins, table.values[channel.row]
-        samples = bins.time, bins.values[i], bins.weights[i] * np.sqrt(fit.softening)
-        turns = find_turns(*samples, start) if channel.kind == "scatter" else []
-        for turn, radius in match_turns(turns, radius_at, log_radius, row):
-            found.append(Extremum(turn.time, radius or 0.0, turn.kind, channel.column))
-        shoulders = find_shoulders(*samples, start)
-        for turn, radius in match_turns(shoulders, radius_at, log_radius, row):
-            if radius:
-                found.append(Extremum(turn.time, radius, turn.kind, channel.column))
-    found.sort(key=lambda extremum: extremum.time)
-    return found
-
-
 def _findings(prepared, fit, scale, turns, left):
     """Return the reasons of a pulse with a cloud."""
     setup = prepared.setup
@@ -338,7 +316,7 @@ def _findings(prepared, fit, scale, turns, left):
             f"a final radius of {radii} um cannot be excluded: a second detector at another "
             "angle, a longer record, or a better known temperature would settle it"
         )))
-    found += _extrema_findings(turns, fit)
+    found += extrema_findings(turns, fit)
     table_end = np.exp(fit.problem.model.light.start) * np.exp(
         fit.problem.model.light.step * (fit.problem.model.light.count - 1))
     largest = min(setup.apparatus.analysis.max_radius, table_end)
@@ -348,25 +326,6 @@ def _findings(prepared, fit, scale, turns, left):
             "analysis.max_radius_um"
         )))
     return found
-
-
-def _extrema_findings(turns, fit):
-    """Return what the peaks and troughs say about the fit."""
-    if not any(c.kind == "scatter" for c in fit.problem.model.channels):
-        return []
-    turns = [turn for turn in turns if turn.kind != "shoulder"]
-    matched = sum(1 for turn in turns if turn.radius > 0.0)
-    if len(turns) >= _FEW and matched < 0.6 * len(turns):
-        return [Finding("extrema-disagree", (
-            f"of {len(turns)} peaks and troughs found without the fit only {matched} lie where "
-            "the fitted radius puts them: look at the figure before using this radius"
-        ))]
-    if len(turns) < _FEW:
-        return [Finding("few-extrema", (
-            f"{len(turns)} peaks and troughs stand out: the radius rests on the computed growth "
-            "rate as much as on the light; a longer record or a larger angle would show more"
-        ))]
-    return []
 
 
 def _alternatives(fit, number):
@@ -379,19 +338,3 @@ def _alternatives(fit, number):
         )
         for rival in fit.rivals
     )
-
-
-def _depth(prepared, fit):
-    """Return the optical depth at the last sample, over the transmission's path or the chamber's."""
-    apparatus = prepared.setup.apparatus
-    path = apparatus.transmission.path if apparatus.transmission else apparatus.chamber.path
-    if not path:
-        return None
-    state = fit.best.state
-    table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
-    place = (np.log(np.maximum(state.radius[:, -1], 1e-9)) - table.start) / table.step
-    row = table.values[fit.problem.model.extinction_row]
-    mean = float(state.growth.weights @ np.interp(place, np.arange(row.size), row))
-    return float(state.number_density[-1] * mean * path)
-
-

@@ -10,7 +10,7 @@ from scatterfit.measured_pulse.quantities import Derived, quantity
 from scatterfit.measured_pulse.record import Concentration, Quantity
 
 _DETERMINED = 0.5
-# What depletes little rests on the shape of the computed growth, to be known to parts in a thousand.
+# Little depletion rests on the shape of the computed growth, to parts in a thousand.
 _DETERMINED_ALONE = 0.12
 _DEPLETION = 0.2
 _KERNEL = 1e-3
@@ -172,3 +172,30 @@ def _tension(handles):
         f"({sigmas:.1f} sigma); likely {' or '.join(words[key] for key in suspects)}"
     )
     return [Finding("handles-disagree", text)]
+
+
+def final_depth(prepared, fit):
+    """Return the optical depth at the last sample.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The pulse.
+    fit : Fit
+        Best cloud.
+
+    Returns
+    -------
+    depth : float or None
+        Over the transmission's path, else the chamber's; ``None`` without either [-].
+    """
+    apparatus = prepared.setup.apparatus
+    path = apparatus.transmission.path if apparatus.transmission else apparatus.chamber.path
+    if not path:
+        return None
+    state = fit.best.state
+    table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
+    place = (np.log(np.maximum(state.radius[:, -1], 1e-9)) - table.start) / table.step
+    row = table.values[fit.problem.model.extinction_row]
+    mean = float(state.growth.weights @ np.interp(place, np.arange(row.size), row))
+    return float(state.number_density[-1] * mean * path)

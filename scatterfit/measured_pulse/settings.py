@@ -95,7 +95,6 @@ def _path_sigma(apparatus):
 
 def _visible_after(prepared):
     """Return how long a droplet grows before it is surely seen [s]."""
-
     growth = grow(prepared.setup, Cloud(number=np.log(1e6)))
     radius = growth.radius[0].mean(axis=0)
     if radius[-1] < _VISIBLE:
