@@ -223,7 +223,8 @@ def test_onset_is_where_light_leaves_its_baseline(kind):
         bins = bin_channels(time, [data], bin_edges(time, 0.0, 600))
         onsets.append(find_onset(bins, [kind]))
     assert np.all(np.array(onsets) > 0.4)
-    assert np.all(np.array(onsets) < 0.5)
+    # A few percent of the light count as none: hum and drift are no onset.
+    assert np.all(np.array(onsets) < 0.52)
 
 
 def test_glitches_are_what_lies_far_outside():

@@ -53,7 +53,7 @@ def births_from_rate(time, log_rate, classes=6, fine=24):
     Returns
     -------
     births : Births
-        Classes in order of birth.
+        Classes in order of birth; one, at the last time, where the rate is zero throughout.
 
     References
     ----------
@@ -72,6 +72,8 @@ def births_from_rate(time, log_rate, classes=6, fine=24):
     1.0
     """
     top = np.max(log_rate)
+    if not np.isfinite(top):
+        return births_at_once(time[-1])
     kept = np.flatnonzero(log_rate > top + np.log(_NEGLIGIBLE))
     first, last = max(kept[0] - 1, 0), min(kept[-1] + 1, time.size - 1)
     dense = np.linspace(time[first], time[last], _POINTS)

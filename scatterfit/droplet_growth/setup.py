@@ -251,7 +251,7 @@ def _finish(bench, path, births, before, **more):
         start_temperature = apparatus.chamber.temperature
         latent = float(substance.latent_heat(start_temperature))
         more["vapour_by_temperature"] = latent / (GAS_CONSTANT * start_temperature)
-    warnings += range_warnings(substance, gas, (low, droplet))
+    warnings += range_warnings(substance, gas, (reference, droplet))
     return GrowthSetup(
         apparatus, substance, gas, properties, path, *births, fraction, start,
         growth_ratio, radius, droplet, warnings=warnings, **more,

@@ -330,7 +330,7 @@ def _distinct(candidates, count, apart=0.02):
     chosen = []
     for candidate in candidates:
         same = any(
-            abs(np.log(candidate.final_radius / other.final_radius)) < apart
+            abs(np.log(max(candidate.final_radius, 1e-10) / max(other.final_radius, 1e-10))) < apart
             and abs(candidate.cloud.delay - other.cloud.delay) < 1e-9
             and candidate.cloud.accommodation == other.cloud.accommodation
             for other in chosen

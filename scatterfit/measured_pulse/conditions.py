@@ -110,16 +110,17 @@ def nucleation_conditions(setup, concentration):
         return NucleationConditions()
     sigmas = _hold_sigmas(setup)
     _, by = state_derivatives(setup, hold.temperature, hold.pressure)
-    coupling = by["temperature"] if setup.clock_known else by["temperature"] - (
-        setup.vapour_by_temperature)
-    # One pressure enters temperature and saturation ratio: adiabatic where there is a gauge.
+    steep = by["temperature"] - setup.vapour_by_temperature
+    # A stated hold knows nothing of the chamber's temperature; behind a gauge both follow from it.
+    coupling = by["temperature"] if setup.clock_known else steep
     cooling = GAS_CONSTANT / setup.properties.heat_capacity if setup.clock_known else 0.0
-    steep = by["temperature"]
+    # Vapour stated otherwise than by its mole fraction is diluted by the start pressure.
+    diluted = 0.0 if setup.apparatus.vapour.mole_fraction is not None else 1.0
     warm = np.array([
         sigmas["temperature"], -cooling * sigmas["start"], cooling * sigmas["pressure"],
     ])
     wet = np.array([
-        coupling * sigmas["temperature"], -cooling * steep * sigmas["start"],
+        coupling * sigmas["temperature"], -(cooling * steep + diluted) * sigmas["start"],
         (1.0 + cooling * steep) * sigmas["pressure"], sigmas["vapour"], sigmas["saturation"],
     ])
     sigma_t = hold.temperature * float(np.hypot.reduce(warm))

@@ -37,6 +37,7 @@ from scatterfit.measured_pulse.settings import fit_options
 
 _RADIUS_FLOOR = 3e-4
 _RATE_FLOOR = 2e-3
+_SCALE_FLOOR = 5e-3
 _ANGLE_SETTLED = 2e-5
 _BASE_SPREAD = 0.003
 _LARGEST = 0.98
@@ -205,6 +206,7 @@ def _result(prepared, fit, gas, warnings):
     rates, more = _rates(setup, fit, after, reference)
     budget += more
     scale = q.exponential(q.growth_scale(setup, fit.best.cloud, reference), after)[0]
+    scale = Quantity(scale.value, float(np.hypot(scale.sigma, _SCALE_FLOOR * scale.value)))
     turns = matched_extrema(prepared, fit, curve)
     left = rivals_left(fit, after.inflation * fit.softening, _final_radius(fit.best))
     findings = _findings(prepared, fit, scale, turns, left)

@@ -21,6 +21,7 @@ _THRESHOLD = 0.02
 _UNKNOWN_THRESHOLD = 0.06
 _WIDEST_SIGMAS = 4.0
 _WIDEST = 0.6
+_LEAST_WIDE = 0.35
 _VISIBLE = 0.6e-6
 _ONSET_BINS = 700
 _AGE_AT_ONSET = 0.12
@@ -68,7 +69,8 @@ def fit_options(prepared, angle_base):
         names.append("threshold")
         known = apparatus.seed.diameter is not None
         priors["threshold"] = (0.0, _THRESHOLD if known else _UNKNOWN_THRESHOLD)
-    widest = min(_WIDEST_SIGMAS * growth_scale_sigma(setup), _WIDEST)
+    # A bench whose temperature or vapour is wrong should get its radius, and be told.
+    widest = float(np.clip(_WIDEST_SIGMAS * growth_scale_sigma(setup), _LEAST_WIDE, _WIDEST))
     if setup.clock_known:
         priors["delay"] = (0.0, _CLOCK)
         return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest,
