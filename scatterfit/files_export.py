@@ -215,7 +215,7 @@ def _write_time(file, columns):
                                     fillvalue=np.nan)
     variable.attrs.update({
         "standard_name": "time", "long_name": recorded.meaning, "calendar": "standard",
-        "units": "seconds since 1970-01-01 00:00:00",
+        "units": "seconds since 1970-01-01 00:00:00", "units_metadata": "leap_seconds: none",
     })
 
 
