@@ -35,12 +35,16 @@ class Crew:
         Returns a ``concurrent.futures.Executor``; called again after a worker has died.
     window : callable
         Returns how many jobs may be handed in at a time, about twice the number of workers.
+    patience : float, optional
+        Time after which a job that was handed in is given up [s], for an executor whose workers
+        do not end themselves; forever by default.
     """
 
-    def __init__(self, plan, make_executor, window):
+    def __init__(self, plan, make_executor, window, *, patience=None):
         self._plan = plan
         self._make = make_executor
         self._window = window
+        self._patience = patience
         self._work = partial(measure, plan)
         self._executor = make_executor()
         self._finished = SimpleQueue()
@@ -106,6 +110,7 @@ class Crew:
             suspect = self._suspects.popleft()
             self._alone = suspect if self.submit(suspect) else None
         outcomes = [made for future in self._done(timeout) for made in self._taken(future)]
+        outcomes += self._given_up()
         if self._is_broken:
             wait(list(self._flying), timeout=_DRAIN_SECONDS)
             outcomes += [made for future in list(self._flying) for made in self._taken(future)]
@@ -113,6 +118,17 @@ class Crew:
         good = sum(outcome.row["verdict"] != "failed" for outcome in outcomes)
         self._warm += len(outcomes) + _FIRST_ALONE * good
         return outcomes
+
+    def _given_up(self):
+        """Yield the outcomes of jobs that have been out for too long, the oldest first."""
+        while self._patience is not None and self._flying:
+            future, (job, begun) = next(iter(self._flying.items()))
+            seconds = time.monotonic() - begun
+            if future.done() or seconds < self._patience:
+                return
+            future.cancel()
+            del self._flying[future]
+            yield lost(self._plan, job, seconds)
 
     def _taken(self, future):
         """Yield the outcome of a future that is done, unless its job is to be tried alone."""
