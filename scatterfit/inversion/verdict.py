@@ -84,7 +84,8 @@ def empty(fit):
         What the baseline leaves is little more than noise.
     """
     count = sum(int(np.count_nonzero(weight)) for weight in fit.problem.bins.weights)
-    return fit.chi2_null < _NOTHING * count
+    # As it was before noisier channels were weighted less.
+    return fit.chi2_null * fit.softening < _NOTHING * count
 
 
 def describes(fit):
