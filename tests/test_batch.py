@@ -1,6 +1,7 @@
 """A night's batch: one row a trace whatever happens, nothing twice, nothing lost."""
 
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -29,7 +30,7 @@ from scatterfit.overnight.ledger import Ledger
 from scatterfit.overnight.ledger_file import LedgerError
 from scatterfit.overnight.pool import LocalPool
 from scatterfit.overnight.results import open_results
-from scatterfit.overnight.work import measure
+from scatterfit.overnight.work import REASONS, measure
 
 TESTS = Path(__file__).resolve().parent
 
@@ -557,3 +558,9 @@ def mutated(content, rng):
         for _ in range(20):
             content[int(rng.integers(len(content)))] = rng.choice(marks)
     return bytes(content)
+
+
+def test_every_reason_of_a_night_is_explained():
+    text = (TESTS.parent / "docs" / "night.md").read_text(encoding="utf-8")
+    explained = re.findall(r"^\| `([a-z-]+)` \|", text, re.MULTILINE)
+    assert set(explained) == set(REASONS)

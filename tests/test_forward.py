@@ -297,6 +297,27 @@ def test_depletion_alone_changes_growth_and_not_the_light_of_each_droplet(model)
         assert np.abs(found.by["depletion"][late] - expected).max() < 0.03 * np.abs(expected).max()
 
 
+def test_a_thinner_cloud_is_dimmer_and_more_transparent(model):
+    """At fixed radius d ln V = d ln n (1 - depth) for a detector, -depth d ln n for the beam."""
+    setup = model.setup
+    linear = linear_growth(setup, CLOUD, ("temperature",))
+    radius_by = {"temperature": 0.0 * linear.log_radius_by["temperature"]}
+    held = replace(linear, log_radius_by=radius_by,
+                   log_density_by={"temperature": np.full(setup.path.time.size, -1.0)})
+    channels = tuple(replace(c, path=8.0, time_constant=0.0) for c in model.channels)
+    long = replace(model, channels=channels)
+    signals, _ = channel_signals(long, CLOUD, TIME, ("temperature",), held)
+    beam = signals[2].shape
+    depth = -np.log(beam)
+    assert depth.max() > 0.5
+    assert signals[2].by["temperature"] == pytest.approx(beam * depth, abs=1e-9)
+    extinction, density = average(model, CLOUD, 2)
+    depth = density * extinction * 8.0
+    late = TIME > 12e-3
+    expected = -signals[0].shape * (1.0 - depth)
+    assert signals[0].by["temperature"][late] == pytest.approx(expected[late], rel=5e-3)
+
+
 def test_a_turned_detector_against_tables_made_at_that_angle(optics, model):
     setup, kernel, relative = optics
     shift = 4e-4

@@ -179,7 +179,7 @@ def test_activation_as_json_and_figure(capsys, seeds, tmp_path):
 def test_activation_as_text(capsys, seeds):
     code, out, _ = run(capsys, "activation", seeds, "--methods")
     assert code == 0
-    assert "onset, S at half            1.2" in out
+    assert "onset, S at half             1.2" in out
     assert "Petters and Kreidenweis 2007" in " ".join(out.split())
     assert max(map(len, out.splitlines())) <= 80
 
@@ -252,3 +252,41 @@ def test_a_wrong_option_is_one_line_and_exit_2(capsys, water, words, expected):
     assert (code, out) == (2, "")
     assert err.count("\n") == 1
     assert expected in err
+
+
+HEAD = f"{T},{S},{J}"
+
+
+@pytest.mark.parametrize("text", [
+    f"{HEAD}\n240,12,1e7\n", f"{HEAD}\n240,12,1e7\n240,12.5,4e7\n",
+    f"{HEAD}\n240,12,1e7\n240,12,4e7\n240,12,2e7\n", f"{HEAD}\n240,,\n",
+    f"{HEAD},verdict,upper_limit_per_cm3\n240,12,,rejected,5\n240,12.5,,rejected,5\n",
+    f"{HEAD},nucleation_rate_upper_limit_per_cm3_s\n240,12,,5e5\n240,12.5,0,4e5\n",
+    f"{HEAD},{J}_sigma\n240,12,1e7,0\n240,12.5,4e7,0\n240,13,1.6e8,0\n",
+])
+def test_little_data_gives_nulls_and_a_figure_but_no_error(capsys, tmp_path, text):
+    path, figure = tmp_path / "few.csv", tmp_path / "few.png"
+    path.write_text(text, encoding="utf-8")
+    code, out, _ = run(capsys, "rates", path, "--json", "--figure", figure, "--hold-series")
+    assert code == 0
+    for isotherm in json.loads(out)["isotherms"]:
+        assert set(isotherm) >= ISOTHERM_KEYS
+        assert len(isotherm["saturation_ratio_at"]) == 1
+        assert len(isotherm["theory_log10_ratio"]) == 5
+    assert figure.exists()
+    assert run(capsys, "rates", path)[0] == 0
+
+
+def test_an_odd_activation_is_no_error_and_names_the_odd_pulse(capsys, tmp_path):
+    path = tmp_path / "odd.csv"
+    ratio = np.linspace(1.05, 1.35, 16)
+    part = 1 / (1 + np.exp(-(ratio - 1.2) / 0.01))
+    number = np.where(np.arange(16) == 14, 0.0, np.round(1000 * part))
+    write(path, {T: np.full(16, 270.0), S: ratio, "concentration_per_cm3": number,
+                 "seed_concentration_per_cm3": np.full(16, 1000.0),
+                 "concentration_per_cm3_sigma": np.sqrt(number)})
+    code, out, _ = run(capsys, "activation", path, "--json", "--figure", tmp_path / "odd.png")
+    assert code == 0
+    (found,) = json.loads(out)["isotherms"]
+    assert found["outliers"] == ["row 16"]
+    assert abs(found["onset"]["value"] - 1.2) < 0.01

@@ -19,6 +19,7 @@ _COARSE = 260
 _APART = 4e-3
 _ROUGHLY = 0.012
 _RIVAL = 400.0
+_CLOSE = 80.0
 _HOPELESS = 4.0
 _CONTINUED = 3
 _COMPARABLE = 2.5
@@ -59,7 +60,7 @@ def best_of(problem, found):
     rivals : tuple of Rival
         The others, best first.
     """
-    close = [found[0], *(s for s in found[1:] if s.best.chi2 - found[0].best.chi2 < _RIVAL)]
+    close = [found[0], *(s for s in found[1:] if s.best.chi2 - found[0].best.chi2 < _CLOSE)]
     refined = sorted(
         (descend(problem, s.best.cloud, iterations=10, tolerance=0.05) for s in close[:3]),
         key=lambda s: s.best.chi2,

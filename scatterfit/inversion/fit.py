@@ -107,13 +107,19 @@ def fit_pulse(model, time, channels, options):
         channels = tuple(without(d, g) for d, g in zip(channels, glitchy, strict=True))
         fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
-        best = descend(problem, best.best.cloud, iterations=6, tolerance=0.05)
+        best = _again(problem, best)
     sharp = problem
     problem, best = _softened(problem, best)
     best = polish(problem, best)
     softening = float(np.max(sharp.bins.weights / np.maximum(problem.bins.weights, 1e-300)) ** 2)
     return _finished(problem, best, time, (channels, others, disturbances,
                                            count + sum(d.spikes for d in channels), softening))
+
+
+def _again(problem, best):
+    """Return the best cloud of a problem that differs little from the one solved."""
+    return descend(problem, best.best.cloud, iterations=10, tolerance=0.05,
+                   linear=best.best.state.linear)
 
 
 def _softened(problem, best):
@@ -127,7 +133,7 @@ def _softened(problem, best):
         if factors.max() < SOFT:
             break
         problem = soften(problem, factors)
-        best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
+        best = _again(problem, best)
     return problem, best
 
 
@@ -159,7 +165,7 @@ def _undisturbed(problem, fine, best):
             break
         disturbances = again
         problem = _with(problem, fine, disturbances)
-        best = descend(problem, best.best.cloud, iterations=10, tolerance=0.05)
+        best = _again(problem, best)
     return problem, best, disturbances
 
 

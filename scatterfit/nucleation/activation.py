@@ -10,6 +10,7 @@ from scatterfit.matter import Gas, Substance
 from scatterfit.nucleation.activation_fit import Curve, Fractions, fit_curve, wilson_interval
 from scatterfit.nucleation.estimate import Estimate
 from scatterfit.nucleation.grouping import isotherms
+from scatterfit.nucleation.line import outliers
 from scatterfit.nucleation.quantiles import student_quantile
 from scatterfit.nucleation.select import errors_of
 from scatterfit.nucleation.table import (
@@ -117,6 +118,15 @@ class Run:
     """Contact angle that would [rad]."""
     fletcher: float | None = None
     """Part of the homogeneous barrier that is left with it [-]."""
+
+    @property
+    def outliers(self):
+        """Names of the pulses too far from the curve to be chance; they are kept in the fit."""
+        if self.curve is None or self.curve.score is None:
+            return ()
+        score = self.curve.score
+        usual = max(1.0, 1.4826 * float(np.median(np.abs(score))))
+        return tuple(self.pulses.names[place] for place in np.flatnonzero(outliers(score / usual)))
 
     def intervals(self):
         """Return the 68 percent interval of each fraction, shape (n,) each [-]."""

@@ -61,6 +61,8 @@ class Curve:
     resolved: bool
     """Whether pulses lie on the slope; else the width is not determined."""
     plateau_free: bool
+    score: np.ndarray | None = None
+    """Distance of each pulse from the curve in its standard deviations, shape (n,) [-]."""
 
     def at(self, x):
         """Return the fraction at ln S, shape of x [-]."""
@@ -264,15 +266,25 @@ def _variance(data, values, noise):
 
 def _scored(data, values, prior, noise, steps):
     """Return the values at which the weighted scores vanish, by Gauss-Newton steps."""
+    low, high = _bounds(data)
     for _ in range(steps):
         step = np.linalg.lstsq(*_equations(data, values, prior, noise), rcond=None)[0]
         if prior == 0:
             step[2] = 0.0
         size = max(abs(step[0]) / math.exp(values[1]), abs(step[1]) / 0.7, 1.0)
         values = values + step / size
+        values = np.clip(values, low, high)
         if np.all(np.abs(step) <= 1e-10 * (1e-3 + np.abs(values))):
             break
     return values
+
+
+def _bounds(data):
+    """Return the lowest and the highest centre, ln width and plateau that pulses could tell."""
+    span = max(float(np.ptp(data.x)), 1e-9)
+    top = max(2.0 * float(data.fraction.max()), 2.0)
+    low = [data.x.min() - 5.0 * span, math.log(1e-4 * span), 1e-3]
+    return np.array(low), np.array([data.x.max() + 5.0 * span, math.log(20.0 * span), top])
 
 
 def _equations(data, values, prior, noise):
@@ -343,7 +355,8 @@ def _curve(data, values, prior, noise):
     resolved = int(np.sum((part > np.maximum(0.02, half)) & (part < 0.98))) >= 2
     by_scatter = data.sigma is not None or not data.counted or noise.proportional > 0
     curve = Curve(float(values[0]), math.exp(values[1]), float(values[2]), covariance, noise,
-                  freedom if by_scatter else np.inf, resolved, math.isinf(prior))
+                  freedom if by_scatter else np.inf, resolved, math.isinf(prior),
+                  right[: data.x.size])
     return curve if resolved else _unresolved(data, curve)
 
 
@@ -371,4 +384,4 @@ def _unresolved(data, curve):
     covariance = np.diag([(high - low) ** 2 / 12.0, np.nan, curve.covariance[2, 2]])
     width = max(0.25 * (high - low), 1e-9)
     return Curve(0.5 * (low + high), width, curve.plateau, covariance, curve.noise, np.inf,
-                 resolved=False, plateau_free=curve.plateau_free)
+                 resolved=False, plateau_free=curve.plateau_free, score=curve.score)

@@ -133,6 +133,7 @@ def _run(run, settings):
         "fletcher_factor": run.fletcher,
         "noise": None if run.curve is None or data.sigma is not None else
         {"counting": run.curve.noise.counting, "proportional": run.curve.noise.proportional},
+        "outliers": list(run.outliers),
         "points": _points(run),
         "reasons": [{"code": code, "text": text} for code, text in activation_reasons(run)],
     }
@@ -212,6 +213,9 @@ def activation_reasons(run):
     if not curve.resolved:
         found.append(("width-unresolved", "no pulse lies on the slope: the onset is between two "
                       "pulses, the width is not determined; finer steps of S would do"))
+    if run.outliers:
+        names = ", ".join(run.outliers[:5]) + ", ..." * (len(run.outliers) > 5)
+        found.append(("outliers", f"{names}: too far from the curve to be chance; kept in the fit"))
     if curve.plateau_free and abs(curve.plateau - 1.0) > 0.02:
         found.append(("plateau", f"the fraction levels off at {curve.plateau:.3g}, not at one: the "
                       "number's scale and the seeds disagree, or not all seeds take part"))

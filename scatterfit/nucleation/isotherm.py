@@ -116,7 +116,8 @@ def analyse_isotherm(pulses, settings, by=None):
     every = seen if seen.names else pulses
     temperature = _mean(every.temperature)
     if not seen.names:
-        return Isotherm(by, temperature, pulses, None)
+        nothing = tuple((rate, None) for rate in settings.rates)
+        return Isotherm(by, temperature, pulses, None, ratio_at=nothing)
     reference = reference_theory(settings.substance)
     correction = (reference.log_rate(temperature, seen.ratio)
                   - reference.log_rate(seen.temperature, seen.ratio))

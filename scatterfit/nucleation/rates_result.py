@@ -84,7 +84,8 @@ def _isotherm(isotherm, lost, settings):
             {"rate_per_cm3_s": from_si(rate, "per_cm3"), "saturation_ratio": quantity(ratio)}
             for rate, ratio in isotherm.ratio_at
         ],
-        "theory_log10_ratio": {name: _ratio(ratio) for name, ratio in isotherm.theory.items()},
+        "theory_log10_ratio": {theory.name: _ratio(isotherm.theory.get(theory.name))
+                               for theory in theories(settings.substance)},
         "outliers": list(isotherm.outliers),
         "scatter_ln_rate": scatter,
         "chi2_reduced": chi2,
@@ -99,7 +100,7 @@ def _isotherm(isotherm, lost, settings):
 
 
 def _ratio(ratio):
-    found = quantity(ratio.estimate)
+    found = None if ratio is None else quantity(ratio.estimate)
     if found is None:
         return None
     return {**found, "scatter": _plain(ratio.scatter), "in_range": ratio.in_range}

@@ -42,7 +42,8 @@ def _rates_head(result):
     pulses = sum(isotherm["pulses"] for isotherm in result["isotherms"])
     censored = sum(isotherm["censored"] for isotherm in result["isotherms"])
     count = len(result["isotherms"])
-    text = f"{pulses} pulses of {result['substance']} in {count} isotherm{'s' * (count != 1)}"
+    text = (f"{pulses} pulse{'s' * (pulses != 1)} of {result['substance']} in {count} "
+            f"isotherm{'s' * (count != 1)}")
     if censored:
         text += f", and {censored} without a cloud as upper limits"
     return f"NUCLEATION RATES  {result['source']}\n  {text}"
@@ -143,7 +144,8 @@ def activation_text(result):
     """
     runs = result["isotherms"]
     pulses = sum(run["pulses"] for run in runs)
-    head = (f"ACTIVATION OF SEEDS  {result['source']}\n  {pulses} pulses of {result['substance']} "
+    head = (f"ACTIVATION OF SEEDS  {result['source']}\n  {pulses} pulse{'s' * (pulses != 1)} of "
+            f"{result['substance']} "
             f"in {len(runs)} run{'s' * (len(runs) != 1)}\n  {result['density']}")
     parts = [head, *map(_run, runs),
              _lines("Compared", map(_onsets, result["comparison"])),
@@ -173,8 +175,9 @@ def _run(run):
     if run["contact_angle_deg"]:
         rows.append(("contact angle that would", _quantity(run["contact_angle_deg"], "deg")))
         rows.append(("barrier left with it", format_number(run["fletcher_factor"], digits=3)))
-    return "\n".join([f"{title}, {run['pulses']} pulses",
-                      *(f"  {label:<28}{text}" for label, text in rows)])
+    count = run["pulses"]
+    return "\n".join([f"{title}, {count} pulse{'s' * (count != 1)}",
+                      *(f"  {label:<29}{text}" for label, text in rows)])
 
 
 def _onsets(found):
