@@ -103,8 +103,9 @@ def _classes(linear, cloud, clock, place, names, births=None):
     square = hermite(square, rate, index, t, width)
     slope = _straight(rate, index, t) if "delay" in names else None
     if births is not None:
-        shift = times - births.times
-        times = births.fine_times + float(np.mean(shift))
+        span = times[-1] - times[0]
+        longer = span / (births.times[-1] - births.times[0]) if span > 0.0 else 1.0
+        times = times[0] + longer * (births.fine_times - births.times[0])
         weights, square = births.fine_weights, births.carry @ square
         carry = None if carry is None else births.carry @ carry
         slope = None if slope is None else births.carry @ slope

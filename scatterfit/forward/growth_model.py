@@ -12,7 +12,7 @@ from scatterfit.droplet_growth.setup import with_threshold
 STEPS = {
     "number": 0.02, "scale": 0.01, "accommodation": 0.05, "temperature": 3e-4,
     "vapour": 2e-3, "threshold": 2e-3, "bend": 5e-3,
-    "creep": 5e-3,
+    "creep": 5e-3, "stretch": 0.02,
 }
 
 
@@ -40,6 +40,8 @@ class Cloud:
     """Exponent of a further factor (r / 1 um)^bend on the growth rate [-]."""
     creep: float = 0.0
     """ln of a further factor on the growth rate at the end, growing evenly with time [-]."""
+    stretch: float = 0.0
+    """ln of the duration of births over the setup's; they end when the setup says."""
     depletion: float = 0.0
     """ln of the droplets that share the vapour over those that shine: error in the depletion."""
     angles: tuple[float, ...] = ()
@@ -199,7 +201,13 @@ def _parabola(nodes, points):
 def _birth_times(setup, cloud, names):
     """Return the births of each variant, shape (v, c) or (c,) [s]."""
     if setup.threshold is None:
-        return setup.births.times
+        stretch = np.full(len(names) + 1, cloud.stretch)
+        if "stretch" in names:
+            stretch[1 + list(names).index("stretch")] += STEPS["stretch"]
+        elif not cloud.stretch:
+            return setup.births.times
+        end = setup.births.fine_times[-1]
+        return end + np.exp(stretch)[:, None] * (setup.births.times - end)
     clouds = [cloud] * (len(names) + 1)
     for i, name in enumerate(names):
         if name in ("threshold", "vapour", "temperature"):

@@ -5,6 +5,8 @@ import numpy as np
 MAINS = (50.0, 60.0)
 _HARMONICS = (1, 2, 3)
 _WORTH = 40.0
+_WORTH_DRIFT = 16.0
+_MEDIAN_SQUARE = 0.455
 _GLITCH = 6.0
 _NEIGHBOURS = 4
 
@@ -56,7 +58,8 @@ def find_disturbances(problem, evaluation, known=None):
     rows = evaluation.residual.size
     base = np.linalg.qr(evaluation.jacobian)[0]
     left = evaluation.residual - base @ (base.T @ evaluation.residual)
-    scale = max(float(left @ left) / rows, 1.0)
+    # Spikes must not hide a hum: the typical residual sets the scale, not the largest.
+    scale = max(float(np.median(left[:rows] ** 2)) / _MEDIAN_SQUARE, 1.0)
     while groups := _stacked_groups(problem, evaluation, chosen):
         gains = {}
         for key, columns in groups.items():
@@ -70,7 +73,7 @@ def find_disturbances(problem, evaluation, known=None):
             break
         key = max(gains, key=lambda k: gains[k][0])
         gain, shape = gains[key]
-        if gain < _WORTH * scale:
+        if gain < _worth(key[1]) * scale:
             break
         chosen[key[0]].append(key[1])
         base = np.hstack([base, shape])
@@ -94,6 +97,11 @@ def _stacked_groups(problem, evaluation, chosen):
             groups[i, name] = columns
         start += weight.size
     return groups
+
+
+def _worth(name):
+    """Return by how much a group must lower chi-square: slow drift is common, hum rarer."""
+    return _WORTH_DRIFT if "drift" in name else _WORTH
 
 
 def _needs_fundamental(name, chosen):

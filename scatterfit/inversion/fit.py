@@ -108,6 +108,7 @@ def fit_pulse(model, time, channels, options):
         fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
         best = _again(problem, best)
+        problem, best, disturbances = _undisturbed(problem, fine, best)
     sharp = problem
     problem, best = _softened(problem, best)
     best = polish(problem, best)

@@ -13,12 +13,13 @@ SCALES = {
     "number": 0.05, "scale": 0.01, "delay": 2e-5, "variance": 1e-5, "accommodation": 0.1,
     "temperature": 3e-4, "vapour": 3e-3, "threshold": 3e-3, "angle": 1e-3,
     "bend": 5e-3, "depletion": 1e-2, "creep": 5e-3,
+    "stretch": 0.02,
 }
 LIMITS = {
     "number": (np.log(1e3), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
     "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
     "threshold": (-0.25, 0.25), "delay": (-np.inf, np.inf), "angle": (-0.1, 0.1),
-    "bend": (-0.3, 0.3), "depletion": (-0.5, 0.5), "creep": (-0.3, 0.3),
+    "bend": (-0.3, 0.3), "depletion": (-0.5, 0.5), "creep": (-0.3, 0.3), "stretch": (-0.7, 0.7),
 }
 
 

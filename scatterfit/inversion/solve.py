@@ -20,12 +20,12 @@ _RELATIVE = 1e-5
 # How far first order serves: what is left out is of the square of these.
 _NEAR = {
     "number": 0.02, "scale": 0.004, "accommodation": 0.05, "temperature": 5e-4, "vapour": 4e-3,
-    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3,
+    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3, "stretch": 0.03,
 }
 # How far a descent may go before growth is solved again.
 _REACH = {
     "number": 0.8, "scale": 0.06, "accommodation": 0.5, "temperature": 6e-3, "vapour": 0.05,
-    "threshold": 0.02, "bend": 0.05, "creep": 0.05,
+    "threshold": 0.02, "bend": 0.05, "creep": 0.05, "stretch": 0.2,
 }
 
 

@@ -87,7 +87,7 @@ def gas_quantities(setup):
     )
 
 
-def nucleation_conditions(setup, concentration):
+def nucleation_conditions(setup, concentration, stretch=None):
     """Return the conditions of the hold and the nucleation rate.
 
     The number is taken back from the reference state to the density of the hold's gas; the rate
@@ -99,6 +99,8 @@ def nucleation_conditions(setup, concentration):
         Of the pulse.
     concentration : Quantity or None
         Droplets per volume at the reference state [1/m^3].
+    stretch : Quantity, optional
+        Duration of the births over the setup's, from the fit [-].
 
     Returns
     -------
@@ -129,14 +131,16 @@ def nucleation_conditions(setup, concentration):
     covariance = float(hold.temperature * hold.saturation_ratio * (warm @ wet[:3]))
     effective, rate = None, None
     if hold.effective and setup.threshold is None:
-        spread = sigmas["effective"]
-        effective = Quantity(hold.effective, hold.effective * spread)
+        longer = Quantity(1.0, 0.0) if stretch is None else stretch
+        duration = hold.effective * longer.value
+        spread = float(np.hypot(sigmas["effective"], longer.sigma / longer.value))
+        effective = Quantity(duration, duration * spread)
         if concentration is not None:
             path = setup.path
             denser = (hold.pressure / hold.temperature) / (
                 path.reference_pressure / path.reference_temperature
             )
-            value = concentration.value * denser / hold.effective
+            value = concentration.value * denser / duration
             relative = np.hypot(concentration.sigma / concentration.value, spread)
             rate = Quantity(value, value * float(relative))
     return NucleationConditions(

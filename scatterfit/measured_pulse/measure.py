@@ -46,7 +46,8 @@ _DISAGREE = 0.015
 _STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
 _INPUTS = {
     "scale": "computed growth rate", "bend": "shape of the growth law",
-    "creep": "creep of the gas during growth", "depletion": "computed depletion",
+    "creep": "creep of the gas during growth", "stretch": "duration of the births",
+    "depletion": "computed depletion",
     "accommodation": "vapour.mass_accommodation",
     "delay": "clock of the births", "temperature": "chamber.temperature_K",
     "vapour": "vapour", "threshold": "threshold of the seeds",
@@ -212,7 +213,9 @@ def _result(prepared, fit, gas, warnings):
     findings = _findings(prepared, fit, scale, turns, left)
     reasons = [Reason(f.code, f.text) for f in [*findings, *number.findings]]
     verdict = _verdict(fit, reasons, left)
-    gas = {**gas, "nucleation": conditions.nucleation_conditions(setup, number.concentration)}
+    gas = {**gas, "nucleation": conditions.nucleation_conditions(
+        setup, number.concentration, q.exponential(
+            q.Derived(fit.best.cloud.stretch, {"stretch": 1.0}), after)[0])}
     return MeasuredPulse(
         verdict=verdict, reasons=(*reasons, *warnings), final_radius=final,
         final_time=float(problem.bins.time[-1]), growth_scale=scale,

@@ -26,6 +26,7 @@ _VISIBLE = 0.6e-6
 _ONSET_BINS = 700
 _AGE_AT_ONSET = 0.12
 _DELAYS = 12
+_LEAST_STRETCH = 0.01
 
 
 def fit_options(prepared, angle_base):
@@ -64,6 +65,10 @@ def fit_options(prepared, angle_base):
     for name in free:
         names.append(name)
         priors[name] = (0.0, stated[name])
+    stretch = _stretch_sigma(prepared)
+    if stretch > _LEAST_STRETCH:
+        names.append("stretch")
+        priors["stretch"] = (0.0, stretch)
     priors["scale"] = (0.0, growth_scale_sigma(setup, free))
     if setup.threshold is not None:
         names.append("threshold")
@@ -86,6 +91,22 @@ def fit_options(prepared, angle_base):
     priors["delay"] = (onset - 0.4 * lag, _LOOSE_CLOCK + lag)
     delays = tuple(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
     return FitOptions(tuple(names), priors, onset, delays, widest, limits)
+
+
+def _stretch_sigma(prepared):
+    """Return how well the duration of births is known, relative to itself [-].
+
+    A gauge sampled coarsely knows its end to a part of a sample; a stated hold to its sigma, or
+    to a tenth (common practice, no source).
+    """
+    setup = prepared.setup
+    if setup.births.times.size < 2:
+        return 0.0
+    if not setup.clock_known:
+        hold = setup.births.effective
+        return setup.apparatus.sigmas.get("pulse.hold_ms", 0.1 * hold) / hold
+    width = np.sqrt(12.0) * setup.births.spread
+    return 0.4 * float(np.median(np.diff(prepared.time))) / width
 
 
 def _path_sigma(apparatus):
