@@ -241,25 +241,33 @@ def fit(
     as_json: Annotated[bool, typer.Option("--json", help="Print the result as JSON.")] = False,
     settings: SET = None,
     exclude_ms: EXCLUDE = None,
+    monte_carlo: Annotated[
+        int, typer.Option(min=0, max=100_000, metavar="N", help="Repeat the analysis N times with "
+                          "inputs drawn from their sigmas.")
+    ] = 0,
+    seed: Annotated[int, typer.Option(help="Seed of --monte-carlo.")] = 1,
 ):
     """Fit one pulse: radius, growth, number, nucleation.
 
     Example: scatterfit fit bench.toml pulse.csv --out results
     """
     exclude = _exclusions(exclude_ms)
-    from scatterfit.cli_pulse import fit_files, result_text, write_result
+    from scatterfit.cli_pulse import fit_files, repeat_fit, result_text, write_result
 
     pulse = fit_files(chamber, trace, settings or (), exclude)
+    if monte_carlo:
+        pulse = repeat_fit(chamber, trace, pulse, (settings or (), exclude, monte_carlo, seed))
     result = pulse.to_dict()
+    # Files first: a reader of the output that goes away must not cost them.
+    written = write_result(out, trace.stem, pulse) if out is not None else []
     if as_json:
         print(result_text(result))
     else:
         from scatterfit.report.summary import summary_text
 
         print(summary_text(result))
-    if out is not None:
-        for path in write_result(out, trace.stem, pulse):
-            print(f"wrote {path}", file=sys.stderr)
+    for path in written:
+        print(f"wrote {path}", file=sys.stderr)
     raise typer.Exit(int(result["verdict"] == "failed"))
 
 

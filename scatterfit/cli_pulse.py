@@ -1,6 +1,7 @@
 """Reading, fitting, simulating and writing pulses for the commands."""
 
 import json
+import sys
 from pathlib import Path
 
 import scatterfit
@@ -28,6 +29,40 @@ def fit_files(chamber, trace, settings=(), exclude=()):
     """
     overrides = dict(parse_assignment(setting) for setting in settings)
     return scatterfit.fit_file(chamber, trace, overrides=overrides, exclude=exclude)
+
+
+def repeat_fit(chamber, trace, pulse, how):
+    """Repeat an analysis with inputs drawn from their sigmas, with progress on a terminal.
+
+    Parameters
+    ----------
+    chamber : path-like
+        Chamber file.
+    trace : path-like
+        Trace.
+    pulse : MeasuredPulse
+        Its result.
+    how : tuple
+        Settings, excluded ranges [s], trials and seed.
+
+    Returns
+    -------
+    pulse : MeasuredPulse
+        With the spread of the repetitions.
+    """
+    from scatterfit.files_fit import repeated
+
+    settings, exclude, trials, seed = how
+
+    def progress(done):
+        if sys.stderr.isatty():
+            print(f"\r{done} of {trials} repetitions", end="\n" if done == trials else "",
+                  file=sys.stderr, flush=True)
+
+    return repeated(chamber, trace, pulse, {
+        "overrides": dict(parse_assignment(setting) for setting in settings),
+        "exclude": exclude, "trials": trials, "seed": seed, "progress": progress,
+    })
 
 
 def result_text(result):

@@ -2,6 +2,7 @@
 
 import hashlib
 import platform
+from dataclasses import replace
 from importlib import metadata
 from pathlib import Path
 
@@ -11,6 +12,7 @@ from scatterfit.errors import TraceError
 from scatterfit.files import load_pulse
 from scatterfit.files_kernel import default_store
 from scatterfit.measured_pulse.measure import measure
+from scatterfit.measured_pulse.monte_carlo import monte_carlo
 from scatterfit.measured_pulse.record import MeasuredPulse, Reason
 
 _LIBRARIES = ("scatterfit", "numpy", "scipy", "lmfit", "miepython")
@@ -58,6 +60,34 @@ def fit_loaded(apparatus, trace, *, overrides=None, exclude=(), store=None, prov
     except (np.linalg.LinAlgError, FloatingPointError, ZeroDivisionError) as error:
         text = f"the fit broke down ({error}): look at the trace, or report it with the files"
         return _failed(str(trace.source), text, record)
+
+
+def repeated(chamber_path, trace_path, pulse, settings):
+    """Return a result with the spread over repeated analyses added.
+
+    Parameters
+    ----------
+    chamber_path, trace_path : str or Path
+        The chamber file and the trace.
+    pulse : MeasuredPulse
+        Result of :func:`fit_file` on them.
+    settings : dict
+        ``"trials"``, ``"seed"`` and ``"progress"``, with ``"overrides"`` and ``"exclude"`` as for
+        :func:`fit_file`.
+
+    Returns
+    -------
+    pulse : MeasuredPulse
+        With ``monte_carlo`` filled in; unchanged where there is no fit to repeat.
+    """
+    if pulse.final_radius is None:
+        return pulse
+    apparatus, trace, _ = load_pulse(chamber_path, trace_path, settings["overrides"])
+    spread = monte_carlo(
+        apparatus, trace.time, dict(trace.columns), pulse,
+        {"store": default_store(), "exclude": (), **settings},
+    )
+    return replace(pulse, monte_carlo=spread, trials=settings["trials"])
 
 
 def fit_file(chamber_path, trace_path, *, overrides=None, exclude=(), folder=None, store=None):

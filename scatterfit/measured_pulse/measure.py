@@ -55,7 +55,8 @@ _INPUTS = {
 
 
 def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a source of its own)
-    apparatus, time, columns, *, trace="", store=None, exclude=(), provenance=None
+    apparatus, time, columns, *, trace="", store=None, exclude=(), provenance=None,
+    angle_offsets=None,
 ):
     """Return what one pulse says.
 
@@ -75,6 +76,8 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
         Ranges of time to leave out [s].
     provenance : dict, optional
         What is known about the files.
+    angle_offsets : sequence of float, optional
+        By how much each detector's angle is stated differently than the bench says [rad].
 
     Returns
     -------
@@ -108,13 +111,14 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
         ))
         return MeasuredPulse(verdict="rejected", reasons=(reason, *warnings), **gas)
     base = (0.0,) * len(apparatus.detectors)
-    options = fit_options(prepared, base)
+    offsets = base if angle_offsets is None else tuple(angle_offsets)
+    options = fit_options(prepared, base, offsets)
     fit = fit_pulse(prepared.model, prepared.time, prepared.channels, options)
     if not visible(fit):
         if not empty(fit):
             return _puzzle(prepared, fit, gas, warnings)
         return _nothing(prepared, fit, gas, warnings)
-    prepared, fit = _settle_angles(prepared, fit, base)
+    prepared, fit = _settle_angles(prepared, fit, base, offsets)
     return _result(prepared, fit, gas, warnings)
 
 
@@ -138,7 +142,7 @@ def _dry(setup):
     return max(setup.growth_saturation_ratio, held) <= 1.0
 
 
-def _settle_angles(prepared, fit, base):
+def _settle_angles(prepared, fit, base, offsets):
     """Return the pulse and its fit with tables made at the angles that the fit found."""
     for _ in range(3):
         shifts = fit.best.cloud.angles
@@ -146,7 +150,7 @@ def _settle_angles(prepared, fit, base):
             break
         base = tuple(b + s for b, s in zip(base, shifts, strict=True))
         prepared = reangled(prepared, base)
-        fit = refine(fit, prepared.model, prepared.time, fit_options(prepared, base))
+        fit = refine(fit, prepared.model, prepared.time, fit_options(prepared, base, offsets))
     return prepared, fit
 
 

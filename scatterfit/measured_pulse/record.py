@@ -185,6 +185,10 @@ class MeasuredPulse:
     residual_lag1: float | None = None
     budget: tuple[BudgetLine, ...] = ()
     learnt: tuple[Learnt, ...] = ()
+    monte_carlo: Mapping[str, Quantity] | None = None
+    """Spread over repeated analyses, where they were asked for."""
+    trials: int = 0
+    """How many repeated analyses there were."""
     provenance: Mapping[str, object] = field(default_factory=dict)
     channels: tuple[ChannelView, ...] = ()
 
@@ -237,6 +241,7 @@ class MeasuredPulse:
                  "sigma_left": _finite(line.left)}
                 for line in self.learnt
             ],
+            "monte_carlo": self._monte_carlo(),
             "provenance": dict(self.provenance),
         }
 
@@ -249,6 +254,17 @@ class MeasuredPulse:
             "effective_ms": _as(n.effective, _MILLI),
             "rate_per_cm3_s": _as(n.rate, _PER_CM3),
             "temperature_saturation_covariance_K": _plain(n.temperature_saturation_covariance),
+        }
+
+    def _monte_carlo(self):
+        if self.monte_carlo is None:
+            return None
+        found = self.monte_carlo
+        return {
+            "trials": self.trials,
+            "final_radius_um": _as(found.get("final_radius"), _MICRO),
+            "concentration_per_cm3": _as(found.get("concentration"), _PER_CM3),
+            "nucleation_rate_per_cm3_s": _as(found.get("nucleation_rate"), _PER_CM3),
         }
 
     def _curve(self):

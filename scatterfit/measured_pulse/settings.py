@@ -29,7 +29,7 @@ _DELAYS = 12
 _LEAST_STRETCH = 0.01
 
 
-def fit_options(prepared, angle_base):
+def fit_options(prepared, angle_base, angle_offsets):
     """Return what is free in a pulse's fit.
 
     Parameters
@@ -38,6 +38,8 @@ def fit_options(prepared, angle_base):
         The pulse.
     angle_base : sequence of float
         Angle shift that the model's tables already hold, one a detector [rad].
+    angle_offsets : sequence of float
+        Where the angles are stated to be, less the bench's own statement [rad].
 
     Returns
     -------
@@ -56,7 +58,7 @@ def fit_options(prepared, angle_base):
         sigma = apparatus.sigmas.get(f"detector.{detector.column}.angle_deg")
         if sigma:
             names.append(f"angle:{i}")
-            priors[f"angle:{i}"] = (-angle_base[i], sigma)
+            priors[f"angle:{i}"] = (angle_offsets[i] - angle_base[i], sigma)
             reach = min(ANGLE_SIGMAS * sigma, LARGEST_ANGLE)
             limits[f"angle:{i}"] = (-reach - angle_base[i], reach - angle_base[i])
     stated = {"temperature": temperature_relative_sigma(apparatus),

@@ -43,6 +43,7 @@ def summary_text(result):
             _alternatives(result["alternatives"]),
             _fit(result),
             _budget(result["budget"]),
+            _repeated(result.get("monte_carlo")),
         ]
     parts.append(_by_hand(result.get("provenance") or {}))
     return "\n\n".join(part for part in parts if part)
@@ -179,6 +180,19 @@ def _budget(budget):
             lines += textwrap.wrap(head + shares, WIDTH - 2, subsequent_indent="    ")
     return "\n".join(["Where the uncertainty comes from (share of variance)"] * bool(lines)
                      + [f"  {line}" for line in lines])
+
+
+def _repeated(found):
+    """Return the spread over repeated analyses, where there is one."""
+    if not found:
+        return ""
+    rows = (("final radius", "final_radius_um", "um"),
+            ("droplets per volume", "concentration_per_cm3", "1/cm3"),
+            ("nucleation rate", "nucleation_rate_per_cm3_s", "1/(cm3 s)"))
+    lines = [f"  {name:<26}  {format_quantity(found[key]['value'], found[key]['sigma'], unit)}"
+             for name, key, unit in rows if found.get(key)]
+    head = f"Over {found['trials']} repeated analyses, inputs drawn from their sigmas"
+    return "\n".join([head, *lines])
 
 
 def _by_hand(provenance):
