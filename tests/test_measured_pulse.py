@@ -336,9 +336,10 @@ def test_what_is_not_droplets_is_taken_out_and_said(small, store, change, code):
 def test_light_that_is_not_described_is_not_called_a_blank(small, store, what):
     """Thousands of droplets shine: whatever the model makes of it, there is no upper limit."""
     if what == "far more vapour":
-        result, _ = fitted(small(), store, simulated=small(vapour={"mole_fraction": 0.011}))
+        wet = small(vapour={"mole_fraction": 0.011})
+        result, _ = fitted(small(), store, simulated=wet, rate=5e3)
     else:
-        result, _ = changed(small(), store, add_something_else)
+        result, _ = changed(small(), store, add_something_else, rate=5e3)
     assert result["verdict"] == "rejected"
     assert "not-described" in codes(result)
     assert "no-cloud" not in codes(result)
@@ -423,10 +424,16 @@ def test_few_extrema_and_alternatives(small, store):
     assert "few-extrema" in codes(result)
 
 
-def test_a_radius_at_the_end_of_the_tables_says_so(make_bench, store):
-    result, _ = fitted(make_bench(analysis={"max_radius_um": 1.3}), store,
-                       simulated=make_bench(analysis={"max_radius_um": 5.0}))
+def test_a_radius_at_the_end_of_the_tables_says_so(small, store):
+    """Droplets end at 1.465 um: just within tables to 1.48 um, beyond those to 1.35 um."""
+    near = small(analysis={"max_radius_um": 1.48})
+    result, truth = fitted(near, store, simulated=small(), rate=5e3)
+    assert truth["final_radius_um"] == pytest.approx(1.465, abs=2e-3)
+    assert "largest-radius" in codes(result)
+    short = small(analysis={"max_radius_um": 1.35})
+    result, _ = fitted(short, store, simulated=small(), rate=5e3)
     assert "largest-radius" in codes(result) or result["verdict"] == "rejected"
+    assert result["verdict"] != "accepted" or result["final_radius_um"]["value"] < 1.5
 
 
 def test_conditions_that_cannot_be(small, store):

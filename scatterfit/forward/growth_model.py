@@ -46,6 +46,10 @@ class Cloud:
     """ln of the droplets that share the vapour over those that shine: error in the depletion."""
     angles: tuple[float, ...] = ()
     """Shift of each detector's angle [rad]."""
+    tilts: tuple[float, ...] = ()
+    """Slow drift of each channel's baseline, over its range of light: odd in time [-]."""
+    bows: tuple[float, ...] = ()
+    """The same, even in time [-]."""
 
 
 @dataclass(frozen=True)
@@ -66,6 +70,24 @@ class LinearGrowth:
     """From those classes to all, shape (c, f)."""
     log_density_by: dict
     """Derivatives of ln of the number density at the nodes, shape (m,)."""
+
+
+def no_shifts(model):
+    """Return zeros for all that is counted by detector or channel.
+
+    Parameters
+    ----------
+    model : PulseModel
+        Of the pulse.
+
+    Returns
+    -------
+    fields : dict of str to tuple of float
+        ``angles``, ``tilts`` and ``bows`` of a :class:`Cloud` [rad, -, -].
+    """
+    channels = (0.0,) * len(model.channels)
+    detectors = (0.0,) * len(model.setup.apparatus.detectors)
+    return {"angles": detectors, "tilts": channels, "bows": channels}
 
 
 def per_mole(setup, log_number):

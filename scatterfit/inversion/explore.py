@@ -204,7 +204,8 @@ def _good(solution):
 def _descents(problem, clouds):
     """Return short descents from clouds; those that end in nothing to see are dropped."""
     ends = [descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds]
-    return [s for s in ends if final_radius(s) > _LEAST_RADIUS]
+    return [s for s in ends
+            if final_radius(s) > _LEAST_RADIUS and s.best.state.growth.converged]
 
 
 def follow(problem, clouds):

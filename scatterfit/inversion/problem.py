@@ -12,6 +12,7 @@ from scatterfit.inversion.data import Bins
 SCALES = {
     "number": 0.05, "scale": 0.01, "delay": 2e-5, "variance": 1e-5, "accommodation": 0.1,
     "temperature": 3e-4, "vapour": 3e-3, "threshold": 3e-3, "angle": 1e-3,
+    "tilt": 1e-3, "bow": 1e-3,
     "bend": 5e-3, "depletion": 1e-2, "creep": 5e-3,
     "stretch": 0.02,
 }
@@ -19,6 +20,7 @@ LIMITS = {
     "number": (np.log(1e3), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
     "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
     "threshold": (-0.25, 0.25), "delay": (-np.inf, np.inf), "angle": (-0.1, 0.1),
+    "tilt": (-0.1, 0.1), "bow": (-0.1, 0.1),
     "bend": (-0.3, 0.3), "depletion": (-0.5, 0.5), "creep": (-0.3, 0.3), "stretch": (-0.7, 0.7),
 }
 
@@ -99,7 +101,7 @@ def value_of(cloud, name):
         Its value [any].
     """
     kind, _, index = name.partition(":")
-    return cloud.angles[int(index)] if kind == "angle" else getattr(cloud, kind)
+    return getattr(cloud, f"{kind}s")[int(index)] if index else getattr(cloud, kind)
 
 
 def limits_of(problem, name):
@@ -137,14 +139,17 @@ def shifted(cloud, names, values):
     cloud : Cloud
         The other cloud.
     """
-    changes, angles = {}, list(cloud.angles)
+    changes = {}
     for name, value in zip(names, values, strict=True):
         kind, _, index = name.partition(":")
-        if kind == "angle":
-            angles[int(index)] = float(value)
+        if index:
+            several = changes.setdefault(f"{kind}s", list(getattr(cloud, f"{kind}s")))
+            several[int(index)] = float(value)
         else:
             changes[kind] = float(value)
-    return replace(cloud, angles=tuple(angles), **changes)
+    return replace(cloud, **{
+        key: tuple(value) if isinstance(value, list) else value for key, value in changes.items()
+    })
 
 
 def linear_columns(channel, signal, extra):
@@ -207,6 +212,9 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         columns, fixed = linear_columns(channel, signal.shape, extra)
         weighted = (columns * weight).T
         basis, triangle = np.linalg.qr(weighted)
+        drifts = _drifts(problem, i)
+        slow = sum((value_of(cloud, name) * shape for name, shape in drifts.items()), 0.0)
+        fixed = fixed + slow
         target = (problem.bins.values[i] - fixed) * weight
         shadow = basis.T @ target
         factors = _solve(triangle, shadow)
@@ -221,6 +229,8 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         by = [signal.by.get(name, none) for name in names] + [parts[i] for _, parts in more]
         by += [signal.by.get(name, none) for name in splits]
         both = -(np.array(by) * (amplitude * weight)).T
+        for name, shape in drifts.items():
+            both[:, names.index(name)] = -shape * weight
         both = both - basis @ (basis.T @ both)
         jacobians.append(both[:, : len(names) + len(more)])
         for k, key in enumerate(splits):
@@ -233,6 +243,18 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         np.array(fits), state, tuple(bases),
         {key: np.concatenate(parts) for key, parts in splits.items()} if derivatives else {},
     )
+
+
+def _drifts(problem, position):
+    """Return the slow drifts of a channel that are among the parameters, in volts per unit."""
+    found = {name: None for name in (f"tilt:{position}", f"bow:{position}")
+             if name in problem.names}
+    if not found:
+        return {}
+    bins = problem.bins
+    place = 2.0 * (bins.time - bins.time[0]) / (bins.time[-1] - bins.time[0]) - 1.0
+    size = float(np.ptp(bins.values[position][bins.weights[position] > 0.0]))
+    return {name: size * (place if name.startswith("tilt") else place**2) for name in found}
 
 
 def _solve(triangle, shadow):

@@ -8,7 +8,7 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
-from scatterfit.forward.growth_model import Cloud, per_mole
+from scatterfit.forward.growth_model import Cloud, no_shifts, per_mole
 from scatterfit.forward.light import spread_table
 
 _NODES = 70
@@ -75,7 +75,7 @@ def search(problem, delays, widest, count=6):
             cloud = Cloud(
                 number=_number(problem, amplitude[:, row, column], level[row]),
                 delay=delay, variance=_VARIANCE, accommodation=sticking[row],
-                angles=(0.0,) * len(setup.apparatus.detectors), **{axis: scales[column]},
+                **no_shifts(problem.model), **{axis: scales[column]},
             )
             found.append(Candidate(cloud, float(misfit[row, column]),
                                    float(radius[row, column, -1])))

@@ -66,10 +66,13 @@ def descend(problem, cloud, iterations=12, tolerance=1e-3, linear=None, rounds=6
     solution : Solution
         The best cloud seen.
     """
-    turns, settled = 0, False
+    best, turns, settled = None, 0, False
     for turn in range(rounds):
         if linear is None or turn:
             linear = linear_growth(problem.model.setup, cloud, problem.names, linear)
+            if best is not None and not linear.growth.converged:
+                # Not a cloud that could exist: the last one that was solved stands.
+                return Solution(best, turns, converged=False)
         best, count, settled = _descend_linear(problem, cloud, linear, iterations, tolerance)
         turns += count
         cloud = best.cloud

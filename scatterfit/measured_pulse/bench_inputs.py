@@ -9,12 +9,6 @@ _CREEP = 0.02
 """Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
 
 
-_DRIFT = 5e-4
-_DRIFT_SEEN = 4e-3
-"""Slow drift of a baseline that goes unnoticed, over the light's range: half a part in a thousand;
-where a drift or hum was found, what the found shape does not catch (common practice)."""
-
-
 def bench_inputs(prepared, problem, best, index_shift=2e-4):
     """Return what is let loose, within its sigma, when the fit's uncertainty is worked out.
 
@@ -106,7 +100,6 @@ def _signal_inputs(prepared, problem, best, index_shift):
             if sigma and channel.path:
                 parts[i] = signals[i].by["number_extinction"]
                 found.append(("transmission.path_mm", sigma / channel.path, parts))
-    found += _baselines(model, problem, best)
     sigma = apparatus.sigmas.get("chamber.path_mm", 0.0)
     if sigma and apparatus.chamber.path:
         parts = [s.by["number_extinction"] if c.kind == "scatter" else none
@@ -119,22 +112,6 @@ def _signal_inputs(prepared, problem, best, index_shift):
         shifted, _ = channel_signals(prepared.index_model, cloud, time, (), linear)
         parts = [(b.shape - a.shape) / index_shift for a, b in zip(plain, shifted, strict=True)]
         found.append(("vapour.refractive_index", sigma, parts))
-    return found
-
-
-def _baselines(model, problem, best):
-    """Return slow drifts too small to be found, of each detector whose gain is known."""
-    time, none = problem.bins.time, np.zeros_like(problem.bins.time)
-    place = 2.0 * (time - time[0]) / (time[-1] - time[0]) - 1.0
-    found = []
-    for i, channel in enumerate(model.channels):
-        if channel.kind != "scatter" or channel.gain is None:
-            continue
-        drifts = _DRIFT_SEEN if problem.extras[i].size else _DRIFT
-        for word, shape in (("tilt", place), ("bow", place**2)):
-            parts = [none] * len(model.channels)
-            parts[i] = shape * float(np.ptp(best.fits[i]))
-            found.append((f"baseline {word} of {channel.column}", drifts, parts))
     return found
 
 

@@ -2,14 +2,14 @@
 
 import numpy as np
 
-from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.growth_model import Cloud, no_shifts
 from scatterfit.forward.model import channel_signals
 
 _FEW = 1e4
 _SCALES = (-2.0, 0.0, 2.0)
 
 
-def upper_limit(prepared, problem):
+def upper_limit(problem):
     """Return the 95 percent upper limit on the number density, or ``None`` if there is none.
 
     The light of a cloud that grows as computed is fitted to the trace with a factor, beside the
@@ -18,8 +18,6 @@ def upper_limit(prepared, problem):
 
     Parameters
     ----------
-    prepared : Prepared
-        The pulse.
     problem : Problem
         With the binned trace.
 
@@ -38,7 +36,7 @@ def upper_limit(prepared, problem):
     for shift in _SCALES:
         cloud = Cloud(
             number=float(np.log(_FEW)), scale=shift * sigma, delay=delay, variance=1e-5,
-            angles=(0.0,) * len(prepared.setup.apparatus.detectors),
+            **no_shifts(problem.model),
         )
         found = _one_limit(problem, cloud)
         if found is not None:

@@ -167,7 +167,7 @@ def _views(prepared, fit):
 
 def _nothing(prepared, fit, gas, warnings):
     """Return the result of a pulse without a cloud."""
-    limit = upper_limit(prepared, fit.problem)
+    limit = upper_limit(fit.problem)
     text = "no rise of the light that growing droplets would explain"
     after = prepared.time > prepared.setup.births.median
     if prepared.setup.clock_known and not any((d.used & after).any() for d in fit.channels):

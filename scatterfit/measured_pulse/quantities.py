@@ -190,7 +190,8 @@ def at_reference(setup, posterior, radius):
     weights = median_weights(setup.births)
     length = growth.length[0]
     late = growth.time >= growth.birth_times[0].max()
-    square = (weights @ growth.square[0])[late]
+    floor = (growth.start_radius + length) ** 2
+    square = np.maximum((weights @ growth.square[0])[late], floor)
     median = np.sqrt(square) - length
     if not late.any() or median.max() < radius or median[0] > radius:
         return {}

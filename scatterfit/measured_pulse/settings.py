@@ -2,6 +2,7 @@
 
 import numpy as np
 
+from scatterfit.constants import GAS_CONSTANT
 from scatterfit.forward.growth_model import Cloud, grow
 from scatterfit.inversion.data import bin_channels, bin_edges
 from scatterfit.inversion.fit import FitOptions
@@ -14,6 +15,8 @@ from scatterfit.measured_pulse.bench_inputs import (
 from scatterfit.measured_pulse.prepare import ANGLE_SIGMAS, LARGEST_ANGLE
 
 _STICKING = 0.7
+# Slow drift of a baseline that would go unnoticed, over the range of the light (common practice).
+_DRIFT = 1.5e-3
 _BEND = 0.01
 _CLOCK = 2e-4
 _LOOSE_CLOCK = 5e-3
@@ -26,6 +29,8 @@ _VISIBLE = 0.6e-6
 _ONSET_BINS = 700
 _AGE_AT_ONSET = 0.12
 _DELAYS = 12
+_FEWEST = 1e3
+_LEAST_SEEN = 1e-7
 _LEAST_STRETCH = 0.01
 
 
@@ -53,7 +58,11 @@ def fit_options(prepared, angle_base, angle_offsets):
         "accommodation": (0.0, _STICKING), "bend": (0.0, _BEND),
         "depletion": (0.0, float(np.hypot(depletion_sigma(setup), _path_sigma(apparatus)))),
     }
-    limits = {}
+    limits = {"number": (np.log(_FEWEST), np.log(_most_droplets(setup)))}
+    for i, data in enumerate(prepared.channels):
+        if data.kind == "scatter":
+            names += [f"tilt:{i}", f"bow:{i}"]
+            priors[f"tilt:{i}"] = priors[f"bow:{i}"] = (0.0, _DRIFT)
     for i, detector in enumerate(apparatus.detectors):
         sigma = apparatus.sigmas.get(f"detector.{detector.column}.angle_deg")
         if sigma:
@@ -93,6 +102,14 @@ def fit_options(prepared, angle_base, angle_offsets):
     priors["delay"] = (onset - 0.4 * lag, _LOOSE_CLOCK + lag)
     delays = tuple(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
     return FitOptions(tuple(names), priors, onset, delays, widest, limits)
+
+
+def _most_droplets(setup):
+    """Return how many droplets of 0.1 um the vapour could make at the most [1/m^3]."""
+    path = setup.path
+    moles = path.reference_pressure / (GAS_CONSTANT * path.reference_temperature)
+    volume = setup.vapour_fraction * moles * setup.properties.molar_volume
+    return volume / (4.0 / 3.0 * np.pi * _LEAST_SEEN**3)
 
 
 def _stretch_sigma(prepared):

@@ -271,6 +271,8 @@ def _scored(data, values, prior, noise, steps):
         step = np.linalg.lstsq(*_equations(data, values, prior, noise), rcond=None)[0]
         if prior == 0:
             step[2] = 0.0
+        if not np.all(np.abs(step) < 1e100):  # nothing on the slope any more
+            break
         size = max(abs(step[0]) / math.exp(values[1]), abs(step[1]) / 0.7, 1.0)
         values = values + step / size
         values = np.clip(values, low, high)

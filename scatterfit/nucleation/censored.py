@@ -101,7 +101,8 @@ def with_limits(points, line, limits):
         scatter2 = extra_variance(points, both[1])
         if np.all(np.abs(both - old) <= 1e-9 * (1.0 + np.abs(both))):
             break
-    covariance = np.linalg.inv(_curvature(both, points, limits, line.centre, scatter2))
+    curvature = _curvature(both, points, limits, line.centre, scatter2)
+    covariance = np.linalg.inv(_convex(curvature))
     return replace(line, level=float(both[0]), slope=float(both[1]), covariance=covariance,
                    scatter=float(np.sqrt(scatter2)))
 
@@ -155,5 +156,5 @@ def _minimum(both, *rest):
 def _convex(curvature):
     """Return the curvature with every negative direction turned up."""
     values, vectors = np.linalg.eigh(curvature)
-    values = np.maximum(np.abs(values), 1e-9 * np.abs(values).max())
+    values = np.maximum(np.abs(values), max(1e-9 * np.abs(values).max(), 1e-12))
     return (vectors * values) @ vectors.T

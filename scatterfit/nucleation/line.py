@@ -265,7 +265,7 @@ def extra_variance(points, slope):
         weights = 1.0 / (stated + extra)
         squares = weights * _residuals(points, slope, weights) ** 2
         excess = squares.sum() - freedom
-        step = excess / (weights @ squares)
+        step = excess / max(float(weights @ squares), 1e-300)
         extra = max(0.0, extra + step)
         if abs(step) <= 1e-12 * extra or (extra == 0.0 and excess <= 0):
             break
@@ -339,7 +339,7 @@ def robust_line(points, line):
         scale = _scale(residual)
         hold = np.minimum(1.0, _HUBER * scale / np.maximum(np.abs(residual), 1e-300))
         normal = design.T @ (hold[:, None] * design)
-        new = np.linalg.solve(normal, design.T @ (hold * target))
+        new = np.linalg.lstsq(normal, design.T @ (hold * target), rcond=None)[0]
         done = np.all(np.abs(new - both) <= 1e-10 * (1e-3 + np.abs(new)))
         both = new
         if done:
@@ -349,7 +349,7 @@ def robust_line(points, line):
     inside = np.abs(residual) <= _HUBER * scale
     clipped = np.clip(residual, -_HUBER * scale, _HUBER * scale)
     variance = float(clipped @ clipped) / (count - 2) / max(float(inside.mean()), 1e-3) ** 2
-    covariance = variance * np.linalg.inv(design.T @ design)
+    covariance = variance * np.linalg.pinv(design.T @ design)
     robust = replace(line, level=float(both[0]), slope=float(both[1]), covariance=covariance,
                      freedom=count - 2)
     return robust, residual / scale
