@@ -1,0 +1,136 @@
+"""Do one-sigma intervals hold the truth as often as they should?
+
+    python tests/studies/coverage.py --count 1000 --out tests/studies/coverage.jsonl
+    python tests/studies/coverage.py --summary tests/studies/coverage.jsonl
+
+One bench whose chamber file states angle, gain and temperature with sigmas; the true values of
+each pulse are drawn from them, its number, growth scale and noise as well. A file that exists is
+continued. Not part of the test run.
+"""
+
+import argparse
+import json
+import os
+from pathlib import Path
+
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
+import numpy as np  # noqa: E402
+
+from scatterfit.apparatus.check import apparatus_from_mapping  # noqa: E402
+from scatterfit.droplet_growth.setup import growth_setup  # noqa: E402
+from scatterfit.files_fit import fit_loaded  # noqa: E402
+from scatterfit.files_kernel import default_store  # noqa: E402
+from scatterfit.files_trace import Trace  # noqa: E402
+from scatterfit.forward.growth_model import Cloud  # noqa: E402
+from scatterfit.forward.model import channel_signals  # noqa: E402
+from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile  # noqa: E402
+from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model  # noqa: E402
+
+ANGLE, ANGLE_SIGMA = 30.0, 0.15
+GAIN, GAIN_SIGMA = 4.2e4, 0.05
+TEMPERATURE, TEMPERATURE_SIGMA = 296.4, 0.15
+GROWTH_SIGMA = 0.012
+RATE, DURATION, NOISE, HOLD = 50e3, 0.095, 0.01, 1e-3
+
+
+def bench(temperature=TEMPERATURE):
+    """Return the bench as its chamber file states it."""
+    return apparatus_from_mapping({
+        "beam": {"wavelength_nm": 532.0, "polarization": "perpendicular"},
+        "detector": [{
+            "column": "scatter_V", "angle_deg": ANGLE, "angle_deg_sigma": ANGLE_SIGMA,
+            "half_angle_deg": 2.0, "gain_V_m": GAIN, "gain_V_m_sigma": GAIN_SIGMA * GAIN,
+            "time_constant_ms": 0.02, "full_scale_V": 10.0}],
+        "vapour": {"substance": "water", "mole_fraction": 0.0096, "refractive_index": 1.3368},
+        "gas": {"carrier": "argon"},
+        "chamber": {"temperature_K": temperature, "temperature_K_sigma": TEMPERATURE_SIGMA,
+                    "pressure_kPa": 89.35, "path_mm": 120.0},
+        "pressure": {"column": "gauge_kPa"},
+    })
+
+
+def run(seed):
+    """Return errors and sigmas of one pulse."""
+    rng = np.random.default_rng([7, seed])
+    angle, gain, warmth = rng.standard_normal(3)
+    number = float(np.exp(rng.uniform(np.log(3e8), np.log(6e9))))
+    stated, store = bench(), default_store()
+    true = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth)
+    count = round((DURATION + 5e-3) * RATE) + 1
+    time = np.round(-5e-3 + np.arange(count) / RATE, 12)
+    fine = np.arange(-5e-3, DURATION + 1e-6, 1e-5)
+    ratio, start = 0.78, true.chamber.pressure
+    low = hold_pressure(true, Scenario(number, DURATION, RATE, NOISE, HOLD, ratio))
+    levels = (start, low, ratio * start)
+    setup = growth_setup(true, fine, pressure_profile(fine, levels, HOLD), classes=24)
+    kernel, relative, _ = pulse_kernel(setup, store)
+    model = pulse_model(setup, kernel, relative, (np.radians(ANGLE_SIGMA * angle),))
+    cloud = Cloud(number=np.log(number), scale=float(GROWTH_SIGMA * rng.standard_normal()),
+                  variance=7e-6, angles=(0.0,))
+    signals, state = channel_signals(model, cloud, time)
+    light = signals[0].shape * (1.0 + GAIN_SIGMA * gain)
+    volts = 0.05 + light + np.hypot(0.0013 * light.max(), NOISE * light) * rng.standard_normal(count)
+    columns = {
+        "scatter_V": np.round(volts / 3e-4) * 3e-4,
+        "gauge_kPa": pressure_profile(time, levels, HOLD) + 2e-4 * start * rng.standard_normal(count),
+    }
+    found = fit_loaded(stated, Trace(f"pulse{seed}", time, columns, ("time_s", *columns)))
+    births, hold, path = setup.births, setup.hold, setup.path
+    squares = state.radius[:, -1] ** 2
+    radius = float(np.sqrt(np.interp(births.median, births.times, squares)))
+    back = hold.pressure / hold.temperature * path.reference_temperature / path.reference_pressure
+    rate = number * back / hold.effective
+    line = {"seed": seed, "verdict": found.verdict, "chi2": found.chi2_reduced}
+    for name, quantity, value in (
+        ("radius", found.final_radius, radius), ("number", found.concentration, number),
+        ("J", found.nucleation.rate, rate),
+        ("T", found.nucleation.temperature, hold.temperature),
+        ("S", found.nucleation.saturation_ratio, hold.saturation_ratio),
+        ("growth", found.growth_scale, None),
+    ):
+        if quantity is not None and value is not None:
+            line[name] = [float(f"{quantity.value / value - 1:.4g}"),
+                          float(f"{quantity.sigma / value:.4g}")]
+    return line
+
+
+def summarise(lines):
+    """Return how often truths lie within one and two sigma, as Markdown."""
+    rows = ["| quantity | pulses | within 1 sigma | within 2 sigma | rms error | median sigma |",
+            "|---|---|---|---|---|---|"]
+    for name in ("radius", "number", "J", "T", "S"):
+        pairs = np.array([x[name] for x in lines if name in x])
+        if not pairs.size:
+            continue
+        z = np.abs(pairs[:, 0] / pairs[:, 1])
+        rms = np.sqrt(np.mean(pairs[:, 0] ** 2))
+        rows.append(
+            f"| {name} | {z.size} | {100 * np.mean(z < 1):.1f} % | {100 * np.mean(z < 2):.1f} % | "
+            f"{100 * rms:.3g} % | {100 * np.median(pairs[:, 1]):.3g} % |")
+    accepted = sum(x["verdict"] == "accepted" for x in lines)
+    return "\n".join([*rows, "", f"{accepted} of {len(lines)} accepted."])
+
+
+def main():
+    """Run pulses or summarise them."""
+    parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
+    parser.add_argument("--first", type=int, default=0)
+    parser.add_argument("--count", type=int, default=100)
+    parser.add_argument("--out", type=Path, default=Path("coverage.jsonl"))
+    parser.add_argument("--summary", type=Path)
+    args = parser.parse_args()
+    if args.summary:
+        print(summarise([json.loads(x) for x in args.summary.read_text().splitlines()]))
+        return
+    done = set()
+    if args.out.exists():
+        done = {json.loads(x)["seed"] for x in args.out.read_text().splitlines()}
+    with args.out.open("a") as file:
+        for seed in range(args.first, args.first + args.count):
+            if seed not in done:
+                print(json.dumps(run(seed)), file=file, flush=True)
+
+
+if __name__ == "__main__":
+    main()
