@@ -11,21 +11,22 @@ continued. Not part of the test run.
 import argparse
 import json
 import os
+import sys
 from pathlib import Path
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
-import numpy as np  # noqa: E402
+import numpy as np
 
-from scatterfit.apparatus.check import apparatus_from_mapping  # noqa: E402
-from scatterfit.droplet_growth.setup import growth_setup  # noqa: E402
-from scatterfit.files_fit import fit_loaded  # noqa: E402
-from scatterfit.files_kernel import default_store  # noqa: E402
-from scatterfit.files_trace import Trace  # noqa: E402
-from scatterfit.forward.growth_model import Cloud  # noqa: E402
-from scatterfit.forward.model import channel_signals  # noqa: E402
-from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile  # noqa: E402
-from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model  # noqa: E402
+from scatterfit.apparatus.check import apparatus_from_mapping
+from scatterfit.droplet_growth.setup import growth_setup
+from scatterfit.files_fit import fit_loaded
+from scatterfit.files_kernel import default_store
+from scatterfit.files_trace import Trace
+from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.model import channel_signals
+from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile
+from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model
 
 ANGLE, ANGLE_SIGMA = 30.0, 0.15
 GAIN, GAIN_SIGMA = 4.2e4, 0.05
@@ -70,11 +71,10 @@ def run(seed):
                   variance=7e-6, angles=(0.0,))
     signals, state = channel_signals(model, cloud, time)
     light = signals[0].shape * (1.0 + GAIN_SIGMA * gain)
-    volts = 0.05 + light + np.hypot(0.0013 * light.max(), NOISE * light) * rng.standard_normal(count)
-    columns = {
-        "scatter_V": np.round(volts / 3e-4) * 3e-4,
-        "gauge_kPa": pressure_profile(time, levels, HOLD) + 2e-4 * start * rng.standard_normal(count),
-    }
+    noise = np.hypot(0.0013 * light.max(), NOISE * light)
+    volts = 0.05 + light + noise * rng.standard_normal(count)
+    gauge = pressure_profile(time, levels, HOLD) + 2e-4 * start * rng.standard_normal(count)
+    columns = {"scatter_V": np.round(volts / 3e-4) * 3e-4, "gauge_kPa": gauge}
     found = fit_loaded(stated, Trace(f"pulse{seed}", time, columns, ("time_s", *columns)))
     births, hold, path = setup.births, setup.hold, setup.path
     squares = state.radius[:, -1] ** 2
@@ -121,7 +121,8 @@ def main():
     parser.add_argument("--summary", type=Path)
     args = parser.parse_args()
     if args.summary:
-        print(summarise([json.loads(x) for x in args.summary.read_text().splitlines()]))
+        lines = [json.loads(x) for x in args.summary.read_text().splitlines()]
+        sys.stdout.write(summarise(lines) + "\n")
         return
     done = set()
     if args.out.exists():

@@ -80,15 +80,13 @@ def pressure_at(time, levels, hold, creep):
         after * creep * -np.expm1(-late / 0.06))
 
 
-def temperature_path(props, time, pressure, start_temperature):
+def temperature_path(props, pressure, start_temperature):
     """Return the temperature without droplets along a pressure, heat capacity varying [K]."""
     log_p = np.log(pressure)
-    temperature = np.empty_like(pressure)
-    temperature[0] = start_temperature
     grid = np.linspace(log_p.min() - 0.01, log_p.max() + 0.01, 400)
-    found = solve_ivp(lambda x, t: R * t / props.heat_capacity(t), (log_p[0], grid[0]),
+    found = solve_ivp(lambda _, t: R * t / props.heat_capacity(t), (log_p[0], grid[0]),
                       [start_temperature], rtol=1e-10, atol=1e-8, dense_output=True)
-    above = solve_ivp(lambda x, t: R * t / props.heat_capacity(t), (log_p[0], grid[-1]),
+    above = solve_ivp(lambda _, t: R * t / props.heat_capacity(t), (log_p[0], grid[-1]),
                       [start_temperature], rtol=1e-10, atol=1e-8, dense_output=True)
     return np.where(log_p <= log_p[0], found.sol(np.minimum(log_p, log_p[0]))[0],
                     above.sol(np.maximum(log_p, log_p[0]))[0])
@@ -167,13 +165,13 @@ def grow(props, time, state, number, nature):
 
     def born(low):
         p = pressure_at(fine, (before, low, after), hold, nature.creep)
-        t = temperature_path(props, fine, p, start_temperature)
+        t = temperature_path(props, p, start_temperature)
         rate = np.exp(log_nucleation_rate(props, t, p, fraction, nature))
         settled = pressure_at(time[time > 0.5 * (time[0] + time[-1])],
                               (before, low, after), hold, nature.creep)
         reference = float(np.median(settled))
-        warmth = float(temperature_path(props, np.zeros(2), np.array([before, reference]),
-                                        start_temperature)[1])
+        warmth = float(temperature_path(
+            props, np.array([before, reference]), start_temperature)[1])
         thin = (reference / warmth) / (p / t)
         return p, t, rate, np.cumsum(rate * thin) * 2e-6, reference, warmth
 
@@ -220,18 +218,18 @@ def _stepped(props, time, timing, gas, nature):
     weight = per_mole / CLASSES
     at_birth = pressure_at(births, levels, hold, nature.creep)
     cold = temperature_path(
-        props, np.zeros(CLASSES + 1), np.append(levels[0], at_birth), start_temperature)[1:]
+        props, np.append(levels[0], at_birth), start_temperature)[1:]
     excess = np.log(fraction * at_birth) - props.log_pressure(cold)
-    critical = 2 * props.tension(cold) * props.molar_mass / props.density(cold) / (R * cold * excess)
+    volume = props.molar_mass / props.density(cold)
+    critical = 2.0 * props.tension(cold) * volume / (R * cold * excess)
     state_r = np.maximum(FIRST_RADIUS, 1.6 * critical)
     radius = np.zeros((CLASSES, time.size))
     warm, cond = np.empty(time.size), np.zeros(time.size)
     before = time <= births[0]
     warm[before] = temperature_path(
-        props, time[before], pressure_at(time[before], levels, hold, nature.creep),
-        start_temperature)
+        props, pressure_at(time[before], levels, hold, nature.creep), start_temperature)
     first = np.array([levels[0], float(pressure_at(births[0], levels, hold, nature.creep))])
-    temperature = float(temperature_path(props, np.zeros(2), first, start_temperature)[1])
+    temperature = float(temperature_path(props, first, start_temperature)[1])
     q = 0.0
     memory = {"td": np.full(CLASSES, temperature + 1.0)}
 
@@ -295,8 +293,9 @@ def cone_weights(angle, half_angle, polarization, nodes):
         across = np.sin(azimuth - polarization) ** 2
         along = np.cos(azimuth - polarization) ** 2
     low, high = theta.min(), theta.max()
-    points = 0.5 * (low + high) - 0.5 * (high - low) * np.cos(np.pi * (np.arange(nodes) + 0.5) / nodes)
-    bary = np.sin(np.pi * (np.arange(nodes) + 0.5) / nodes) * (-1.0) ** np.arange(nodes)
+    turns = np.pi * (np.arange(nodes) + 0.5) / nodes
+    points = 0.5 * (low + high) - 0.5 * (high - low) * np.cos(turns)
+    bary = np.sin(turns) * (-1.0) ** np.arange(nodes)
     gap = theta[:, None] - points[None, :]
     gap[gap == 0] = 1e-15
     basis = bary / gap
@@ -305,7 +304,7 @@ def cone_weights(angle, half_angle, polarization, nodes):
 
 
 def light_tables(optics, relative_index, gas_index, largest):
-    """Return exact cross sections on a fine even grid of radius, rows (detectors..., extinction)."""
+    """Return exact cross sections on a fine even grid of radius: detectors, extinction, loss."""
     wavelength, polarization, cones, receiver = optics
     k = 2 * np.pi * gas_index / wavelength
     x = np.arange(0.02, k * largest, 0.004)
@@ -357,13 +356,13 @@ def channel_shapes(cloud, tables, spread, paths, step, constants):
     squares, place = cloud.radius**2, (np.arange(CLASSES) + 0.5) / CLASSES
     for quantile in (np.arange(SUBCLASSES) + 0.5) / SUBCLASSES:
         # r^2 is smooth in the order of birth: straight lines between classes, on to the ends.
-        i = int(np.clip(np.searchsorted(place, quantile) - 1, 0, CLASSES - 2))
-        t = (quantile - place[i]) * CLASSES
-        square = np.maximum(squares[i] + t * (squares[i + 1] - squares[i]), 0.0)
+        k = int(np.clip(np.searchsorted(place, quantile) - 1, 0, CLASSES - 2))
+        t = (quantile - place[k]) * CLASSES
+        square = np.maximum(squares[k] + t * (squares[k + 1] - squares[k]), 0.0)
         live = square > 1e-16
         log_r = 0.5 * np.log(np.maximum(square, radii[20] ** 2))
-        for one, row in zip(seen, mean, strict=True):
-            one += np.where(live, np.interp(log_r, grid, row), 0.0) / SUBCLASSES
+        for i, row in enumerate(mean):
+            seen[i] += np.where(live, np.interp(log_r, grid, row), 0.0) / SUBCLASSES
     chamber_path, beam_path = paths
     light = np.exp(-cloud.density * seen[-2] * chamber_path)
     shapes = [cloud.density * one * light for one in seen[:-2]]
