@@ -220,6 +220,12 @@ class Ledger:
         return self.connection.execute(
             "SELECT id FROM pulses WHERE trace = ?", (columns["trace"],)).fetchone()[0]
 
+    def has_free(self):
+        """Return whether there is a job that nobody works on."""
+        with explained(self.path):
+            return self.connection.execute(
+                "SELECT EXISTS (SELECT 1 FROM queue WHERE claimed_by IS NULL)").fetchone()[0] == 1
+
     def waiting(self):
         """Return how many jobs are free, and how many other processes hold.
 

@@ -10,6 +10,7 @@ from scatterfit.measured_pulse.record import (
     Concentration,
     Curve,
     Extremum,
+    Learnt,
     MeasuredPulse,
     NucleationConditions,
     Quantity,
@@ -79,6 +80,11 @@ def pulse_from(result, kept=()):
             BudgetLine(b["input"], b["quantity"], _number(b["sigma"]), _number(b["share"]))
             for b in result["budget"]
         ),
+        learnt=tuple(
+            Learnt(line["input"], _number(line["moved_sigmas"]), _number(line["sigma_left"]))
+            for line in result.get("learnt", ())
+        ),
+        **_monte_carlo(result.get("monte_carlo")),
         provenance=result["provenance"],
         channels=channels_from(kept),
     )
@@ -107,6 +113,16 @@ def _nucleation(stored):
         rate=_quantity(stored["rate_per_cm3_s"], _PER_CM3),
         temperature_saturation_covariance=stored.get("temperature_saturation_covariance_K"),
     )
+
+
+def _monte_carlo(stored):
+    if stored is None:
+        return {}
+    return {"trials": stored["trials"], "monte_carlo": {
+        "final_radius": _quantity(stored["final_radius_um"], _MICRO),
+        "concentration": _quantity(stored["concentration_per_cm3"], _PER_CM3),
+        "nucleation_rate": _quantity(stored["nucleation_rate_per_cm3_s"], _PER_CM3),
+    }}
 
 
 def _curve(stored):

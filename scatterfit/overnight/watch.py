@@ -195,7 +195,7 @@ class Watcher:
                 self._say_once(str(error))
                 for job in ready:
                     self._settling.note(job)
-        if self._holds and crew.room() and ledger.waiting()[0]:
+        if self._holds and crew.room() and ledger.has_free():
             for job in ledger.claim(crew.room()):
                 crew.submit(job)
 

@@ -437,6 +437,7 @@
     if (off.length) kept.set("without", off.join(" "));
     if (page) kept.set("page", String(page));
     if ($("page-size").value !== "100") kept.set("rows", $("page-size").value);
+    if (!kept.size && !location.hash.includes("=")) return;
     try { history.replaceState(null, "", `#${kept}`); } catch { /* some browsers forbid it for files */ }
   }
   function recall() {
