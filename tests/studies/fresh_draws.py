@@ -1,7 +1,7 @@
 """Random benches and pulses against the fit: one JSON line a draw.
 
-    python tests/studies/fresh_draws.py --first 1000 --count 500 --out tests/studies/fresh_draws.jsonl
-    python tests/studies/fresh_draws.py --summary tests/studies/fresh_draws.jsonl
+    python tests/studies/fresh_draws.py --first 1000 --count 500 --out fresh_draws.jsonl
+    python tests/studies/fresh_draws.py --summary fresh_draws.jsonl
 
 A file that exists is continued: seeds in it are not drawn again. Every third bench is simulated by
 ``independent_pulse.py`` (mark ``I``), the others by scatterfit's own forward model (mark ``S``)

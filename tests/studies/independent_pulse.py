@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.integrate import solve_ivp
+from scipy.interpolate import CubicSpline
 from scipy.signal import lfilter
 
 from scatterfit import matter
@@ -60,6 +61,7 @@ class Properties:
         self.heat_capacity = self.fit(np.array(
             [float(matter.moist_heat_capacity(gas, substance, fraction, t)) for t in grid]))
         self.molar_mass = substance.molar_mass
+        self.adiabats = {}
         self.gas_mass = float(matter.moist_molar_mass(gas, substance, fraction))
 
 
@@ -83,13 +85,17 @@ def pressure_at(time, levels, hold, creep):
 def temperature_path(props, pressure, start_temperature):
     """Return the temperature without droplets along a pressure, heat capacity varying [K]."""
     log_p = np.log(pressure)
-    grid = np.linspace(log_p.min() - 0.01, log_p.max() + 0.01, 400)
-    found = solve_ivp(lambda _, t: R * t / props.heat_capacity(t), (log_p[0], grid[0]),
-                      [start_temperature], rtol=1e-10, atol=1e-8, dense_output=True)
-    above = solve_ivp(lambda _, t: R * t / props.heat_capacity(t), (log_p[0], grid[-1]),
-                      [start_temperature], rtol=1e-10, atol=1e-8, dense_output=True)
-    return np.where(log_p <= log_p[0], found.sol(np.minimum(log_p, log_p[0]))[0],
-                    above.sol(np.maximum(log_p, log_p[0]))[0])
+    key = (float(pressure[0]), start_temperature)
+    if key not in props.adiabats:
+        ends = (log_p[0] - 1.6, log_p[0] + 0.02)
+        legs = [solve_ivp(lambda _, t: R * t / props.heat_capacity(t), (log_p[0], end),
+                          [start_temperature], rtol=1e-10, atol=1e-8, dense_output=True)
+                for end in ends]
+        grid = np.linspace(*ends, 4000)
+        warmth = np.where(grid <= log_p[0], legs[0].sol(np.minimum(grid, log_p[0]))[0],
+                          legs[1].sol(np.maximum(grid, log_p[0]))[0])
+        props.adiabats[key] = CubicSpline(grid, warmth)
+    return props.adiabats[key](log_p)
 
 
 def log_nucleation_rate(props, temperature, pressure, fraction, nature):
