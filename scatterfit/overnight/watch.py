@@ -19,7 +19,6 @@ from scatterfit.overnight.catalogue import (
 )
 from scatterfit.overnight.ledger import Ledger
 from scatterfit.overnight.night import bind, check_plan
-from scatterfit.overnight.pool import processors
 from scatterfit.overnight.settling import Settling
 from scatterfit.overnight.shares import on_network_share
 from scatterfit.overnight.stopping import Stopper
@@ -32,6 +31,7 @@ _DEBOUNCE_MS = 100
 _TICK_MS = 50
 _POLL_MS = 300
 _LOOK_AGAIN_SECONDS = 30.0
+_NO_END = 1 << 30
 
 
 class WatchError(ScatterfitError):
@@ -87,14 +87,14 @@ class Watcher:
         self._said = None
         self._look_at = 0.0
 
-    def run(self, stop=None, crew=local_crew):
+    def run(self, stop=None, crew=None):
         """Watch until asked to stop.
 
         Parameters
         ----------
         stop : object, optional
             Its ``asked`` says when to stop; Ctrl-C by default.
-        crew : callable
+        crew : callable, optional
             As for `run_batch`.
 
         Raises
@@ -104,10 +104,11 @@ class Watcher:
         LedgerError
             If the ledger cannot be written.
         """
+        crew = crew or partial(local_crew, workers=self._watching.workers)
         announce = partial(self._listener.remark, "stopping after the pulses at work")
         with Ledger(self._ledger_path) as ledger, Stopper(announce) as ctrl_c:
             bind(ledger, self.plan, self._chamber)
-            with crew(self.plan, self._watching.workers or processors()) as team:
+            with crew(self.plan, _NO_END) as team:
                 team.wake()
                 self._loop(ledger, team, stop or ctrl_c)
 
