@@ -5,8 +5,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.nucleation.activation import REASONS_LEFT_OUT, Run
+from scatterfit.nucleation.activation import Run
 from scatterfit.nucleation.estimate import Estimate, quantity
+from scatterfit.nucleation.seeded import REASONS_LEFT_OUT
 
 SCHEMA = "scatterfit-activation-1"
 _NANO = 1e9
