@@ -2,7 +2,10 @@
 
 import json
 import math
+from contextlib import closing
+from dataclasses import replace
 
+import night_fits
 import numpy as np
 import pytest
 from water_isotherms import VIISANEN_STREY_REISS, WOELK_STREY, columns
@@ -11,8 +14,14 @@ from scatterfit.cli import main
 from scatterfit.errors import InvalidInputError
 from scatterfit.files_table import is_ledger, read_table
 from scatterfit.matter import substance
+from scatterfit.measured_pulse.record import NucleationConditions, Quantity
 from scatterfit.nucleation.isotherm import RateSettings
 from scatterfit.nucleation.rates import analyse_rates
+from scatterfit.overnight.jobs import Job
+from scatterfit.overnight.ledger import Ledger
+from scatterfit.overnight.night import bind, check_plan
+from scatterfit.overnight.pulse_table import pulse_table
+from scatterfit.overnight.work import measure
 from scatterfit.report.nucleation_figures import rates_figure
 
 T, S, J = "nucleation_temperature_K", "nucleation_saturation_ratio", "nucleation_rate_per_cm3_s"
@@ -290,3 +299,39 @@ def test_an_odd_activation_is_no_error_and_names_the_odd_pulse(capsys, tmp_path)
     (found,) = json.loads(out)["isotherms"]
     assert found["outliers"] == ["row 16"]
     assert abs(found["onset"]["value"] - 1.2) < 0.01
+
+
+def on_a_line(chamber, trace, **settings):
+    """Return a fit whose rate lies on a line of slope 30, told by the trace's number."""
+    pulse = night_fits.plain(chamber, trace, **settings)
+    place = int(str(trace)[-7:-4])
+    ratio = 10.0 * math.exp(0.01 * place)
+    rate = 1e13 * math.exp(0.3 * place)
+    state = NucleationConditions(Quantity(245.0, 0.1), Quantity(55e3, 50.0),
+                                 Quantity(ratio, 0.1), Quantity(1e-3, 1e-5),
+                                 Quantity(rate, 0.1 * rate), -0.009)
+    overrides = {"chamber.temperature_K": 295.0} if place == 0 else {}
+    return replace(pulse, nucleation=state, provenance={"overrides": overrides})
+
+
+def test_rates_from_a_ledger(capsys, tmp_path):
+    plan = replace(night_fits.make_folder(tmp_path, 8), fit=on_a_line)
+    with closing(Ledger(tmp_path / "night.sqlite")) as ledger:
+        bind(ledger, plan, check_plan(plan))
+        with ledger.writing():
+            for place in range(8):
+                ledger.put(Job(f"p{place:03d}.csv"), "new")
+        ledger.store([measure(plan, job) for job in ledger.claim(100)])
+    assert is_ledger(ledger.path)
+    table, bench = pulse_table(ledger.path)
+    assert bench.vapour.substance == "water"
+    kelvin = table.numbers["chamber.temperature_K"]
+    assert kelvin[0] == 295.0  # the override; the chamber file's value elsewhere
+    assert set(kelvin[1:]) == {bench.chamber.temperature}
+    code, out, err = run(capsys, "rates", ledger.path, "--json")
+    assert (code, err) == (0, "")
+    result = json.loads(out)
+    (isotherm,) = result["isotherms"]
+    assert isotherm["pulses"] == 8
+    assert isotherm["slope"]["value"] == pytest.approx(30.0, rel=1e-6)
+    assert result["substance_assumed"] is False
