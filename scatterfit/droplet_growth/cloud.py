@@ -16,8 +16,9 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.properties import horner, mean_speed
 from scatterfit.droplet_growth.single_droplet import growth_rate
 
-_ROUNDS = 30
+_ROUNDS = 80
 _TOLERANCE = 2e-6
+_SERVES = 1e-3
 _SMALLEST_FRACTION = 1e-9
 _MICROMETRE = 1e-6
 _BENT_FROM = 5e-8
@@ -89,7 +90,7 @@ class CloudGrowth:
     droplets_per_mole: np.ndarray
     """Shape (v,) [1/mol]."""
     converged: bool
-    """Whether the last round changed nothing that matters."""
+    """Whether the last round changed (r + l)^2 by less than one part in a thousand."""
 
     @property
     def radius(self):
@@ -132,7 +133,7 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
     square, condensed, warmth = _first_guess(path, cloud.times, cloud.floor, cloud.length, start)
     temperature, share = cloud.gas.state(condensed)
     droplet_temperature = temperature[:, None, :] + warmth
-    steps, converged = (3 if start is None else 1), False
+    steps = 3 if start is None else 1
     for _ in range(_ROUNDS):
         radius = np.sqrt(square) - cloud.length
         rate, droplet_temperature, slope = cloud.rate(
@@ -148,14 +149,13 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
         square, steps = new_square, 1
         temperature, share = cloud.gas.state(condensed)
         if moved < _TOLERANCE:
-            converged = True
             break
     return CloudGrowth(
         time=path.time, square=np.where(alive, square, cloud.floor + since), square_rate=rate,
         length=cloud.length[:, 0, 0], start_radius=start_radius, birth_times=cloud.times,
         weights=weights, condensed=condensed, temperature=temperature, vapour_fraction=share,
         droplet_temperature=droplet_temperature, pressure=path.pressure,
-        droplets_per_mole=cloud.number, converged=converged,
+        droplets_per_mole=cloud.number, converged=bool(moved < _SERVES),
     )
 
 

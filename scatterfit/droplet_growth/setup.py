@@ -22,6 +22,9 @@ from scatterfit.droplet_growth.properties import GrowthProperties, growth_proper
 _FEW = 3
 _FEW_FINE = 9
 _BIRTH_RADIUS = 3e-9
+# How long the gas takes from a stated hold to the growth stage, in holds (common practice).
+_RECOMPRESSION = 0.2
+_RAMP_NODES = 9
 _SEED_RADIUS = 0.2e-6
 
 
@@ -208,13 +211,8 @@ def _stated(apparatus, substance, gas, duration, classes):
     nodes = choose_nodes(
         np.linspace(-0.5 * length, duration, 2001), np.full(2001, growth.pressure), ends
     )
-    in_hold = (nodes < 0.5 * length) if held else np.zeros(nodes.size, dtype=bool)
-    path = GasPath(
-        nodes,
-        np.where(in_hold, pulse.pressure if held else growth.pressure, growth.pressure),
-        np.where(in_hold, pulse.temperature if held else growth.temperature, growth.temperature),
-        growth.pressure, growth.temperature,
-    )
+    path = GasPath(*_held(nodes, length, (pulse if held else growth), growth),
+                   growth.pressure, growth.temperature)
     hold = None
     if held:
         saturation = fraction * pulse.pressure / float(
@@ -230,6 +228,21 @@ def _stated(apparatus, substance, gas, duration, classes):
         (apparatus, substance, gas), path, (births, few, hold), (fraction, start, low),
         clock_known=False,
     )
+
+
+def _held(nodes, length, hold, growth):
+    """Return nodes, pressure and temperature of a hold that goes over into growth.
+
+    Births that last longer than stated begin before the nodes. A step would leave droplets born
+    last too small for the growth stage: the gas takes a fifth of the hold.
+    """
+    end = 0.5 * length
+    if length:
+        ramp = end + _RECOMPRESSION * length * np.linspace(0.0, 1.0, _RAMP_NODES)
+        nodes = np.unique(np.concatenate([[nodes[0] - end], nodes, ramp]))
+    share = np.clip((nodes - end) / max(_RECOMPRESSION * length, 1e-12), 0.0, 1.0)
+    return (nodes, hold.pressure + share * (growth.pressure - hold.pressure),
+            hold.temperature + share * (growth.temperature - hold.temperature))
 
 
 def _finish(bench, path, births, before, **more):

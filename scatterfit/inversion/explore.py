@@ -26,8 +26,8 @@ _COMPARABLE = 2.5
 _SLOW_MISFIT = 0.02
 _SLOW_DEPTH = 0.01
 _BATCHES = (1, 3, 6, 10, 10)
-_RIVALS = 4
-_NEAR_TEMPLATE = 2.0
+_RIVALS = 3
+_NEAR_TEMPLATE = 1.5
 _DESCRIBED = 1.6
 _LEAST_RADIUS = 8e-8
 
@@ -204,8 +204,10 @@ def _good(solution):
 def _descents(problem, clouds):
     """Return short descents from clouds; those that end in nothing to see are dropped."""
     ends = [descend(problem, cloud, iterations=3, tolerance=1.0, rounds=1) for cloud in clouds]
-    return [s for s in ends
-            if final_radius(s) > _LEAST_RADIUS and s.best.state.growth.converged]
+    sound = [s for s in ends
+             if final_radius(s) > _LEAST_RADIUS and s.best.state.growth.converged]
+    # Where nothing sound is left, the verdict has to say so: it needs something to look at.
+    return sound or ends
 
 
 def follow(problem, clouds):

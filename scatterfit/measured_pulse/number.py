@@ -13,7 +13,7 @@ _DETERMINED = 0.5
 # Little depletion rests on the shape of the computed growth, to parts in a thousand.
 _DETERMINED_ALONE = 0.12
 _DEPLETION = 0.2
-_KERNEL = 1e-3
+_KERNEL = 5e-4
 _THICK = 0.05
 _SECOND_ORDER = 0.1
 _TENSION = 3.0
