@@ -467,7 +467,7 @@ def test_a_descent_that_did_not_settle_says_so(small, store):
     pulse = simulate(bench, store=store, rate=5e3, seed=1)[0]
     prepared = prepare(bench, pulse.time, pulse.columns, store)
     fit = fit_pulse(prepared.model, prepared.time, prepared.channels,
-                    fit_options(prepared, (0.0,)))
+                    fit_options(prepared, (0.0,), (0.0,)))
     assert growth_findings(fit, (1.0, 0.1), prepared.setup) == []
     unsettled = replace(fit, converged=False)
     assert [f.code for f in growth_findings(unsettled, (1.0, 0.1), prepared.setup)] == [
