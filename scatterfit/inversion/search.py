@@ -15,6 +15,8 @@ _NODES = 70
 _STICKING = (0.0, -1.2)
 _DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
 _VARIANCE = 2e-5
+_RATIO = 4.0
+_SPREADS = 7
 _PHASE = 0.35
 _GRID_ERROR = 0.05
 _DEPTH_ERROR = 0.01
@@ -62,13 +64,14 @@ def search(problem, delays, widest, count=6):
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
     levels = _levels(setup)
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
-    table = spread_table(problem.model.light, _VARIANCE)
+    tables = [spread_table(problem.model.light, _VARIANCE * _RATIO**k) for k in range(_SPREADS)]
     width = problem.priors.get(axis, (0.0, 0.15))[1]
     curves = _curves(setup, sticking, level, (axis, scales))
     found = []
     for delay in delays:
         radius, density = _sampled(curves, scales, problem.bins.time - delay)
-        misfit, amplitude = _misfits(problem, table, radius, density)
+        which = _spread_by_birth(setup, radius[0, scales.size // 2], problem.bins.time)
+        misfit, amplitude = _misfits(problem, (tables, which), radius, density)
         misfit = misfit + _disagreement(problem, amplitude, level) + (scales / width) ** 2
         for i in _minima(misfit):
             row, column = np.unravel_index(i, misfit.shape)
@@ -230,12 +233,26 @@ def _free_radius(setup):
     return max(float(growth.radius[0, 0].max()), 1e-7)
 
 
-def _misfits(problem, table, radius, density):
+def _spread_by_birth(setup, radius, time):
+    """Return which table each bin needs: births spread young droplets far more than old ones."""
+    if not setup.births.spread > 0.0:
+        return np.zeros(time.size, dtype=np.intp)
+    young = radius <= 0.0
+    log_radius = np.log(np.where(young, 1.0, radius))
+    speed = np.where(young, np.inf, np.abs(np.gradient(log_radius, time)))
+    relative = np.minimum(setup.births.spread * speed, 1.0) ** 2 / _VARIANCE
+    level = np.rint(np.log(1.0 + relative) / np.log(_RATIO))
+    return np.clip(level, 0, _SPREADS - 1).astype(np.intp)
+
+
+def _misfits(problem, spread, radius, density):
     """Return chi-square [-], shape (l, s), and fitted ln amplitudes, shape (channels, l, s)."""
     bins, model = problem.bins, problem.model
+    tables, which = spread
+    table, size = tables[0], tables[0].cells.shape[1]
     born = radius > 0.0
     place = (np.log(np.maximum(radius, 1e-9)) - table.start) * (1.0 / table.step)
-    index = np.clip(np.rint(place), 0, table.cells.shape[1] - 1).astype(np.intp)
+    index = np.clip(np.rint(place), 0, size - 1).astype(np.intp) + which * size
     everywhere = born.any(axis=(0, 1))
     total = np.zeros(radius.shape[:2])
     amplitudes = []
@@ -243,9 +260,11 @@ def _misfits(problem, table, radius, density):
         data = bins.values[i]
         weight = _blunted(bins.weights[i], data, channel.kind)
         row = model.extinction_row if channel.kind == "scatter" else channel.row
-        depth = density * table.cells[row].take(index) * born * channel.path
+        stacked = np.concatenate([t.cells[row] for t in tables])
+        depth = density * stacked.take(index) * born * channel.path
         if channel.kind == "scatter":
-            shape = table.cells[channel.row].take(index) * born * density
+            stacked = np.concatenate([t.cells[channel.row] for t in tables])
+            shape = stacked.take(index) * born * density
             shape = (channel.gain or 1.0) * shape * np.exp(-depth)
         else:
             shape, data, weight = _optical_depth(depth, data, weight, everywhere)
