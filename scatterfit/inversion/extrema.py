@@ -117,8 +117,8 @@ def find_shoulders(time, values, weights, start):
     --------
     >>> time = np.linspace(0.0, 1.0, 400)
     >>> found = find_shoulders(time, time + 0.9 * np.sin(12 * time) / 12, np.full(400, 1e5), 0.0)
-    >>> [round(s.time, 2) for s in found]
-    [0.26, 0.79]
+    >>> [round(s.time, 1) for s in found]
+    [0.3, 0.8]
     """
     some = (weights > 0) & (time > start)
     time, values, weights = time[some], values[some], weights[some]
