@@ -106,6 +106,9 @@ def _spikes(signal, used):
     beside = np.maximum(np.roll(size, 2), np.roll(size, -2))
     lone = far & (size > np.roll(size, 1)) & (size > np.roll(size, -1)) & (beside < 0.35 * size)
     lone[:3] = lone[-3:] = False
+    # The ends have neighbours on one side only: they should lie on the line through the next two.
+    for end, line in ((0, 2.0 * values[1] - values[2]), (-1, 2.0 * values[-2] - values[-3])):
+        lone[end] = abs(values[end] - line) > _SPIKE * 2.0 * max(local[end], 1e-300)
     found[index[lone]] = True
     return found
 
@@ -181,7 +184,7 @@ def bin_edges(time, start, most):
     Examples
     --------
     >>> bin_edges(np.arange(10.0), -1.0, 5)
-    array([0, 2, 4, 6, 8])
+    array([0, 1, 3, 5, 7])
     """
     n = time.size
     if n <= most:

@@ -26,8 +26,10 @@ _COMPARABLE = 2.5
 _SLOW_MISFIT = 0.02
 _SLOW_DEPTH = 0.01
 _BATCHES = (1, 3, 6, 10, 10)
-_RIVALS = 3
-_NEAR_TEMPLATE = 1.5
+# How near a template must come, and how many are followed, once one describes the trace: few
+# where lobes tell, many where only shoulders do.
+_LIKELY = (1.5, 3)
+_LIKELY_SMOOTH = (10.0, 14)
 _DESCRIBED = 1.6
 _LEAST_RADIUS = 8e-8
 
@@ -185,14 +187,20 @@ def explore(problem, candidates):
     for size in _BATCHES:
         batch = candidates[start:start + size]
         if rough and _good(rough[0]):
-            near = _NEAR_TEMPLATE * candidates[0].chi2 + _RIVAL
-            batch = [c for c in candidates[start:start + _RIVALS] if c.chi2 < near]
+            factor, most = _LIKELY if _lobed(problem) else _LIKELY_SMOOTH
+            near = factor * candidates[0].chi2 + _RIVAL
+            batch = [c for c in candidates[start:start + most] if c.chi2 < near]
         rough = sorted([*rough, *_descents(problem, [c.cloud for c in batch])],
                        key=lambda s: s.best.chi2)
         start += size
         if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
     return settle(problem, rough)
+
+
+def _lobed(problem):
+    """Return whether a channel shows the lobes of scattered light."""
+    return any(channel.kind == "scatter" for channel in problem.model.channels)
 
 
 def _good(solution):

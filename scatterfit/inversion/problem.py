@@ -211,13 +211,15 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         extra = problem.extras[i] if problem.extras else np.empty((0, weight.size))
         columns, fixed = linear_columns(channel, signal.shape, extra)
         weighted = (columns * weight).T
-        basis, triangle = np.linalg.qr(weighted)
+        # Columns differ by many powers of ten; of one size, none is taken for nothing.
+        norms = np.maximum(np.sqrt(np.sum(weighted**2, axis=0)), 1e-300)
+        basis, triangle = np.linalg.qr(weighted / norms)
         drifts = _drifts(problem, i)
         slow = sum((value_of(cloud, name) * shape for name, shape in drifts.items()), 0.0)
         fixed = fixed + slow
         target = (problem.bins.values[i] - fixed) * weight
         shadow = basis.T @ target
-        factors = _solve(triangle, shadow)
+        factors = _solve(triangle, shadow) / norms
         coefficients.append(factors)
         fits.append(fixed + factors @ columns)
         residuals.append(target - basis @ shadow)

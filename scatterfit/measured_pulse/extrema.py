@@ -8,6 +8,7 @@ from scatterfit.inversion.verdict import Finding
 from scatterfit.measured_pulse.record import Extremum
 
 _FEW = 3
+_FITS = 1.15
 
 
 def matched_extrema(prepared, fit, curve):
@@ -68,7 +69,9 @@ def extrema_findings(turns, fit):
         return []
     turns = [turn for turn in turns if turn.kind != "shoulder"]
     matched = sum(1 for turn in turns if turn.radius > 0.0)
-    if len(turns) >= _FEW and matched < 0.6 * len(turns):
+    # Where the residuals are noise, turns that lie elsewhere are noise as well.
+    white = fit.chi2_reduced < _FITS and fit.lag1 < 0.1
+    if len(turns) >= _FEW and matched < 0.6 * len(turns) and not white:
         return [Finding("extrema-disagree", (
             f"of {len(turns)} peaks and troughs found without the fit only {matched} lie where "
             "the fitted radius puts them: look at the figure before using this radius"

@@ -35,7 +35,7 @@ from scatterfit.measured_pulse.record import (
 )
 from scatterfit.measured_pulse.settings import fit_options
 
-_RADIUS_FLOOR = 1e-4
+_RADIUS_FLOOR = 1.5e-4
 _RATE_FLOOR = 2e-3
 _SCALE_FLOOR = 5e-3
 _ANGLE_SETTLED = 2e-5

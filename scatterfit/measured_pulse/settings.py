@@ -30,6 +30,8 @@ _ONSET_BINS = 700
 _AGE_AT_ONSET = 0.12
 _DELAYS = 12
 _FEWEST = 1e3
+_USUAL_NUMBER = 1e9
+_LOOSE_NUMBER = 4.0
 _LEAST_SEEN = 1e-7
 _LEAST_STRETCH = 0.01
 
@@ -76,6 +78,9 @@ def fit_options(prepared, angle_base, angle_offsets):
     for name in free:
         names.append(name)
         priors[name] = (0.0, stated[name])
+    if apparatus.transmission is None and not any(d.gain for d in apparatus.detectors):
+        # Nothing but depletion may fix the number: a loose hold keeps it from running off.
+        priors["number"] = (np.log(_USUAL_NUMBER), _LOOSE_NUMBER)
     stretch = _stretch_sigma(prepared)
     if stretch > _LEAST_STRETCH:
         names.append("stretch")
