@@ -53,7 +53,7 @@ def draw_bench(number):
         "receiver": round(float(rng.choice([0.0, 0.2, 1.0])), 2),
         "chamber_path": round(float(rng.choice([0.0, rng.uniform(40, 200)])), 1),
         "constant": round(float(rng.choice([0.0, log_uniform(rng, 0.005, 0.3)])), 4),
-        "independent": number % 3 == 0,
+        "independent": number % 6 == 0,
         "angle_sigma": round(float(rng.uniform(0.08, 0.3)), 3) if rng.random() < 0.25 else 0.0,
         "max_radius": float(rng.choice([6.0, 8.0, 10.0])),
     }

@@ -3,7 +3,7 @@
     python tests/studies/fresh_draws.py --first 1000 --count 500 --out fresh_draws.jsonl
     python tests/studies/fresh_draws.py --summary fresh_draws.jsonl
 
-A file that exists is continued: seeds in it are not drawn again. Every third bench is simulated by
+A file that exists is continued: seeds in it are not drawn again. Every sixth bench is simulated by
 ``independent_pulse.py`` (mark ``I``), the others by scatterfit's own forward model (mark ``S``)
 with growth, sticking and spread of their own. Not part of the test run.
 """
