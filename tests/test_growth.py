@@ -690,14 +690,15 @@ def test_birth_classes_sum_polynomials_exactly(centre, width, tilt, classes):
     for degree in range(2 * classes):
         exact = np.trapezoid(rate * (exact_time - 0.5) ** degree, exact_time) / whole
         assert births.weights @ (births.times - 0.5) ** degree == pytest.approx(exact, abs=3e-6)
-        fine = births.fine_weights @ (births.fine_times - 0.5) ** degree
+        fine = births.finer[0].weights @ (births.finer[0].times - 0.5) ** degree
         assert fine == pytest.approx(exact, abs=3e-6)
     # What is a polynomial in the time of birth is carried over to the finer classes exactly.
     def smooth_in_birth(at):
         return (at - 0.3) ** (classes - 1)
-    carried = births.carry @ smooth_in_birth(births.times)
-    inside = np.abs(births.fine_times - centre) < 3 * width
-    assert carried[inside] == pytest.approx(smooth_in_birth(births.fine_times)[inside], abs=1e-6)
+    finest = births.finer[0]
+    carried = finest.carry @ smooth_in_birth(births.times)
+    inside = np.abs(finest.times - centre) < 3 * width
+    assert carried[inside] == pytest.approx(smooth_in_birth(finest.times)[inside], abs=1e-6)
 
 
 def test_effective_duration_median_and_peak():

@@ -6,6 +6,8 @@ import numpy as np
 
 _NEGLIGIBLE = 1e-6
 _POINTS = 600
+FINER = ((24, 0.012), (12, 0.004))
+"""Numbers of finer classes, and the spread of ln r from which each is needed."""
 
 
 @dataclass(frozen=True)
@@ -24,15 +26,30 @@ class Births:
     """When the birth rate is highest [s]."""
     spread: float
     """Standard deviation of the time of birth [s]."""
-    fine_times: np.ndarray
-    """Births of more classes, for light that varies faster than growth, shape (f,) [s]."""
-    fine_weights: np.ndarray
-    """Share of the droplets in each of them, shape (f,) [-]."""
+    finer: tuple["FinerClasses", ...] = ()
+    """More classes, for light that varies faster than growth; the finest first."""
+
+    @property
+    def last(self):
+        """Return when births end [s]."""
+        return float(self.finer[0].times[-1] if self.finer else self.times[-1])
+
+
+@dataclass(frozen=True)
+class FinerClasses:
+    """The same births in more classes."""
+
+    times: np.ndarray
+    """Shape (f,) [s]."""
+    weights: np.ndarray
+    """Share of the droplets in each, shape (f,) [-]."""
     carry: np.ndarray
-    """From values smooth in the time of birth at the classes to the finer ones, shape (f, c)."""
+    """From values smooth in the time of birth at the solved classes to these, shape (f, c)."""
+    spread: float
+    """Standard deviation of ln r from which they are needed [-]."""
 
 
-def births_from_rate(time, log_rate, classes=6, fine=24):
+def births_from_rate(time, log_rate, classes=6, finer=FINER):
     """Return the classes that stand for births along a nucleation rate.
 
     The classes are the nodes and weights of the Gauss rule whose weight function is the rate,
@@ -47,8 +64,8 @@ def births_from_rate(time, log_rate, classes=6, fine=24):
         ln of the nucleation rate at those times [-]; straight in between.
     classes : int
         Number of classes.
-    fine : int
-        Number of finer classes.
+    finer : sequence of tuple
+        Numbers of finer classes, and the spread of ln r from which each is needed [-].
 
     Returns
     -------
@@ -85,14 +102,17 @@ def births_from_rate(time, log_rate, classes=6, fine=24):
     total = float(share.sum())
     share = share / total
     nodes, weights = _gauss_rule(dense, share, classes)
-    fine_nodes, fine_weights = _gauss_rule(dense, share, fine)
+    more = []
+    for count, spread in finer:
+        points, shares = _gauss_rule(dense, share, count)
+        more.append(FinerClasses(points, shares, _polynomial(nodes, points), spread))
     cumulative = np.cumsum(share) - 0.5 * share
     centre = float(share @ dense)
     return Births(
         times=nodes, weights=weights, median=float(np.interp(0.5, cumulative, dense)),
         effective=total, peak=float(dense[np.argmax(rate)]),
         spread=float(np.sqrt(share @ (dense - centre) ** 2)),
-        fine_times=fine_nodes, fine_weights=fine_weights, carry=_polynomial(nodes, fine_nodes),
+        finer=tuple(more),
     )
 
 
@@ -115,8 +135,7 @@ def births_at_once(time):
     array([1.])
     """
     at = np.array([float(time)])
-    return Births(at, np.ones(1), float(time), 0.0, float(time), 0.0, at, np.ones(1),
-                  np.ones((1, 1)))
+    return Births(at, np.ones(1), float(time), 0.0, float(time), 0.0)
 
 
 def _polynomial(nodes, points):

@@ -20,7 +20,7 @@ from scatterfit.droplet_growth.pressure import smooth, undo_lag
 from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
 
 _FEW = 3
-_FEW_FINE = 9
+_FEW_FINE = ((9, 0.008),)
 _BIRTH_RADIUS = 3e-9
 # How long the gas takes from a stated hold to the growth stage, in holds (common practice).
 _RECOMPRESSION = 0.2

@@ -6,8 +6,6 @@ import numpy as np
 
 from scatterfit.forward.growth_model import LinearGrowth
 
-_RESOLVED = 0.004
-
 
 @dataclass(frozen=True)
 class Segment:
@@ -78,19 +76,21 @@ def cloud_state(linear, cloud, time, names=(), births=None):
     }
     density = density * np.exp(_thinner(linear, cloud, density_by))
     whole = _classes(linear, cloud, clock, place, names)
-    segments = (whole,)
-    if births is not None and births.fine_times.size > growth.weights.size:
-        end = _unresolved(growth, births, clock)
-        if end:
-            first = tuple(part[:end] for part in place)
-            early = _classes(linear, cloud, clock[:end], first, names, births)
-            late = Segment(
-                whole.radius[:, end:], whole.weights,
-                {name: rows[:, end:] for name, rows in whole.log_radius_by.items()},
-            )
-            segments = (early, late) if end < clock.size else (early,)
+    segments, start = [], 0
+    for finer in births.finer if births is not None else ():
+        end = max(_unresolved(growth, finer.spread, clock), start)
+        if end > start:
+            part = slice(start, end)
+            here = tuple(values[part] for values in place)
+            segments.append(_classes(linear, cloud, clock[part], here, names, (births, finer)))
+        start = end
+    if start < clock.size:
+        segments.append(Segment(
+            whole.radius[:, start:], whole.weights,
+            {name: rows[:, start:] for name, rows in whole.log_radius_by.items()},
+        ))
     return CloudState(
-        whole.radius, density, whole.log_radius_by, density_by, linear, segments
+        whole.radius, density, whole.log_radius_by, density_by, linear, tuple(segments)
     )
 
 
@@ -103,12 +103,12 @@ def _classes(linear, cloud, clock, place, names, births=None):
     square = hermite(square, rate, index, t, width)
     slope = _straight(rate, index, t) if "delay" in names else None
     if births is not None:
-        span = times[-1] - times[0]
-        longer = span / (births.times[-1] - births.times[0]) if span > 0.0 else 1.0
-        times = times[0] + longer * (births.fine_times - births.times[0])
-        weights, square = births.fine_weights, births.carry @ square
-        carry = None if carry is None else births.carry @ carry
-        slope = None if slope is None else births.carry @ slope
+        plain, finer = births
+        longer = (times[-1] - times[0]) / (plain.times[-1] - plain.times[0])
+        times = times[0] + longer * (finer.times - plain.times[0])
+        weights, square = finer.weights, finer.carry @ square
+        carry = None if carry is None else finer.carry @ carry
+        slope = None if slope is None else finer.carry @ slope
     length = growth.length[0]
     born = clock > times[:, None]
     # Before its birth a class's (r + l)^2 is carried on backwards: there it has no size.
@@ -122,14 +122,16 @@ def _classes(linear, cloud, clock, place, names, births=None):
     return Segment(np.where(born, safe, 0.0), weights, by)
 
 
-def _unresolved(growth, births, clock):
-    """Return how many of the first samples have radii that the few classes do not resolve."""
-    middle = growth.weights.size // 2
-    length = growth.length[0]
-    floor = (growth.start_radius + length) ** 2
-    root = np.sqrt(np.maximum(growth.square[0, middle], floor))
-    spread = births.spread * growth.square_rate[0, middle] / (2.0 * root * (root - length))
-    wide = (spread > _RESOLVED) | (growth.time < growth.birth_times[0].max())
+def _unresolved(growth, resolved, clock):
+    """Return how many of the first samples have radii spread by birth by more than a limit.
+
+    Droplets born early grew in the supersaturation of the hold: their radii differ by more than
+    their ages say, so the spread is that of the solved classes.
+    """
+    log_radius = np.log(growth.radius[0])
+    mean = growth.weights @ log_radius
+    spread = np.sqrt(np.maximum(growth.weights @ (log_radius - mean) ** 2, 0.0))
+    wide = (spread > resolved) | (growth.time < growth.birth_times[0].max())
     last = growth.time[np.flatnonzero(wide)[-1]] if wide.any() else -np.inf
     return int(np.searchsorted(clock, last, side="right"))
 

@@ -228,7 +228,7 @@ def _birth_times(setup, cloud, names):
             stretch[1 + list(names).index("stretch")] += STEPS["stretch"]
         elif not cloud.stretch:
             return setup.births.times
-        end = setup.births.fine_times[-1]
+        end = setup.births.last
         return end + np.exp(stretch)[:, None] * (setup.births.times - end)
     clouds = [cloud] * (len(names) + 1)
     for i, name in enumerate(names):

@@ -8,7 +8,7 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
-from scatterfit.forward.growth_model import Cloud, no_shifts, per_mole
+from scatterfit.forward.growth_model import Cloud, grow, no_shifts, per_mole
 from scatterfit.forward.light import spread_table
 
 _NODES = 70
@@ -62,7 +62,8 @@ def search(problem, delays, widest, count=6):
     if axis == "vapour":
         widest = min(_VAPOUR_SIGMAS * problem.priors["vapour"][1], 0.3)
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
-    levels = _levels(setup)
+    lone = grow(setup, Cloud(number=0.0))
+    levels = _levels(setup, max(float(lone.radius[0].max()), 1e-7))
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
     tables = [spread_table(problem.model.light, _VARIANCE * _RATIO**k) for k in range(_SPREADS)]
     width = problem.priors.get(axis, (0.0, 0.15))[1]
@@ -70,7 +71,7 @@ def search(problem, delays, widest, count=6):
     found = []
     for delay in delays:
         radius, density = _sampled(curves, scales, problem.bins.time - delay)
-        which = _spread_by_birth(setup, radius[0, scales.size // 2], problem.bins.time)
+        which = _spread_by_birth(lone, problem.bins.time - delay)
         misfit, amplitude = _misfits(problem, (tables, which), radius, density)
         misfit = misfit + _disagreement(problem, amplitude, level) + (scales / width) ** 2
         for i in _minima(misfit):
@@ -207,7 +208,7 @@ def _scale_count(problem, widest):
     return int(np.clip(np.ceil(2.0 * widest * 0.5 * phase / _PHASE), 25, 90)) | 1
 
 
-def _levels(setup):
+def _levels(setup, free):
     """Return ln number densities from no depletion to far more droplets than vapour for 1 um."""
     path = setup.path
     saturated = float(setup.substance.saturation_pressure(path.reference_temperature))
@@ -215,32 +216,20 @@ def _levels(setup):
                  0.1 * setup.vapour_fraction)
     moles = path.reference_pressure / (GAS_CONSTANT * path.reference_temperature)
     # As many droplets of the radius that free growth would reach as use up the share.
-    free = _free_radius(setup)
     volume = 4.0 / 3.0 * np.pi * free**3 / setup.properties.molar_volume
     return np.log(np.array(_DEPLETION) * 0.6 * excess * moles / volume)
 
 
-def _free_radius(setup):
-    """Return the radius that a lone droplet reaches [m]."""
-    growth = solve_cloud(
-        setup.properties, _thinned(setup.path, setup.births.median),
-        (np.array([setup.births.median]), np.ones(1)),
-        CloudParameters(*(np.array([v]) for v in (
-            1e-6, 1.0, setup.apparatus.vapour.mass_accommodation,
-            setup.apparatus.vapour.thermal_accommodation, setup.vapour_fraction, 1.0))),
-        setup.start_radius,
-    )
-    return max(float(growth.radius[0, 0].max()), 1e-7)
-
-
-def _spread_by_birth(setup, radius, time):
+def _spread_by_birth(lone, clock):
     """Return which table each bin needs: births spread young droplets far more than old ones."""
-    if not setup.births.spread > 0.0:
-        return np.zeros(time.size, dtype=np.intp)
-    young = radius <= 0.0
-    log_radius = np.log(np.where(young, 1.0, radius))
-    speed = np.where(young, np.inf, np.abs(np.gradient(log_radius, time)))
-    relative = np.minimum(setup.births.spread * speed, 1.0) ** 2 / _VARIANCE
+    if lone.weights.size == 1:
+        return np.zeros(clock.size, dtype=np.intp)
+    log_radius = np.log(lone.radius[0])
+    mean = lone.weights @ log_radius
+    variance = lone.weights @ (log_radius - mean) ** 2
+    # Until all are born there is no telling.
+    variance = np.where(lone.time < lone.birth_times[0].max(), 1.0, variance)
+    relative = np.interp(clock, lone.time, variance) / _VARIANCE
     level = np.rint(np.log(1.0 + relative) / np.log(_RATIO))
     return np.clip(level, 0, _SPREADS - 1).astype(np.intp)
 
