@@ -14,7 +14,8 @@ _KINDS = 12
 def make_night(folder, count, *, samples=5000, seed=1):
     """Write a chamber file and so many traces that all differ; return both places.
 
-    Numbers of droplets span a factor of 30; the noise is new in every trace.
+    Numbers of droplets span a factor of 30; the noise is new in every trace. Those of more
+    droplets reach the detector's full scale, as happens in a night.
 
     Parameters
     ----------
@@ -36,13 +37,11 @@ def make_night(folder, count, *, samples=5000, seed=1):
     chamber = folder / "bench.toml"
     chamber.write_text(chamber_template(), encoding="utf-8")
     bench = scatterfit.read_chamber(chamber)
-    rng = np.random.default_rng(seed)
-    kinds = [scatterfit.simulate(bench, number=float(number), rate=samples / 0.1,
-                                 seed=int(rng.integers(1 << 30)))[0]
-             for number in np.geomspace(5e8, 1.5e10, min(_KINDS, count))]
-    for index in range(count):
-        pulse = kinds[index % len(kinds)]
-        columns = {name: values[:samples] + 0.002 * np.std(values) * rng.standard_normal(samples)
-                   for name, values in pulse.columns.items()}
-        write_trace(traces / f"p{index:05d}.csv", pulse.time[:samples], columns)
+    numbers = np.geomspace(2e8, 6e9, min(_KINDS, count))
+    for kind, number in enumerate(numbers.tolist()):
+        names = range(kind, count, len(numbers))
+        pulses = scatterfit.simulate(bench, count=len(names), number=number, rate=samples / 0.1,
+                                     seed=seed + kind)
+        for index, pulse in zip(names, pulses, strict=True):
+            write_trace(traces / f"p{index:05d}.csv", pulse.time, pulse.columns)
     return chamber, traces

@@ -24,7 +24,6 @@ _HOPELESS = 4.0
 _CONTINUED = 3
 _COMPARABLE = 2.5
 _SLOW_MISFIT = 0.02
-_SLOW_DEPTH = 0.01
 _BATCHES = (1, 3, 6, 10, 10)
 # How near a template must come, and how many are followed, once one describes the trace: few
 # where lobes tell, many where only shoulders do.
@@ -112,7 +111,7 @@ def coarse_model(model):
     return replace(model, setup=replace(setup, path=path, births=setup.few_births))
 
 
-def coarse_bins(time, channels, onset):
+def coarse_bins(time, channels, onset, slow):
     """Return few bins for first looks, whose weights allow for a slow misfit.
 
     A coarse model is good to a percent or two, and transmitted light alone is so precise that
@@ -127,6 +126,8 @@ def coarse_bins(time, channels, onset):
         Channels of the trace.
     onset : float
         About when droplets are born [s].
+    slow : float
+        Misfit let pass where there is only transmitted light, over its change [-].
 
     Returns
     -------
@@ -134,10 +135,10 @@ def coarse_bins(time, channels, onset):
         With lowered weights.
     """
     kinds = [data.kind for data in channels]
-    return blunted(bin_channels(time, channels, bin_edges(time, onset, _COARSE)), kinds)
+    return blunted(bin_channels(time, channels, bin_edges(time, onset, _COARSE)), kinds, slow)
 
 
-def blunted(bins, kinds):
+def blunted(bins, kinds, slow):
     """Return bins whose weights allow for a misfit of a percent or two of the light.
 
     Parameters
@@ -146,6 +147,8 @@ def blunted(bins, kinds):
         Binned channels.
     kinds : sequence of str
         ``"scatter"`` or ``"transmission"`` of each.
+    slow : float
+        Misfit let pass where there is only transmitted light, over its change [-].
 
     Returns
     -------
@@ -159,7 +162,7 @@ def blunted(bins, kinds):
         light = np.maximum(values - np.percentile(values[some], 2.0), 0.0) if some.any() else values
         allowed = _SLOW_MISFIT * light
         if kind == "transmission":
-            allowed = (_SLOW_DEPTH if alone else 0.0) * np.ptp(values[some])
+            allowed = (slow if alone else 0.0) * np.ptp(values[some])
         weights.append(weight / np.sqrt(1.0 + (allowed * weight) ** 2))
     return replace(bins, weights=np.array(weights))
 

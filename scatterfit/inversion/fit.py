@@ -33,6 +33,7 @@ from scatterfit.inversion.uncertainty import channel_inflation
 _FINE = 800
 _FOLLOWED = 5
 _SOFTENINGS = 3
+_SLOW_MISFITS = (0.01, 0.004, 0.025)
 _HOP_ROUNDS = 5
 _HOPS_SETTLED = 1e-3
 
@@ -84,16 +85,25 @@ def fit_pulse(model, time, channels, options):
         Best cloud, rivals and residuals.
     """
     channels = tuple(channels)
-    coarse = coarse_bins(time, channels, options.onset)
+    alone = all(data.kind == "transmission" for data in channels)
+    # Shoulders of transmitted light alone are faint: several ways of looking, the best is kept.
+    looks = _SLOW_MISFITS if alone else _SLOW_MISFITS[:1]
+    fits = [_one_look(model, time, channels, options, slow) for slow in looks]
+    return min(fits, key=lambda fit: fit.chi2_reduced)
+
+
+def _one_look(model, time, channels, options, slow):
+    """Return the best cloud found with one idea of what misfit to let pass at first."""
+    coarse = coarse_bins(time, channels, options.onset, slow)
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, CANDIDATES)
     found = explore(problem, candidates)
-    channels, found = _without_hops(problem, found, time, channels, options.onset)
+    channels, found = _without_hops(problem, found, time, channels, (options.onset, slow))
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
     kinds = [data.kind for data in channels]
-    start = fine if "scatter" in kinds else blunted(fine, kinds)
+    start = fine if "scatter" in kinds else blunted(fine, kinds, slow)
     best, others = best_of(_with(problem, start, ((),) * len(channels)), found)
     best = Solution(evaluate(_with(problem, fine, ((),) * len(channels)), best.best.cloud,
                              linear=best.best.state.linear), best.iterations, best.converged)
@@ -138,7 +148,7 @@ def _softened(problem, best):
     return problem, best
 
 
-def _without_hops(problem, found, time, channels, onset):
+def _without_hops(problem, found, time, channels, look):
     """Return the channels with the laser's hops decided by the fit, and the clouds fitted anew."""
     for _ in range(_HOP_ROUNDS):
         if all(data.hops is None for data in channels):
@@ -149,7 +159,7 @@ def _without_hops(problem, found, time, channels, onset):
         moved = sum(int(np.sum(a.hops.upper != b.hops.upper))
                     for a, b in zip(again, channels, strict=True) if a.hops is not None)
         channels = again
-        problem = replace(problem, bins=coarse_bins(time, channels, onset))
+        problem = replace(problem, bins=coarse_bins(time, channels, *look))
         found = follow(problem, [s.best.cloud for s in found[:_FOLLOWED]])
         if moved < _HOPS_SETTLED * time.size:
             break
