@@ -359,6 +359,18 @@ def test_a_limit_of_time_that_is_kept_leaves_no_trace():
     assert sum(range(1000)) == 499500
 
 
+def test_a_limit_of_time_leaves_nothing_for_a_profiler_to_trip_over():
+    """Python 3.11 loops for ever under a profiler where an asked-for exception was taken back."""
+    code = ("from scatterfit.overnight.deadline import time_limit, TookTooLongError\n"
+            "import contextlib, cProfile, time\n"
+            "with time_limit(60): pass\n"
+            "for _ in range(20):\n"
+            "    with contextlib.suppress(TookTooLongError), time_limit(1e-3): time.sleep(1e-3)\n"
+            "cProfile.run('sum(map(abs, range(1000)))')\n")
+    done = subprocess.run([sys.executable, "-c", code], timeout=60, capture_output=True, check=True)
+    assert b"function calls" in done.stdout
+
+
 # Kills, and several processes at once
 
 
