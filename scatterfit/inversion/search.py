@@ -19,6 +19,8 @@ _RATIO = 4.0
 _SPREADS = 5
 _PHASE = 0.35
 _GRID_ERROR = 0.05
+_FAINT = 0.01
+_CERTAIN = 4.0
 _DEPTH_ERROR = 0.01
 _VAPOUR_SIGMAS = 2.5
 
@@ -257,12 +259,14 @@ def _misfits(problem, spread, radius, density):
             shape = (channel.gain or 1.0) * shape * np.exp(-depth)
         else:
             shape, data, weight = _optical_depth(depth, data, weight, everywhere)
-        misfit, amplitude = _line_fit(shape, data, weight)
+        misfit, amplitude, certain = _line_fit(shape, data, weight)
         total += misfit
         known = channel.gain is not None or channel.kind == "transmission"
         amplitudes.append(np.log(np.maximum(amplitude, 1e-30)) if known
                           else np.full(total.shape, np.nan))
-        total += np.where(amplitude > 0.0, 0.0, 1e3 + 0.1 * np.abs(misfit))
+        # Light cannot be negative, but a faint channel may come out so by its noise.
+        below = (amplitude < 0.0) & (certain > _CERTAIN)
+        total += np.where(below, 1e3 + 0.1 * np.abs(misfit), 0.0)
     return total, np.array(amplitudes)
 
 
@@ -277,7 +281,9 @@ def _blunted(weight, data, kind):
         return weight
     rest = np.percentile(data[some], 2.0)
     top = np.ptp(data[some]) if kind == "transmission" else np.maximum(data - rest, 0.0)
-    coarse = (_DEPTH_ERROR if kind == "transmission" else _GRID_ERROR) * top
+    # Young droplets are faint and grow in a way that the grid knows least: a floor for them.
+    coarse = _DEPTH_ERROR * top if kind == "transmission" else _GRID_ERROR * top + (
+        _FAINT * np.ptp(data[some]))
     return np.where(some, weight / np.sqrt(1.0 + (coarse * weight) ** 2), 0.0)
 
 
@@ -290,7 +296,7 @@ def _optical_depth(depth, data, weight, born):
 
 
 def _line_fit(shape, data, weight):
-    """Return the misfit of a factor times each shape plus an offset, and the factor, (l, s)."""
+    """Return misfit, factor and the factor over its deviation of each shape plus an offset."""
     square = weight**2
     total = square.sum()
     centred = data - (square @ data) / total
@@ -298,7 +304,8 @@ def _line_fit(shape, data, weight):
     top = shape @ (square * centred)
     power = (shape * shape) @ square - total * mean**2
     amplitude = top / np.maximum(power, 1e-300)
-    return square @ centred**2 - amplitude * top, amplitude
+    certain = np.abs(top) / np.sqrt(np.maximum(power, 1e-300))
+    return square @ centred**2 - amplitude * top, amplitude, certain
 
 
 def _disagreement(problem, amplitude, level):
