@@ -12,6 +12,7 @@ import argparse
 import json
 import os
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -64,7 +65,8 @@ def run(seed):
     ratio, start = 0.78, true.chamber.pressure
     low = hold_pressure(true, Scenario(number, DURATION, RATE, NOISE, HOLD, ratio))
     levels = (start, low, ratio * start)
-    setup = growth_setup(true, fine, pressure_profile(fine, levels, HOLD), classes=24)
+    setup = growth_setup(true, fine, pressure_profile(fine, levels, HOLD), classes=48)
+    setup = replace(setup, births=replace(setup.births, finer=()))
     kernel, relative, _ = pulse_kernel(setup, store)
     model = pulse_model(setup, kernel, relative, (np.radians(ANGLE_SIGMA * angle),))
     cloud = Cloud(number=np.log(number), scale=float(GROWTH_SIGMA * rng.standard_normal()),

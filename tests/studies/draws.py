@@ -1,5 +1,7 @@
 """Random benches and pulses for ``fresh_draws.py``: what is drawn and how it is recorded."""
 
+from dataclasses import replace
+
 import independent_pulse as ip
 import numpy as np
 from scipy.interpolate import CubicHermiteSpline
@@ -205,6 +207,8 @@ def simulate_shared(pulse, rng):
         pressure = pressure + 2e-4 * pulse["p0"] * rng.standard_normal(count)
     else:
         setup = growth_setup(apparatus, duration=pulse["duration"], classes=FINE_CLASSES)
+    # All classes carry light: none of the coarser stand-ins that the fit uses.
+    setup = replace(setup, births=replace(setup.births, finer=()))
     kernel, relative, _ = pulse_kernel(setup, default_store())
     straight = (0.0,) * len(apparatus.detectors)
     model = pulse_model(setup, kernel, relative, straight)
