@@ -63,6 +63,8 @@ def accepted():
         "chi2_reduced": 1.013, "residual_lag1": 0.012,
         "budget": [{"input": "chamber.temperature_K", "quantity": "final_radius_um",
                     "sigma": 0.001, "share": 0.62}],
+        "learnt": [{"input": "chamber.temperature_K", "moved_sigmas": 0.3, "sigma_left": 0.8}],
+        "monte_carlo": None,
         "provenance": {"overrides": {"chamber.temperature_K": 297.15},
                        "exclude_ms": [[10.0, 12.5]]},
     }
@@ -75,6 +77,7 @@ def rejected():
         "concentration_by": dict.fromkeys(("gain", "transmission", "depletion")),
         "curve": {"time_ms": [], "radius_um": [], "sigma_um": []}, "alternatives": [],
         "chi2_reduced": None, "residual_lag1": None, "budget": [], "optical_depth": None,
+        "learnt": [],
         "nucleation": dict.fromkeys(accepted()["nucleation"]), "provenance": {},
     }
 

@@ -54,6 +54,28 @@ def fit_options(prepared, angle_base, angle_offsets):
         Names, priors, onset and delays to search.
     """
     setup = prepared.setup
+    names, priors, limits = _free(prepared, angle_base, angle_offsets)
+    # A bench whose temperature or vapour is wrong should get its radius, and be told.
+    widest = float(np.clip(_WIDEST_SIGMAS * growth_scale_sigma(setup), _LEAST_WIDE, _WIDEST))
+    if setup.clock_known:
+        priors["delay"] = (0.0, _CLOCK)
+        return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest, limits)
+    bins = bin_channels(
+        prepared.time, prepared.channels,
+        bin_edges(prepared.time, float(prepared.time[0]), _ONSET_BINS),
+    )
+    onset = find_onset(bins, [c.kind for c in prepared.channels])
+    # At a thirtieth of its light a droplet has a third of its size, a tenth of its age.
+    rest = float(prepared.time[-1]) - onset
+    lag = _visible_after(prepared) + _AGE_AT_ONSET * rest
+    priors["delay"] = (onset - 0.4 * lag, _LOOSE_CLOCK + lag)
+    delays = tuple(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
+    return FitOptions(tuple(names), priors, onset, delays, widest, limits)
+
+
+def _free(prepared, angle_base, angle_offsets):
+    """Return names, priors and limits of the free parameters, the delay's prior left out."""
+    setup = prepared.setup
     apparatus = setup.apparatus
     names = ["number", "scale", "delay", "variance", "accommodation", "bend", "depletion"]
     priors = {
@@ -90,23 +112,7 @@ def fit_options(prepared, angle_base, angle_offsets):
         names.append("threshold")
         known = apparatus.seed.diameter is not None
         priors["threshold"] = (0.0, _THRESHOLD if known else _UNKNOWN_THRESHOLD)
-    # A bench whose temperature or vapour is wrong should get its radius, and be told.
-    widest = float(np.clip(_WIDEST_SIGMAS * growth_scale_sigma(setup), _LEAST_WIDE, _WIDEST))
-    if setup.clock_known:
-        priors["delay"] = (0.0, _CLOCK)
-        return FitOptions(tuple(names), priors, setup.births.median, (0.0,), widest,
-                          limits)
-    bins = bin_channels(
-        prepared.time, prepared.channels,
-        bin_edges(prepared.time, float(prepared.time[0]), _ONSET_BINS),
-    )
-    onset = find_onset(bins, [c.kind for c in prepared.channels])
-    # At a thirtieth of its light a droplet has a third of its size, a tenth of its age.
-    rest = float(prepared.time[-1]) - onset
-    lag = _visible_after(prepared) + _AGE_AT_ONSET * rest
-    priors["delay"] = (onset - 0.4 * lag, _LOOSE_CLOCK + lag)
-    delays = tuple(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
-    return FitOptions(tuple(names), priors, onset, delays, widest, limits)
+    return names, priors, limits
 
 
 def _most_droplets(setup):
