@@ -1,8 +1,10 @@
 """Kills at random moments, and files damaged at random: nothing lost, nothing twice.
 
-Run ``python benchmarks/night_safety.py``; the numbers go to ``results/night_safety.json``.
+Run ``python benchmarks/night_safety.py``; the numbers go to ``results/night_safety.json``. With
+``--pulses N`` and ``--files N`` other numbers than 200 pulses and 1,000 damaged files are used.
 """
 
+import argparse
 import json
 import os
 import shutil
@@ -45,12 +47,12 @@ def stored(path):
         return 0
 
 
-def kills(folder):
+def kills(folder, pulses):
     """Kill a batch at 20 random moments; compare with one that was left alone."""
-    chamber, traces = make_night(folder, _PULSES, samples=1000)
+    chamber, traces = make_night(folder, pulses, samples=1000)
     killed, alone = folder / "killed.sqlite", folder / "alone.sqlite"
     rng = np.random.default_rng(11)
-    targets = np.sort(rng.integers(0, _PULSES - 5, _KILLS))
+    targets = np.sort(rng.integers(0, pulses - 5, _KILLS))
     reached = []
     for target in targets:
         with subprocess.Popen(command(chamber, traces, killed), stdout=subprocess.DEVNULL,
@@ -63,13 +65,13 @@ def kills(folder):
     for out in (killed, alone):
         subprocess.run(command(chamber, traces, out), check=True, capture_output=True)
     one, other = rows_of(killed), rows_of(alone)
-    return {"pulses": _PULSES, "kills": _KILLS, "stored_at_each_kill": reached,
+    return {"pulses": pulses, "kills": _KILLS, "stored_at_each_kill": reached,
             "rows": len(one), "same_as_left_alone": one == other,
             "differing": sum(one.get(trace) != row for trace, row in other.items())}
 
 
-def damaged(folder):
-    """Fit 1,000 files damaged at random; count what came of them."""
+def damaged(folder, files):
+    """Fit files damaged at random; count what came of them."""
     sys.path.insert(0, str(HERE.parent / "tests"))
     from test_batch import mutated
 
@@ -78,7 +80,7 @@ def damaged(folder):
     bad = folder / "bad"
     bad.mkdir()
     rng = np.random.default_rng(12)
-    for index in range(_DAMAGED):
+    for index in range(files):
         content = mutated(contents[index % len(contents)], rng)
         (bad / f"m{index:04d}.csv").write_bytes(content)
     begun = time.perf_counter()
@@ -92,18 +94,22 @@ def damaged(folder):
         if row["reasons"] in {"internal-error", "worker-died", "took-too-long"}:
             [reason] = open_results(folder / "bad.sqlite").pulse(row["trace"]).reasons
             surprises.append(reason.text)
-    return {"files": _DAMAGED, "rows": sum(verdicts.values()), "verdicts": dict(verdicts),
+    return {"files": files, "rows": sum(verdicts.values()), "verdicts": dict(verdicts),
             "reasons": dict(reasons), "surprises": surprises,
             "seconds": time.perf_counter() - begun}
 
 
 def main():
     """Measure and store."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--pulses", type=int, default=_PULSES)
+    parser.add_argument("--files", type=int, default=_DAMAGED)
+    sizes = parser.parse_args()
     found = {}
-    for study in (kills, damaged):
+    for study, size in ((kills, sizes.pulses), (damaged, sizes.files)):
         folder = Path(tempfile.mkdtemp())
         try:
-            found[study.__name__] = study(folder)
+            found[study.__name__] = study(folder, size)
         finally:
             shutil.rmtree(folder)
         print(json.dumps(found[study.__name__], indent=2), flush=True)
