@@ -245,6 +245,8 @@ def _verdict(fit, reasons, left):
     # A lobe is only as sure as the fit that tells it from the next.
     unsure = scatter and ((fit.chi2_reduced > _UNSURE and fit.lag1 > 0.3)
                           or ("few-extrema" in codes and noisy and fit.lag1 > 0.05))
+    # Without lobes the radius rests on the very growth rate that is in doubt here.
+    unsure = unsure or {"few-extrema", "growth-scale-off"} <= codes
     return "ambiguous" if left or unsure or "extrema-disagree" in codes else "accepted"
 
 
