@@ -27,9 +27,9 @@ _SLOW_MISFIT = 0.02
 _BATCHES = (1, 3, 6, 10, 10)
 # How near a template must come, and how many are followed, once one describes the trace: few
 # where lobes tell, many where only shoulders do.
-_LIKELY = (1.5, 3)
+_LIKELY = (1.6, 10)
 _LIKELY_SMOOTH = (10.0, 14)
-_DESCRIBED = 1.6
+_DESCRIBED = 1.25
 _LEAST_RADIUS = 8e-8
 
 
