@@ -118,7 +118,7 @@ def _one_look(model, time, channels, options, slow):
         fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
         problem = _with(problem, fine, disturbances)
         best = _again(problem, best)
-        problem, best, disturbances = _undisturbed(problem, fine, best)
+        problem, best, disturbances = _undisturbed(problem, fine, best, disturbances)
     sharp = problem
     problem, best = _softened(problem, best)
     best = polish(problem, best)
@@ -166,9 +166,9 @@ def _without_hops(problem, found, time, channels, look):
     return channels, found
 
 
-def _undisturbed(problem, fine, best):
+def _undisturbed(problem, fine, best, known=None):
     """Return the problem with drift and hum, where there are any, and the best cloud in it."""
-    disturbances = ((),) * len(problem.model.channels)
+    disturbances = known or ((),) * len(problem.model.channels)
     problem = _with(problem, fine, disturbances)
     for _ in range(3):
         again = find_disturbances(problem, best.best, disturbances)
