@@ -264,8 +264,10 @@ def simulate_independent(pulse, rng):
     truth = cloud.truth
     gas_index = float(gas.refractive_index(
         pulse["wavelength"] * 1e-9, truth["T_growth"], truth["p_growth_kPa"] * 1e3))
-    index = pulse["index"] or float(np.real(liquid.refractive_index(
-        pulse["wavelength"] * 1e-9, truth["T_growth"] + 5.0))) + nature.index_shift
+    state = (truth["T_growth"], truth["p_growth_kPa"] * 1e3, pulse["fraction"])
+    warmth = ip.droplet_flux(props, np.array([1e-6]), np.array([state[0]]), state, nature)[1]
+    index = pulse["index"] or nature.index_shift + float(np.real(
+        liquid.refractive_index(pulse["wavelength"] * 1e-9, float(warmth[0]))))
     word = {"perpendicular": np.pi / 2, "parallel": 0.0, "unpolarized": None}
     turn = word[pulse["polarization"]] if isinstance(pulse["polarization"], str) else np.radians(
         pulse["polarization"])

@@ -84,7 +84,7 @@ def summarise(lines):
         ("the same: within 0.1 %", share([abs(x["er"]) < 1e-3 for x in good])),
         ("the same by scatterfit's own simulation; by the independent one",
          "; ".join(share([abs(x["er"]) < 1e-3 for x in good if x["sim"] == s]) for s in "SI")),
-        ("five times along the curve: largest error in size, %", spread([x["ec"] for x in good], 100)),
+        ("five times along the curve: largest error, %", spread([x["ec"] for x in good], 100)),
         ("the same: within 0.3 %", share([x["ec"] < 3e-3 for x in good])),
         ("radius within 1 sigma; 2 sigma; 3 sigma",
          "; ".join(within(good, "er", "sr", n) for n in (1, 2, 3))),
