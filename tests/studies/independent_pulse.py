@@ -23,6 +23,8 @@ FIRST_RADIUS = 3e-9
 CLASSES = 48
 COLDEST = 213.0
 SUBCLASSES = 240
+SIZE_STEP = 0.001
+"""Of the size parameter: resonances are narrow, and 0.004 leaves errors of a percent."""
 
 
 @dataclass(frozen=True)
@@ -313,7 +315,7 @@ def light_tables(optics, relative_index, gas_index, largest):
     """Return exact cross sections on a fine even grid of radius: detectors, extinction, loss."""
     wavelength, polarization, cones, receiver = optics
     k = 2 * np.pi * gas_index / wavelength
-    x = np.arange(0.02, k * largest, 0.004)
+    x = np.arange(0.02, k * largest, SIZE_STEP)
     rows = []
     area = np.pi * (x / k) ** 2
     for angle, half in cones:
