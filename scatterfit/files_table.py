@@ -60,6 +60,11 @@ def read_table(path):
     except OSError as error:
         raise _refused(path, f"cannot be read: {error.strerror or error}") from error
     header, cells, rows = _cells(path, lines)
+    if rows and "excluded" in header:
+        # What a person has excluded in a ledger stays excluded in its export.
+        at = header.index("excluded")
+        kept = [i for i, row in enumerate(cells) if str(row[at] or "0").strip() in ("0", "0.0", "")]
+        cells, rows = [cells[i] for i in kept], [rows[i] for i in kept]
     if not rows:
         raise _refused(path, "no pulses; needed are a row of column names and a row a pulse")
     columns = dict(zip(header, zip(*cells, strict=True), strict=True))

@@ -335,3 +335,15 @@ def test_rates_from_a_ledger(capsys, tmp_path):
     assert isotherm["pulses"] == 8
     assert isotherm["slope"]["value"] == pytest.approx(30.0, rel=1e-6)
     assert result["substance_assumed"] is False
+
+
+def test_pulses_excluded_in_a_ledger_stay_excluded_in_its_export(tmp_path):
+    """The exported column ``excluded`` is 1 where a person has excluded the pulse."""
+    from scatterfit.files_table import read_table
+
+    path = tmp_path / "night.csv"
+    path.write_text(
+        "trace,nucleation_temperature_K,nucleation_saturation_ratio,nucleation_rate_per_cm3_s,excluded\n"
+        "a.csv,250,9.0,1e7,0\nb.csv,250,9.2,2e7,1\nc.csv,250,9.4,3e7,0\n", encoding="utf-8")
+    table = read_table(path)
+    assert list(table.names) == ["a.csv", "c.csv"]

@@ -4,6 +4,9 @@ import numpy as np
 
 _CONFIDENCE = 2.5
 _WIDEST_FRACTION = 8
+_BESIDE = 2
+_SPIKE = 30.0
+_ABSURD = 0.1
 
 
 def smooth(values):
@@ -37,7 +40,7 @@ def smooth(values):
     >>> float(abs(smoothed - ramp).max()) < 3e-3
     True
     """
-    values = _bridge_gaps(np.asarray(values, dtype=float))
+    values = _bridge_gaps(_without_spikes(np.asarray(values, dtype=float)))
     count = values.size
     noise = _noise(values)
     widest = max(count // _WIDEST_FRACTION, 1)
@@ -59,6 +62,24 @@ def smooth(values):
         best = np.where(growing, mean, best)
         half = half + 1 if half < 2 else half * 2
     return best, noise
+
+
+def _without_spikes(values):
+    """Return the record with samples that stand alone and far away taken out (not a number)."""
+    good = np.flatnonzero(np.isfinite(values))
+    if good.size < 2 * _BESIDE + 1:
+        return values
+    kept = values[good]
+    padded = np.pad(kept, _BESIDE, mode="edge")
+    middle = np.median(
+        np.lib.stride_tricks.sliding_window_view(padded, 2 * _BESIDE + 1), axis=1
+    )
+    apart = np.abs(kept - middle)
+    # A steep expansion moves by percents a sample; what is off by a tenth alone is no pressure.
+    far = apart > np.maximum(_SPIKE * np.median(apart), _ABSURD * np.abs(middle))
+    cleaned = values.copy()
+    cleaned[good[far]] = np.nan
+    return cleaned
 
 
 def _noise(values):

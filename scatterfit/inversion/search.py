@@ -185,6 +185,8 @@ def _sampled(curves, scales, clock):
         return values[..., index] + t * (values[..., index + 1] - values[..., index])
 
     radius = np.maximum(np.sqrt(np.maximum(at(curves.square), 0.0)) - curves.length, 0.0)
+    # A cloud in a gas that cannot be has no radius: it does not shine, and is not chosen.
+    radius = np.where(np.isfinite(radius), radius, 0.0)
     born = age > 0.0 if curves.stretched else clock > curves.births
     return np.where(born, radius, 0.0), at(curves.density)
 

@@ -1,6 +1,7 @@
 """How fast a night is fitted, where the time goes, and what the parent keeps in memory.
 
-Run ``python benchmarks/night_speed.py``; the numbers go to ``results/night_speed.json``. With
+Run ``python tests/studies/night/night_speed.py``;
+the numbers go to ``results/night_speed.json``. With
 ``--pulses N`` another number than 1,000 is fitted.
 """
 

@@ -1,6 +1,7 @@
 """Kills at random moments, and files damaged at random: nothing lost, nothing twice.
 
-Run ``python benchmarks/night_safety.py``; the numbers go to ``results/night_safety.json``. With
+Run ``python tests/studies/night/night_safety.py``;
+the numbers go to ``results/night_safety.json``. With
 ``--pulses N`` and ``--files N`` other numbers than 200 pulses and 1,000 damaged files are used.
 """
 

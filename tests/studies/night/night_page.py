@@ -1,6 +1,6 @@
 """How long the page of 5,000 pulses takes to be written, to open and to sort in a browser.
 
-Run ``python benchmarks/night_page.py``; the numbers go to ``results/night_page.json``.
+Run ``python tests/studies/night/night_page.py``; the numbers go to ``results/night_page.json``.
 """
 
 import json
