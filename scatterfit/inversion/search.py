@@ -13,7 +13,7 @@ from scatterfit.forward.light import spread_table
 
 _NODES = 70
 _STICKING = (0.0, -1.2)
-_DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.5, 5.0)
+_DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.2, 3.4, 5.0, 7.0, 10.0, 14.0, 20.0, 28.0)
 _VARIANCE = 2e-5
 _RATIO = 4.0
 _SPREADS = 5
