@@ -83,7 +83,7 @@ def run(seed):
     radius = float(np.sqrt(np.interp(births.median, births.times, squares)))
     back = hold.pressure / hold.temperature * path.reference_temperature / path.reference_pressure
     rate = number * back / hold.effective
-    line = {"seed": seed, "verdict": found.verdict, "chi2": found.chi2_reduced}
+    line = {"seed": seed, "verdict": found.verdict, "chi2": float(f"{found.chi2_reduced:.4g}")}
     for name, quantity, value in (
         ("radius", found.final_radius, radius), ("number", found.concentration, number),
         ("J", found.nucleation.rate, rate),
