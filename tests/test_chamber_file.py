@@ -3,12 +3,12 @@
 import math
 import tomllib
 from dataclasses import fields
-from pathlib import Path
 
 import pytest
 import scipy.constants
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from shared_data import PRACTICE, needs_practice
 
 from scatterfit.apparatus import records
 from scatterfit.apparatus.check import apparatus_from_mapping, apply_overrides, nearest
@@ -18,8 +18,6 @@ from scatterfit.apparatus.saturation import saturation_before
 from scatterfit.errors import ChamberFileError, InvalidInputError
 from scatterfit.files import read_chamber, read_chamber_mapping
 from scatterfit.units import UNITS, from_si, to_si
-
-PRACTICE = Path(__file__).resolve().parents[2] / "shared" / "practice"
 
 GAUGE = """
 [beam]
@@ -605,7 +603,7 @@ def test_nearest_finds_a_slip_and_nothing_else():
 # --- practice -----------------------------------------------------------------------------------
 
 
-@pytest.mark.skipif(not PRACTICE.is_dir(), reason=f"no practice pulses at {PRACTICE}")
+@needs_practice
 def test_practice_chamber_files_are_benches():
     paths = sorted(PRACTICE.glob("*.toml"))
     assert len(paths) >= 20

@@ -231,7 +231,8 @@ def test_closing_gives_claims_back(night):
     assert len(first.claim(3)) == 3
 
 
-@pytest.mark.skipif(not Path("/proc/self/stat").exists(), reason="needs Linux's /proc")
+# Elsewhere the start of a process is not told apart, and a claim runs out by its lease alone.
+@pytest.mark.skipif(not Path("/proc/self/stat").exists(), reason="no /proc here")
 def test_a_claim_of_a_process_that_is_gone_is_free_at_once(night):
     _, ledger = night
     me = owner.this_owner()
@@ -419,14 +420,14 @@ def test_a_network_share_gets_the_journal_that_works_there(tmp_path, monkeypatch
 
 @pytest.mark.parametrize(("path", "kind"), [
     ("/lab/night/a.sqlite", "nfs4"), ("/lab", "nfs4"), ("/laboratory", "ext4"),
-    ("/mnt/my disk/x", "cifs"), ("/mnt/my", "ext4"), ("/home/x", "ext4"), ("/tmp/x", "tmpfs"),
+    ("/mnt/my disk/x", "cifs"), ("/mnt/my", "ext4"), ("/data/x", "ext4"), ("/ram/x", "tmpfs"),
 ])
 def test_kind_of_file_system_is_that_of_the_nearest_mount(path, kind):
     mounts = "\n".join([
         "21 1 8:1 / / rw,relatime - ext4 /dev/sda1 rw",
         "30 21 0:35 / /lab rw,relatime shared:9 master:1 - nfs4 box:/lab rw",
         r"31 21 0:36 / /mnt/my\040disk rw - cifs //box/share rw",
-        "32 21 8:2 / /tmp rw - ext4 /dev/sdb rw", "33 32 0:40 / /tmp rw - tmpfs tmpfs rw",
+        "32 21 8:2 / /ram rw - ext4 /dev/sdb rw", "33 32 0:40 / /ram rw - tmpfs tmpfs rw",
         "nonsense",
     ])
     assert kind_of_mount(mounts, path) == kind

@@ -3,10 +3,10 @@
 import json
 import re
 from dataclasses import replace
-from pathlib import Path
 
 import numpy as np
 import pytest
+from shared_data import PRACTICE, needs_practice
 
 from scatterfit import files
 from scatterfit.files_fit import fit_file, fit_loaded
@@ -15,7 +15,6 @@ from scatterfit.inversion.verdict import REASONS, growth_findings
 from scatterfit.measured_pulse.measure import measure
 from scatterfit.measured_pulse.record import Concentration, MeasuredPulse, Quantity
 
-PRACTICE = Path(__file__).resolve().parents[2] / "shared" / "practice"
 FORWARD = {"column": "scatter1_V", "angle_deg": 30.0, "half_angle_deg": 2.0, "gain_V_m": 6e4,
            "full_scale_V": 10.0, "time_constant_ms": 0.02}
 SIDE = {"column": "scatter2_V", "angle_deg": 90.0, "half_angle_deg": 3.0, "full_scale_V": 10.0}
@@ -493,8 +492,6 @@ def test_a_trace_that_cannot_be_used_fails_with_a_reason(small, store):
 
 def practice(name):
     """Return the result of a practice pulse and its truth."""
-    if not PRACTICE.is_dir():
-        pytest.skip("the practice pulses (../shared/practice) are not beside this checkout")
     truth = json.loads((PRACTICE / "truth.json").read_text())[name]
     result = fit_file(PRACTICE / f"{name}.toml", PRACTICE / f"{name}.csv").to_dict()
     check_contract(result)
@@ -509,6 +506,7 @@ DESCRIBED = [
 ]
 
 
+@needs_practice
 @pytest.mark.parametrize("name", DESCRIBED)
 def test_practice_pulse(name):
     """Radius within 0.1 percent, curve within 0.3, number within 1 percent by a gain."""
@@ -537,6 +535,7 @@ def test_practice_pulse(name):
         assert rate == pytest.approx(truth["J_per_cm3_s"], rel=0.12)
 
 
+@needs_practice
 def test_practice_pulse_with_stated_errors():
     """Angle, gain and temperature are off by draws from their sigmas: judged by sigma."""
     result, truth = practice("stated-errors-1")
@@ -547,6 +546,7 @@ def test_practice_pulse_with_stated_errors():
         assert abs(off(result[key], truth[name])) < 2.0
 
 
+@needs_practice
 def test_practice_pulse_without_droplets():
     result, _ = practice("nothing-1")
     assert result["verdict"] == "rejected"

@@ -27,6 +27,7 @@ from scatterfit.report.rounding import format_number, format_quantity
 
 COUNT = 150
 MARKUP = "p111<img src=x onerror=alert(1)><b>bold&amp;.csv"
+# A page's script runs only in a browser; the test run installs one where it may.
 needs_browser = pytest.mark.skipif(CHROMIUM is None, reason="there is no chromium")
 
 

@@ -5,19 +5,17 @@ licence), cut and described in ``../shared/real``. Temperature, humidity and pat
 inputs there; nothing is known of the droplets but the light.
 """
 
-from pathlib import Path
 
 import numpy as np
 import pytest
+from shared_data import REAL, needs_real
 
 from scatterfit import files
 from scatterfit.files_fit import fit_loaded
 
-FOLDER = Path(__file__).resolve().parents[2] / "shared" / "real"
 # Two quiet ones, one whose laser hops throughout, one that hops in the middle of the growth: the
 # others take as long and are in docs/studies.md.
 TRIED = ("by-mixture-5.csv", "by-pressure-9.csv", "by-pressure-11.csv", "by-pressure-15.csv")
-RECORDINGS = [name for name in TRIED if (FOLDER / name).exists()]
 BENCH = """
 [beam]
 wavelength_nm = 635
@@ -54,10 +52,10 @@ def bench(tmp_path_factory):
 
 
 @pytest.mark.slow
-@pytest.mark.skipif(not RECORDINGS, reason="the recordings in ../shared/real are not here")
-@pytest.mark.parametrize("name", RECORDINGS)
+@needs_real
+@pytest.mark.parametrize("name", TRIED)
 def test_a_real_recording_is_followed(name, bench, store):
-    apparatus, trace, _ = files.load_pulse(bench, FOLDER / name)
+    apparatus, trace, _ = files.load_pulse(bench, REAL / name)
     pulse = fit_loaded(apparatus, trace, store=store)
     assert pulse.verdict != "failed"
     view = pulse.channels[0]

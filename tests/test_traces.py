@@ -4,12 +4,12 @@ import hashlib
 import json
 import math
 import os
-from pathlib import Path
 
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from shared_data import PRACTICE, REAL, needs_practice, needs_real
 from test_chamber_file import GAUGE, NO_GAUGE
 
 from scatterfit.errors import ChamberFileError, InvalidInputError, TraceError
@@ -22,10 +22,6 @@ from scatterfit.files import (
     write_trace,
 )
 from scatterfit.files_text import parse_scalar
-
-SHARED = Path(__file__).resolve().parents[2] / "shared"
-PRACTICE = SHARED / "practice"
-REAL = SHARED / "real"
 
 HEADER = "time_ms,scatter1_V,transmitted_V,gauge_kPa"
 ROWS = tuple(f"{i - 5},{0.01 * i:g},{5 - 0.02 * i:g},{92 - i:g}" for i in range(30))
@@ -533,7 +529,7 @@ def test_any_damage_ends_in_a_trace_or_one_line(tmp_path_factory, data):
 # --- shared recordings ----------------------------------------------------------------------------
 
 
-@pytest.mark.skipif(not PRACTICE.is_dir(), reason=f"no practice pulses at {PRACTICE}")
+@needs_practice
 def test_practice_pulses_against_an_independent_reader():
     """Every number as NumPy's own genfromtxt reads it."""
     paths = sorted(PRACTICE.glob("*.csv"))
@@ -548,7 +544,7 @@ def test_practice_pulses_against_an_independent_reader():
             np.testing.assert_array_equal(trace.columns[name], table[name] * size)
 
 
-@pytest.mark.skipif(not PRACTICE.is_dir(), reason=f"no practice pulses at {PRACTICE}")
+@needs_practice
 def test_all_practice_pulses_are_read():
     for path in sorted(PRACTICE.glob("*.csv")):
         bench, trace, used = load_pulse(path.with_suffix(".toml"), path)
@@ -560,7 +556,7 @@ def test_all_practice_pulses_are_read():
             assert start == pytest.approx(bench.chamber.pressure, rel=1e-3)
 
 
-@pytest.mark.skipif(not REAL.is_dir(), reason=f"no real recordings at {REAL}")
+@needs_real
 def test_real_recordings_are_read():
     """10 kHz from 0.3 s before to 1.5 s after the steepest pressure fall."""
     paths = sorted(REAL.glob("*.csv"))
