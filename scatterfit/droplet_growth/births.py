@@ -105,7 +105,7 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
     more = []
     for count, spread in finer:
         points, shares = _gauss_rule(dense, share, count)
-        more.append(FinerClasses(points, shares, _polynomial(nodes, points), spread))
+        more.append(FinerClasses(points, shares, polynomial_matrix(nodes, points), spread))
     cumulative = np.cumsum(share) - 0.5 * share
     centre = float(share @ dense)
     return Births(
@@ -138,8 +138,26 @@ def births_at_once(time):
     return Births(at, np.ones(1), float(time), 0.0, float(time), 0.0)
 
 
-def _polynomial(nodes, points):
-    """Return the matrix that carries a polynomial's values from nodes to points."""
+def polynomial_matrix(nodes, points):
+    """Return the matrix that carries a polynomial's values from a few nodes to points.
+
+    Parameters
+    ----------
+    nodes : ndarray, shape (n,)
+        Where the polynomial of degree n - 1 is known, all different [any unit].
+    points : ndarray, shape (m,)
+        Where it is wanted [the same unit].
+
+    Returns
+    -------
+    matrix : ndarray, shape (m, n)
+        Lagrange's basis [-].
+
+    Examples
+    --------
+    >>> polynomial_matrix(np.array([0.0, 1.0, 2.0]), np.array([3.0])) @ np.array([0.0, 1.0, 4.0])
+    array([9.])
+    """
     matrix = np.ones((points.size, nodes.size))
     for j in range(nodes.size):
         for k in range(nodes.size):

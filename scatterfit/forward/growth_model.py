@@ -5,6 +5,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT
+from scatterfit.droplet_growth.births import polynomial_matrix
 from scatterfit.droplet_growth.cloud import CloudGrowth, CloudParameters, solve_cloud
 from scatterfit.droplet_growth.setup import with_threshold
 
@@ -198,7 +199,7 @@ def linear_growth(setup, cloud, names=(), start=None):
     count = setup.births.weights.size
     few = [0] if count == 1 else sorted({count // 6, count // 2, count - 1 - count // 6})
     near = grow(setup, cloud, moving, few, growth)
-    carry = _parabola(setup.births.times[few], setup.births.times)
+    carry = polynomial_matrix(setup.births.times[few], setup.births.times)
     born = near.time > near.birth_times[0][:, None]
     log_radius = np.log(np.maximum(near.radius, near.start_radius))
     density = np.log(near.number_density)
@@ -208,16 +209,6 @@ def linear_growth(setup, cloud, names=(), start=None):
         radius_by[name] = np.where(born, change, 0.0)
         density_by[name] = (density[i + 1] - density[0]) / STEPS[name]
     return LinearGrowth(cloud, growth, radius_by, carry, density_by)
-
-
-def _parabola(nodes, points):
-    """Return the matrix that carries values at a few nodes to points, shape (points, nodes)."""
-    matrix = np.ones((points.size, nodes.size))
-    for j in range(nodes.size):
-        for k in range(nodes.size):
-            if k != j:
-                matrix[:, j] *= (points - nodes[k]) / (nodes[j] - nodes[k])
-    return matrix
 
 
 def _birth_times(setup, cloud, names):
