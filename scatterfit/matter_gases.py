@@ -5,40 +5,14 @@ from functools import partial
 from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.errors import InvalidInputError
 from scatterfit.matter_forms import constant, curved_power, polynomial
-from scatterfit.matter_records import Property, PureGas, Refractivity
+from scatterfit.matter_records import PureGas, Refractivity, properties_over
 from scatterfit.matter_substance import unknown
 
 _FIT = "own fit ({} percent) to {}"
 _LEMMON = "Lemmon and Jacobsen 2004"
 
-
-def gas_property(kind, unit, function, source, uncertainty):
-    """Return a property of a carrier gas, good from 150 to 340 K.
-
-    Parameters
-    ----------
-    kind : str
-        What it is.
-    unit : str
-        SI unit.
-    function : callable
-        Vectorised, temperature [K] to value.
-    source : str
-        Where it is from.
-    uncertainty : float
-        Standard uncertainty over the value [-].
-
-    Returns
-    -------
-    prop : Property
-        The record.
-
-    Examples
-    --------
-    >>> gas_property("root", "K^0.5", abs, "arithmetic", 0.0).range
-    (150.0, 340.0)
-    """
-    return Property(kind, unit, function, source, (150.0, 340.0), uncertainty)
+gas_property = properties_over(150.0, 340.0)
+"""Makes a property of a carrier gas."""
 
 
 def _heat(coefficients, source="own fit (0.01 percent) to the reference equation of state"):

@@ -44,6 +44,32 @@ class Property:
         return not bool(np.all((temperature >= low) & (temperature <= high)))
 
 
+def properties_over(low, high):
+    """Return a maker of properties that all hold in one range of temperature.
+
+    Parameters
+    ----------
+    low, high : float
+        The range [K].
+
+    Returns
+    -------
+    make : callable
+        Name, unit, function, source and relative uncertainty, as :class:`Property` has them, to
+        the record.
+
+    Examples
+    --------
+    >>> properties_over(150.0, 340.0)("root", "K^0.5", np.sqrt, "arithmetic", 0.0).range
+    (150.0, 340.0)
+    """
+
+    def make(name, unit, function, source, relative_uncertainty):
+        return Property(name, unit, function, source, (low, high), relative_uncertainty)
+
+    return make
+
+
 @dataclass(frozen=True)
 class RefractiveIndex:
     """The refractive index of a liquid against vacuum, n + ik.

@@ -6,7 +6,7 @@ import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.matter_forms import curved_power, guggenheim_tension, polynomial
-from scatterfit.matter_records import Property, RefractiveIndex
+from scatterfit.matter_records import Property, RefractiveIndex, properties_over
 from scatterfit.matter_substance import Substance
 
 WATER_MOLAR_MASS = 18.015268e-3
@@ -231,34 +231,8 @@ def liquid_water_index(wavelength, temperature, *, density, factor=1.0):
     return water_refractive_index(wavelength, temperature, factor * density(temperature))
 
 
-def dilute_vapour(kind, unit, correlation, source, uncertainty):
-    """Return a property of a dilute vapour, good from 200 to 400 K.
-
-    Parameters
-    ----------
-    kind : str
-        What it is.
-    unit : str
-        SI unit.
-    correlation : callable
-        Vectorised, temperature [K] to value.
-    source : str
-        Where it is from.
-    uncertainty : float
-        Standard uncertainty over the value [-].
-
-    Returns
-    -------
-    prop : Property
-        The record.
-
-    Examples
-    --------
-    >>> dilute_vapour("root", "K^0.5", abs, "arithmetic", 0.0).range
-    (200.0, 400.0)
-    """
-    return Property(kind, unit, correlation, source, (200.0, 400.0), uncertainty)
-
+dilute_vapour = properties_over(200.0, 400.0)
+"""Makes a property of a dilute vapour."""
 
 LATENT_SOURCE = "R T^2 d(ln p)/dT of the saturation pressure used"
 VAPOUR_FIT = "own fit (0.1 percent) to {}, dilute vapour 275 to 375 K, extrapolated below"
