@@ -424,6 +424,15 @@ def test_few_extrema_and_alternatives(small, store):
     assert "few-extrema" in codes(result)
 
 
+def test_depletion_without_extrema_is_not_trusted_alone(small, store):
+    """A growth law that bends looks like depletion; peaks and troughs would tell them apart."""
+    faint = small(detector={"angle_deg": 12.0, "half_angle_deg": 4.0, "gain_V_m": None},
+                  transmission=None)
+    result, _ = fitted(faint, store, number=1e11, duration=0.05)
+    assert {"few-extrema", "number-from-depletion"} <= codes(result)
+    assert result["verdict"] == "ambiguous"
+
+
 def test_a_radius_at_the_end_of_the_tables_says_so(small, store):
     """Droplets end at 1.465 um: just within tables to 1.48 um, beyond those to 1.35 um."""
     near = small(analysis={"max_radius_um": 1.48})

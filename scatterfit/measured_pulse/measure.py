@@ -247,6 +247,8 @@ def _verdict(fit, reasons, left):
                           or ("few-extrema" in codes and noisy and fit.lag1 > 0.05))
     # Without lobes the radius rests on the very growth rate that is in doubt here.
     unsure = unsure or {"few-extrema", "growth-scale-off"} <= codes
+    # Nor can growth that slows be told from vapour that depletes, which alone gives the number.
+    unsure = unsure or {"few-extrema", "number-from-depletion"} <= codes
     return "ambiguous" if left or unsure or "extrema-disagree" in codes else "accepted"
 
 
