@@ -24,6 +24,20 @@ _TRANSMISSION_NOISE = 0.002
 
 
 @dataclass(frozen=True)
+class Expected:
+    """What a column shows without noise, and the noise it has."""
+
+    value: np.ndarray
+    """Volts or pascal, not cut at full scale, shape (n,)."""
+    sigma: np.ndarray
+    """Standard deviation of each sample before it is digitized, shape (n,) [V, Pa]."""
+    step: float = 0.0
+    """Resolution of the digitizer [V]."""
+    full_scale: float | None = None
+    """Where the digitizer cuts [V]."""
+
+
+@dataclass(frozen=True)
 class SimulatedPulse:
     """One synthetic pulse."""
 
@@ -33,6 +47,10 @@ class SimulatedPulse:
     """Column name to samples, volts and pascal, each shape (n,)."""
     truth: dict
     """What went in, in the units its keys name."""
+    expected: dict = field(default_factory=dict)
+    """Column name to what it would show without noise (Expected)."""
+    cloud: Cloud | None = None
+    """The true cloud."""
 
 
 @dataclass(frozen=True)
@@ -49,6 +67,10 @@ class Scenario:
     """Relative noise of the scattered light [-]."""
     hold: float = 1e-3
     """Nucleation hold [s]."""
+    floor: float = _FLOOR
+    """Noise without light, over the largest light [-]."""
+    transmission_noise: float = _TRANSMISSION_NOISE
+    """Noise of the transmitted light, over the light before the pulse [-]."""
     growth_pressure_ratio: float = 0.78
     """Pressure of the growth stage over that before the expansion [-]."""
     cloud: dict = field(default_factory=dict)
@@ -150,7 +172,7 @@ def simulate_pulse(apparatus, scenario, make_model, generator):
     """
     count = round((scenario.duration + 5e-3) * scenario.rate) + 1
     time = np.round(-5e-3 + np.arange(count) / scenario.rate, 12)
-    columns, pressure = {}, None
+    expected, pressure = {}, None
     if apparatus.pressure is not None:
         pressure = _pressure(apparatus, scenario, time)
     setup = growth_setup(
@@ -166,15 +188,15 @@ def simulate_pulse(apparatus, scenario, make_model, generator):
     })
     signals, state = channel_signals(model, cloud, time)
     for channel, signal in zip(model.channels, signals, strict=True):
-        columns[channel.column] = _volts(apparatus, channel, signal.shape, scenario, generator)
+        expected[channel.column] = _light(apparatus, channel, signal.shape, scenario)
     if pressure is not None:
-        noise = _PRESSURE_NOISE * pressure[0]
-        columns[apparatus.pressure.column] = (
-            pressure - apparatus.pressure.offset + noise * generator.standard_normal(count)
-        )
+        noise = np.full(count, _PRESSURE_NOISE * pressure[0])
+        expected[apparatus.pressure.column] = Expected(pressure - apparatus.pressure.offset, noise)
+    columns = {name: _recorded(one, generator) for name, one in expected.items()}
     if apparatus.reference is not None:
         columns[apparatus.reference.column] = apparatus.reference.dark + np.full(count, 2.0)
-    return SimulatedPulse(time, columns, _truth(setup, model, scenario, state, (time, cloud)))
+    truth = _truth(setup, model, scenario, state, (time, cloud))
+    return SimulatedPulse(time, columns, truth, expected, cloud)
 
 
 def _pressure(apparatus, scenario, time):
@@ -188,23 +210,29 @@ def _pressure(apparatus, scenario, time):
     return pressure_profile(time, (start, low, after), scenario.hold)
 
 
-def _volts(apparatus, channel, shape, scenario, generator):
-    """Return a channel's samples with noise, offset, clipping and steps [V]."""
+def _light(apparatus, channel, shape, scenario):
+    """Return what an optical channel shows without noise (Expected)."""
     count = shape.size
     if channel.kind == "transmission":
-        light = _LASER * (shape + _TRANSMISSION_NOISE * generator.standard_normal(count))
-        return np.round(light + apparatus.transmission.dark, 5)
+        noise = np.full(count, _LASER * scenario.transmission_noise)
+        return Expected(_LASER * shape + apparatus.transmission.dark, noise, 1e-5)
     detector = next(d for d in apparatus.detectors if d.column == channel.column)
     top = float(shape.max())
     light = shape if channel.gain else shape * (_TOP / top if top > 0.0 else 0.0)
     if scenario.number <= 0.0:
         light = np.zeros(count)
     scale = float(light.max()) or 1.0
-    noise = np.hypot(_FLOOR * scale, scenario.noise * light)
+    noise = np.hypot(scenario.floor * scale, scenario.noise * light)
     full = detector.full_scale or _RANGE
-    step = full / 2**15
-    volts = (detector.dark or 0.0) + 0.05 + light + noise * generator.standard_normal(count)
-    return np.round(np.clip(volts, -full, full) / step) * step
+    return Expected((detector.dark or 0.0) + 0.05 + light, noise, full / 2**15, full)
+
+
+def _recorded(expected, generator):
+    """Return a column's samples with noise, clipping and steps [V, Pa]."""
+    samples = expected.value + expected.sigma * generator.standard_normal(expected.value.size)
+    if expected.full_scale is not None:
+        samples = np.clip(samples, -expected.full_scale, expected.full_scale)
+    return np.round(samples / expected.step) * expected.step if expected.step else samples
 
 
 def _truth(setup, model, scenario, state, where):

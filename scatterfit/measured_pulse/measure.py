@@ -5,7 +5,6 @@ from dataclasses import replace
 import numpy as np
 
 from scatterfit.inversion.fit import fit_pulse, refine
-from scatterfit.inversion.problem import value_of
 from scatterfit.inversion.uncertainty import posterior
 from scatterfit.inversion.verdict import (
     Finding,
@@ -20,15 +19,14 @@ from scatterfit.inversion.verdict import (
 from scatterfit.measured_pulse import conditions
 from scatterfit.measured_pulse import quantities as q
 from scatterfit.measured_pulse.bench_inputs import bench_inputs
+from scatterfit.measured_pulse.budget import budget_lines, learnt_inputs, rate_budget
 from scatterfit.measured_pulse.extrema import extrema_findings, matched_extrema
 from scatterfit.measured_pulse.limit import upper_limit
 from scatterfit.measured_pulse.number import final_depth, number_results
 from scatterfit.measured_pulse.prepare import optical_columns, prepare, reangled
 from scatterfit.measured_pulse.record import (
     Alternative,
-    BudgetLine,
     ChannelView,
-    Learnt,
     MeasuredPulse,
     Quantity,
     Reason,
@@ -43,15 +41,6 @@ _BASE_SPREAD = 0.003
 _LARGEST = 0.98
 _UNSURE = 1.5
 _DISAGREE = 0.015
-_STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
-_INPUTS = {
-    "scale": "computed growth rate", "bend": "shape of the growth law",
-    "creep": "creep of the gas during growth", "stretch": "duration of the births",
-    "depletion": "computed depletion",
-    "accommodation": "vapour.mass_accommodation",
-    "delay": "clock of the births", "temperature": "chamber.temperature_K",
-    "vapour": "vapour", "threshold": "threshold of the seeds",
-}
 
 
 def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a source of its own)
@@ -97,16 +86,12 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
     given = apparatus.vapour.refractive_index is not None
     provenance["properties"] = conditions.property_sources(prepared.setup, given)
     provenance["refractive_index"] = prepared.index
-    temperature, saturation = conditions.gas_quantities(prepared.setup)
-    gas = {
-        "growth_temperature": temperature, "growth_saturation_ratio": saturation,
-        "nucleation": conditions.nucleation_conditions(prepared.setup, None),
-        "provenance": provenance, "trace": trace,
-    }
+    gas = {**gas_records(prepared.setup), "provenance": provenance, "trace": trace}
     warnings = tuple(Reason(*w) for w in prepared.setup.warnings)
-    if _dry(prepared.setup):
+    if dry(prepared.setup):
+        ratio = prepared.setup.growth_saturation_ratio
         reason = Reason("never-supersaturated", (
-            f"the vapour's saturation ratio stays below one (growth: {saturation.value:.3f}): no "
+            f"the vapour's saturation ratio stays below one (growth: {ratio:.3f}): no "
             "droplet can grow; check [vapour], chamber.temperature_K and the pressure"
         ))
         return MeasuredPulse(verdict="rejected", reasons=(reason, *warnings), **gas)
@@ -117,9 +102,29 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
     if not visible(fit):
         if not empty(fit):
             return _puzzle(prepared, fit, gas, warnings)
-        return _nothing(prepared, fit, gas, warnings)
+        return without_cloud(prepared, fit, gas, warnings)
     prepared, fit = _settle_angles(prepared, fit, base, offsets)
-    return _result(prepared, fit, gas, warnings)
+    return with_cloud(prepared, fit, gas, warnings)
+
+
+def gas_records(setup):
+    """Return what is said about the gas whatever the light shows.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+
+    Returns
+    -------
+    gas : dict
+        Fields of :class:`MeasuredPulse`.
+    """
+    temperature, saturation = conditions.gas_quantities(setup)
+    return {
+        "growth_temperature": temperature, "growth_saturation_ratio": saturation,
+        "nucleation": conditions.nucleation_conditions(setup, None),
+    }
 
 
 def _flat_columns(apparatus, columns):
@@ -136,8 +141,19 @@ def _flat_columns(apparatus, columns):
     return tuple(found)
 
 
-def _dry(setup):
-    """Return whether no droplet could grow at any time."""
+def dry(setup):
+    """Return whether no droplet could grow at any time.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+
+    Returns
+    -------
+    dry : bool
+        Neither the hold nor the growth stage is supersaturated.
+    """
     held = setup.hold.saturation_ratio if setup.hold is not None else 0.0
     return max(setup.growth_saturation_ratio, held) <= 1.0
 
@@ -165,8 +181,25 @@ def _views(prepared, fit):
     )
 
 
-def _nothing(prepared, fit, gas, warnings):
-    """Return the result of a pulse without a cloud."""
+def without_cloud(prepared, fit, gas, warnings):
+    """Return the result of a pulse without a cloud.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The pulse.
+    fit : Fit
+        That found nothing.
+    gas : dict
+        From :func:`gas_records`, and what is known of the files.
+    warnings : tuple of Reason
+        From before the fit.
+
+    Returns
+    -------
+    pulse : MeasuredPulse
+        With an upper limit where there is one.
+    """
     limit = upper_limit(fit.problem)
     text = "no rise of the light that growing droplets would explain"
     after = prepared.time > prepared.setup.births.median
@@ -195,8 +228,25 @@ def _puzzle(prepared, fit, gas, warnings):
     )
 
 
-def _result(prepared, fit, gas, warnings):
-    """Return the result of a pulse with a cloud."""
+def with_cloud(prepared, fit, gas, warnings):
+    """Return the result of a pulse with a cloud.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The pulse.
+    fit : Fit
+        Best cloud, or the true one where a bench is planned.
+    gas : dict
+        From :func:`gas_records`, and what is known of the files.
+    warnings : tuple of Reason
+        From before the fit.
+
+    Returns
+    -------
+    pulse : MeasuredPulse
+        Quantities with their uncertainties, verdict and reasons.
+    """
     setup, problem = prepared.setup, fit.problem
     inputs = bench_inputs(prepared, problem, fit.best)
     after = posterior(problem, fit.best, inputs)
@@ -204,9 +254,10 @@ def _result(prepared, fit, gas, warnings):
     floor = _RADIUS_FLOOR * final.value
     final = Quantity(final.value, float(np.hypot(final.sigma, floor)))
     curve = replace(curve, sigma=np.hypot(curve.sigma, _RADIUS_FLOOR * curve.radius))
-    budget = _budget("final_radius_um", 1e6, noise, parts, floor, fit)
+    budget = budget_lines("final_radius_um", 1e6, (noise, parts, floor), fit)
     number = number_results(prepared, fit, after)
-    budget += _budget("concentration_per_cm3", 1e-6, number.noise, number.parts, number.floor, fit)
+    budget += budget_lines("concentration_per_cm3", 1e-6,
+                           (number.noise, number.parts, number.floor), fit)
     reference = setup.apparatus.analysis.reference_radius
     rates, more = _rates(setup, fit, after, reference)
     budget += more
@@ -220,6 +271,7 @@ def _result(prepared, fit, gas, warnings):
     gas = {**gas, "nucleation": conditions.nucleation_conditions(
         setup, number.concentration, q.exponential(
             q.Derived(fit.best.cloud.stretch, {"stretch": 1.0}), after)[0])}
+    budget += rate_budget(gas["nucleation"], number, fit)
     return MeasuredPulse(
         verdict=verdict, reasons=(*reasons, *warnings), final_radius=final,
         final_time=float(problem.bins.time[-1]), growth_scale=scale,
@@ -229,7 +281,7 @@ def _result(prepared, fit, gas, warnings):
         curve=curve, extrema=tuple(e for e in turns if e.radius > 0.0),
         alternatives=_alternatives(fit, number), chi2_reduced=fit.chi2_reduced,
         residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
-        learnt=_learnt(fit, after), **rates, **gas,
+        learnt=learnt_inputs(fit, after), **rates, **gas,
     )
 
 
@@ -276,45 +328,7 @@ def _rates(setup, fit, after, reference):
         "growth_rate": rate, "droplet_temperature": warm,
         "area_rate": Quantity(2.0 * reference * rate.value, 2.0 * reference * rate.sigma),
     }
-    return rates, _budget("growth_rate_um_per_s", 1e6, noise, parts, floor, fit)
-
-
-def _learnt(fit, after):
-    """Return what the trace says about inputs that the chamber file states with a sigma."""
-    columns = _input_names(fit)
-    sigmas = np.sqrt(np.maximum(np.diag(after.covariance), 0.0))
-    found = []
-    for i, name in enumerate(after.names):
-        prior = after.priors.get(name)
-        if prior is None or (name not in _STATED and not name.startswith(("angle:", *_STATED))):
-            continue
-        shift = float(after.step[i])
-        if name in fit.problem.names:
-            shift += value_of(fit.best.cloud, name) - prior[0]
-        found.append(Learnt(columns.get(name, _INPUTS.get(name, name)), shift / prior[1],
-                            float(sigmas[i] / prior[1])))
-    return tuple(found)
-
-
-def _input_names(fit):
-    """Return the chamber file's names of the angles."""
-    return {f"angle:{i}": f"detector.{d.column}.angle_deg"
-            for i, d in enumerate(fit.problem.model.setup.apparatus.detectors)}
-
-
-def _budget(name, factor, noise, parts, floor, fit):
-    """Return the lines of one quantity's budget, largest first."""
-    columns = _input_names(fit)
-    variances = {"noise": noise, "model": floor**2}
-    variances |= {columns.get(key, _INPUTS.get(key, key)): value for key, value in parts.items()}
-    total = sum(variances.values())
-    if not total > 0.0 or not np.isfinite(total):
-        return []
-    lines = [
-        BudgetLine(key, name, float(np.sqrt(value)) * factor, float(value / total))
-        for key, value in variances.items() if value > 1e-6 * total
-    ]
-    return sorted(lines, key=lambda line: -line.share)
+    return rates, budget_lines("growth_rate_um_per_s", 1e6, (noise, parts, floor), fit)
 
 
 def _findings(prepared, fit, scale, turns, left):

@@ -18,6 +18,10 @@ _THICK = 0.05
 _SECOND_ORDER = 0.1
 _TENSION = 3.0
 
+COUNTING = "counting of droplets"
+TWICE = "light scattered twice"
+"""Lines of the number's budget that no parameter of the fit stands for."""
+
 
 @dataclass(frozen=True)
 class NumberResults:
@@ -29,9 +33,9 @@ class NumberResults:
     noise: float = 0.0
     """Variance from the noise [1/m^6]."""
     parts: dict = field(default_factory=dict)
-    """Variance by input [1/m^6]."""
+    """Variance by input, counting and second-order light among them [1/m^6]."""
     floor: float = 0.0
-    """Standard uncertainty of the kernel and of second-order light [1/m^3]."""
+    """Standard uncertainty of the kernel [1/m^3]."""
 
 
 def number_results(prepared, fit, posterior):
@@ -78,9 +82,10 @@ def number_results(prepared, fit, posterior):
             "the number rests on the depletion of the vapour alone, so on temperature and "
             "humidity; a gain or a transmission would check it"
         )))
+    parts |= {COUNTING: counting**2, TWICE: floor**2 - _KERNEL**2}
     return NumberResults(
-        concentration, handles, findings, float(statistical**2),
-        {key: part * value**2 for key, part in parts.items()}, floor * value,
+        concentration, handles, findings, float(noise * value**2),
+        {key: part * value**2 for key, part in parts.items()}, _KERNEL * value,
     )
 
 

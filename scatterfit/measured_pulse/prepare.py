@@ -215,14 +215,9 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
         If fewer than 20 samples of a column can be used.
     """
     setup = prepare_setup(apparatus, time, columns)
-    kept = _span(apparatus, time)
+    kept = span(apparatus, time)
     time, columns = time[kept], {name: np.asarray(v)[kept] for name, v in columns.items()}
-    window = np.ones(time.size, dtype=bool)
-    if apparatus.analysis.window is not None:
-        low, high = apparatus.analysis.window
-        window &= (time >= low) & (time <= high)
-    for low, high in exclude:
-        window &= (time < low) | (time > high)
+    window = window_of(apparatus, time, exclude)
     baseline = _baseline(apparatus, setup, time)
     optical = _normalised(apparatus, time, columns, baseline)
     channels = []
@@ -236,8 +231,32 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
             )
             raise TraceError(message)
         channels.append(data)
+    return assembled(setup, store, time, channels, window)
+
+
+def assembled(setup, store, time, channels, window):
+    """Return a pulse with the models of its light.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    store : object or None
+        Where kernel tables are kept.
+    time : ndarray, shape (n,)
+        Samples [s].
+    channels : sequence of ChannelData
+        Of the optical columns.
+    window : ndarray, shape (n,)
+        Samples that may be fitted [bool].
+
+    Returns
+    -------
+    prepared : Prepared
+        Ready for the fit.
+    """
     kernel, relative, index = pulse_kernel(setup, store)
-    straight = (0.0,) * len(apparatus.detectors)
+    straight = (0.0,) * len(setup.apparatus.detectors)
     return Prepared(
         setup, pulse_model(setup, kernel, relative, straight),
         pulse_model(setup, kernel, relative + INDEX_STEP, straight),
@@ -245,12 +264,51 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
     )
 
 
-def _span(apparatus, time):
-    """Return the samples up to the end of the window: later ones play no part."""
+def span(apparatus, time):
+    """Return the samples up to the end of the window: later ones play no part.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,)
+        Samples [s].
+
+    Returns
+    -------
+    kept : slice
+        Of the samples.
+    """
     if apparatus.analysis.window is None:
         return slice(0, time.size)
     end = int(np.searchsorted(time, apparatus.analysis.window[1], side="right"))
     return slice(0, max(end, min(_FEWEST, time.size)))
+
+
+def window_of(apparatus, time, exclude=()):
+    """Return which samples may be fitted.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench.
+    time : ndarray, shape (n,)
+        Samples [s].
+    exclude : sequence of tuple of float
+        Ranges of time to leave out [s].
+
+    Returns
+    -------
+    window : ndarray, shape (n,)
+        Samples that may be fitted [bool].
+    """
+    window = np.ones(time.size, dtype=bool)
+    if apparatus.analysis.window is not None:
+        low, high = apparatus.analysis.window
+        window &= (time >= low) & (time <= high)
+    for low, high in exclude:
+        window &= (time < low) | (time > high)
+    return window
 
 
 def _clipped(values, full_scale):
