@@ -77,13 +77,17 @@ def rates(
     ] = None,
     background_per_cm3: Annotated[
         float | None, typer.Option("--background-per-cm3", metavar="N", min=0, help="Larger "
-                                   "particles that take droplets away, at the hold's gas density; "
-                                   "with --background-diameter-nm.")
+                                   "particles in the gas before the expansion, which take droplets "
+                                   "and vapour away; with --background-diameter-nm. Those of the "
+                                   "chamber file by default.")
     ] = None,
     background_diameter_nm: Annotated[
         float | None, typer.Option("--background-diameter-nm", metavar="D", min=0.5,
                                    help="Their diameter.")
     ] = None,
+    quote_losses: Annotated[
+        bool, typer.Option("--quote-losses", help="Say what they took, but do not put it back.")
+    ] = False,
     methods: METHODS = False,
 ):
     """Take nucleation rates against supersaturation, isotherm by isotherm.
@@ -96,6 +100,7 @@ def rates(
     from scatterfit.cli_rates import rates_output
 
     choices = {"tolerance": tolerance_k, "to_isotherm": to_isotherm, "convention": convention,
+               "put_back": not quote_losses,
                "rates": tuple(1e6 * rate for rate in at_rate or (1e7,))}
     around = {"pressure_kPa": pressure_kpa, "carrier": carrier,
               "background": (background_per_cm3, background_diameter_nm)}

@@ -62,6 +62,9 @@ def rates_output(path, substance, choices, around, how, *, compare, figure, as_j
         pressure=_maybe(around["pressure_kPa"], "kPa"), background=None if number is None else
         Background(to_si(number, "per_cm3"), to_si(diameter, "nm")))
     found = analyse_rates(table, settings, **how)
+    if found.background and bench is None and around["carrier"] is None:
+        print("carrier gas not stated: nitrogen assumed for losses (--carrier NAME)",
+              file=sys.stderr)
     if compare is not None:
         other = analyse_rates(_read(compare)[0], settings, **how)
         pairs = compare_nights(found.isotherms, other.isotherms, settings)

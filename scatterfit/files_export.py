@@ -157,7 +157,7 @@ def _write_netcdf(path, columns, about):
     with h5netcdf.File(path, "w") as file:
         file.attrs.update(_global_attributes(about))
         file.dimensions = {"pulse": count}
-        names = {name: _plain_name(name) for name in columns}
+        names = _plain_names(columns)
         for column in columns.values():
             if column.is_number:
                 variable = file.create_variable(names[column.name], ("pulse",), "f8",
@@ -171,6 +171,18 @@ def _write_netcdf(path, columns, about):
                 variable[:] = np.array([text or "" for text in column.texts()], dtype=object)
             variable.attrs.update(_attributes(column, names))
         _write_time(file, columns)
+
+
+def _plain_names(columns):
+    """Return what each column is called.
+
+    ``seed.diameter_nm``, set for a pulse, is another column than ``seed_diameter_nm``.
+    """
+    names = {}
+    for name in columns:
+        plain = _plain_name(name)
+        names[name] = f"override_{plain}" if plain in names.values() else plain
+    return names
 
 
 def _plain_name(name):

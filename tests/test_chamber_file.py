@@ -165,6 +165,28 @@ def test_transmission_alone_is_a_bench():
     assert bench.detectors == ()
 
 
+def test_a_background_is_read_with_its_sigmas():
+    bench = bench_of(GAUGE + "[background]\nconcentration_per_cm3 = 5e4\n"
+                     "concentration_per_cm3_sigma = 1e4\ndiameter_nm = 200.0\n")
+    assert bench.background == records.Background(5e10, pytest.approx(200e-9))
+    assert bench.sigmas["background.concentration_per_cm3"] == 1e10
+
+
+@pytest.mark.parametrize(("lines", "parts"), [
+    ("concentration_per_cm3 = 5e4", ["background.diameter_nm is missing", "200.0"]),
+    ("diameter_nm = 200.0", ["background.concentration_per_cm3 is missing"]),
+    ("concentration_per_cm3 = -1\ndiameter_nm = 200.0", ["concentration_per_cm3 = -1", "at least"]),
+    ("concentration_per_cm3 = 1\ndiameter_um = 0.2", ["diameter_um", "did you mean diameter_nm?"]),
+    ("concentration_per_cm3 = 1\ndiameter_nm = 0.2", ["diameter_nm = 0.2", "at least 5"]),
+])
+def test_a_wrong_background_is_one_line(lines, parts):
+    with pytest.raises(ChamberFileError) as error:
+        bench_of(f"{GAUGE}[background]\n{lines}\n")
+    text = str(error.value)
+    assert "\n" not in text
+    assert all(part in text for part in parts), text
+
+
 def test_an_empty_seed_table_counts():
     assert bench_of(GAUGE + "[seed]\n").seed == records.Seed()
     assert bench_of(GAUGE).seed is None
@@ -426,8 +448,8 @@ def test_vapour_is_judged_without_a_stated_pressure_where_it_can_be():
 def test_the_table_of_keys_fills_every_field_of_the_records():
     names = {"beam": "Beam", "detector": "Detector", "transmission": "Transmission",
              "reference": "Reference", "pressure": "PressureGauge", "vapour": "Vapour",
-             "seed": "Seed", "chamber": "Chamber", "growth": "GasState", "pulse": "Pulse",
-             "analysis": "Analysis"}
+             "seed": "Seed", "background": "Background", "chamber": "Chamber",
+             "growth": "GasState", "pulse": "Pulse", "analysis": "Analysis"}
     for table, record in names.items():
         wanted = {field.name for field in fields(getattr(records, record))} - {"overrides"}
         known = {key.field for key in KEYS if key.table == table and not key.property_name}
@@ -455,6 +477,8 @@ def test_every_example_is_allowed(key):
     value = tomllib.loads(f"v = {key.example}")["v"]
     content = mapping.setdefault(key.table, [{}] if key.table == "detector" else {})
     content = content[0] if key.table == "detector" else content
+    if key.table == "background":
+        content |= {"concentration_per_cm3": 0.0, "diameter_nm": 100.0}
     if key.name in HUMIDITY:
         del content["mole_fraction"]
     if key.table == "reference":

@@ -331,6 +331,13 @@ def test_tables_that_cannot_be_written_are_one_line(tmp_path, monkeypatch):
     assert [path.name for path in tmp_path.iterdir()] == ["file"]
 
 
+def test_netcdf_tells_a_value_set_for_a_pulse_from_the_column_of_that_name(tmp_path):
+    table = {"trace": ["a"], "seed_diameter_nm": [80.0], "seed.diameter_nm": [80.0]}
+    write_table(tmp_path / "a.nc", table, {})
+    with h5netcdf.File(tmp_path / "a.nc") as file:
+        assert {"seed_diameter_nm", "override_seed_diameter_nm"} <= set(file.variables)
+
+
 def test_lists_in_overrides_are_json(tmp_path):
     table = {"trace": ["a", "b"], "analysis.window_ms": [json.dumps([1.0, 2.0]), None]}
     write_table(tmp_path / "a.csv", table, {})

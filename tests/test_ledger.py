@@ -29,12 +29,14 @@ from scatterfit.overnight.columns import COLUMNS, NUMBERS, flat_row
 from scatterfit.overnight.jobs import Job
 from scatterfit.overnight.ledger import Ledger
 from scatterfit.overnight.ledger_file import LedgerError
+from scatterfit.overnight.pulse_table import pulse_table
 from scatterfit.overnight.restore import pulse_from
 from scatterfit.overnight.results import open_results
-from scatterfit.overnight.schema import VERSION
+from scatterfit.overnight.schema import ADDED, VERSION, VIEW
 from scatterfit.overnight.shares import is_network_kind, kind_of_mount
 from scatterfit.overnight.thin import channels_from, thinned
 from scatterfit.overnight.work import measure
+from scatterfit.report.page import write_page
 
 DOCS = Path(__file__).resolve().parents[1] / "docs"
 
@@ -332,6 +334,34 @@ def test_a_table_is_a_data_frame_where_pandas_is_installed(night):
     assert isinstance(table, pandas.DataFrame)
     assert table.shape == (3, len(open_results(ledger.path).columns()))
     assert table["final_radius_um"].between(1, 2).all()
+
+
+def as_version_1(path):
+    """Take from a ledger what version 1 had not."""
+    with closing(sqlite3.connect(path)) as connection:
+        connection.execute("DROP VIEW night")
+        for name in ADDED:
+            connection.execute(f'ALTER TABLE pulses DROP COLUMN "{name}"')
+        connection.execute(VIEW)
+        connection.execute("PRAGMA user_version = 1")
+        connection.commit()
+
+
+def test_a_ledger_of_version_1_is_read_and_brought_up(night):
+    plan, ledger = night
+    fill(plan, ledger)
+    ledger.close()
+    as_version_1(ledger.path)
+    rows = list(open_results(ledger.path).rows())
+    assert len(rows) == 3
+    assert all(row["start_temperature_K"] is None for row in rows)
+    write_page(ledger.path, ledger.path.with_name("page.html"))
+    assert len(pulse_table(ledger.path)[0].names) == 3
+    with closing(Ledger(ledger.path)) as again:
+        queue(again, "p000.csv", "p001.csv", "p002.csv")
+        fill(plan, again)
+    for row in open_results(ledger.path).rows():
+        assert row["start_temperature_K"] == 296.15
 
 
 def test_a_ledger_of_a_newer_version_is_refused(tmp_path):

@@ -1,4 +1,4 @@
-"""Many pulses: theories against print, isotherms, lines with errors, limits, holds, losses."""
+"""Many pulses: theories against print, isotherms, lines with errors, limits, holds."""
 
 import math
 
@@ -12,22 +12,12 @@ from water_isotherms import FITTED, SLIP, VIISANEN_STREY_REISS, WOELK_STREY, col
 from scatterfit.constants import AVOGADRO
 from scatterfit.droplet_growth.classical_rate import classical_log_rate
 from scatterfit.errors import InvalidInputError
-from scatterfit.matter import carrier, substance
+from scatterfit.matter import substance
 from scatterfit.nucleation.censored import Limits, log_chance_of_nothing, with_limits
 from scatterfit.nucleation.comparison import compare
 from scatterfit.nucleation.grouping import isotherms, natural_groups
 from scatterfit.nucleation.isotherm import RateSettings
 from scatterfit.nucleation.line import Points, fit_line, outliers, robust_line
-from scatterfit.nucleation.losses import (
-    Background,
-    Surroundings,
-    coagulation_coefficient,
-    condensation_sink,
-    growth_rate,
-    losses,
-    particle_diffusivity,
-    survival,
-)
 from scatterfit.nucleation.quantiles import chi_square_quantile, student_quantile
 from scatterfit.nucleation.rates import analyse_rates
 from scatterfit.nucleation.rates_result import rates_to_dict
@@ -453,7 +443,7 @@ def test_pulses_are_left_out_for_a_reason_that_is_told():
     assert analysed(cells, ambiguous=True).left_out["ambiguous"] == 0
 
 
-# --- holds, nights, losses -----------------------------------------------------------------------
+# --- holds, nights -------------------------------------------------------------------------------
 
 
 def hold_cells(random, *, background=400.0, rate=2e7, blanks=4):
@@ -499,77 +489,3 @@ def test_pulses_are_divided_by_a_column():
     rates = analysed(cells, by="gas")
     assert [(one.by, len(one.measured.names)) for one in rates.isotherms] == [
         ("argon", 13), ("helium", 12)]
-
-
-AIR = Surroundings(298.15, 101325.0, 1.5, WATER, carrier("air"))
-
-
-@pytest.mark.parametrize(("diameter", "printed"), [(10e-9, 5.23e-8), (100e-9, 6.82e-10),
-                                                   (1e-6, 2.74e-11)])
-def test_diffusion_of_particles(diameter, printed):
-    # Seinfeld and Pandis 2006, table 9.5 (air at 20 degrees Celsius); cited from memory.
-    cold = Surroundings(293.15, 101325.0, 1.0, WATER, carrier("air"))
-    assert float(particle_diffusivity(cold, [diameter])[0]) == pytest.approx(printed, rel=0.03)
-
-
-def test_coagulation_has_the_limits_of_theory():
-    # Continuum: 8 k T / 3 mu for equal sizes; free molecules: (d1 + d2)^2 / 4 times the mean
-    # relative speed times pi.
-    size = 50e-6
-    slow = 8 * 1.380649e-23 * 298.15 / (3 * float(AIR.gas.viscosity(298.15)))
-    found = float(coagulation_coefficient(AIR, [size], [size], 1000.0)[0])
-    assert found == pytest.approx(slow, rel=0.01)
-    size = 0.5e-9
-    mass = 1000.0 * math.pi / 6 * size**3
-    fast = math.pi * size**2 * math.sqrt(16 * 1.380649e-23 * 298.15 / (math.pi * mass))
-    found = float(coagulation_coefficient(AIR, [size], [size], 1000.0)[0])
-    assert found == pytest.approx(fast, rel=0.02)
-
-
-def test_condensation_sink_of_small_particles_is_that_of_free_molecules():
-    background = Background(1e10, 2e-9)
-    speed = math.sqrt(8 * 8.314462618 * 298.15 / (math.pi * WATER.molar_mass))
-    area = math.pi * background.diameter**2
-    expected = 0.25 * speed * area * background.concentration
-    assert condensation_sink(AIR, background) == pytest.approx(expected, rel=0.02)
-
-
-def test_survival_against_closed_forms():
-    # Kerminen and Kulmala 2002 for a sink that falls as 1/d^2; Lehtinen et al. 2007 for d^m.
-    size = np.geomspace(1e-9, 20e-9, 2001)
-    for power in (-2.0, -1.7):
-        sink, growth = 0.5 * (size / size[0]) ** power, 1e-9
-        shape = ((size[-1] / size[0]) ** (power + 1) - 1) / (power + 1)
-        expected = math.exp(-shape * size[0] * 0.5 / growth)
-        assert survival(size, sink, np.full(size.size, growth)) == pytest.approx(expected, rel=1e-4)
-
-
-def test_growth_vanishes_at_the_critical_size():
-    state = Surroundings(240.0, 60e3, 12.0, WATER, carrier("argon"))
-    length = 4 * float(WATER.surface_tension(240.0)) * WATER.molar_mass
-    length /= float(WATER.density(240.0)) * 8.314462618 * 240.0
-    critical = length / math.log(12.0)
-    below, above = growth_rate(state, [0.99 * critical, 1.01 * critical])
-    assert below < 0 < above
-
-
-def test_a_thick_background_takes_droplets():
-    state = Surroundings(240.0, 60e3, 12.0, WATER, carrier("argon"))
-    thin, thick = (losses(state, Background(number, 200e-9)) for number in (1e10, 1e17))
-    assert thin.survival > 0.9999
-    assert thick.survival < 0.9
-    assert thick.sink == pytest.approx(1e7 * thin.sink)
-
-
-def test_losses_are_quoted_from_columns_of_the_table():
-    cells = one_night(np.random.default_rng(22), stated=False)
-    cells |= {"nucleation_pressure_kPa": np.full(PULSES, 60.0),
-              "background.concentration_per_cm3": np.full(PULSES, 1e6),
-              "nucleation_effective_ms": np.ones(PULSES),
-              "background.diameter_nm": np.full(PULSES, 200.0)}
-    result = rates_to_dict(analysed(cells, RateSettings(WATER, gas=carrier("argon"))))
-    isotherm = result["isotherms"][0]
-    found = isotherm["losses"]
-    assert found["vapour_taken"] == pytest.approx(1 - math.exp(-1e-3 * 13.0), rel=0.1)
-    assert 0.99 < found["survival"] < 1
-    assert {reason["code"] for reason in isotherm["reasons"]} == {"vapour-taken"}

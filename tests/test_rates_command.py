@@ -253,7 +253,8 @@ def test_bytes_that_are_no_text_are_refused(tmp_path):
     (["--by", "campain"], "did you mean campaign?"), (["--substance", "watter"], "water"),
     (["--figure", "x.bmp"], ".png"), (["--convention", "3"], "equal to 2"),
     (["--tolerance-K", "0"], "0.001"),
-    (["--carrier", "argn"], "argon"), (["--background-per-cm3", "100"], "belong together"),
+    (["--carrier", "argn"], "argon"), (["--background-diameter-nm", "100"], "belong together"),
+    (["--background-per-cm3", "100"], "belong together"),
     (["--figure", "/nowhere/at/all/x.png"], "no folder"),
 ])
 def test_a_wrong_option_is_one_line_and_exit_2(capsys, water, words, expected):
@@ -335,6 +336,43 @@ def test_rates_from_a_ledger(capsys, tmp_path):
     assert isotherm["pulses"] == 8
     assert isotherm["slope"]["value"] == pytest.approx(30.0, rel=1e-6)
     assert result["substance_assumed"] is False
+
+
+def test_a_background_goes_from_chamber_file_and_trace_through_ledger_and_export(capsys, tmp_path):
+    plan = replace(night_fits.make_folder(tmp_path, 8), fit=on_a_line)
+    lines = ("[background]\nconcentration_per_cm3 = 5e4\nconcentration_per_cm3_sigma = 1e4\n"
+             "diameter_nm = 200.0\n")
+    with plan.chamber.open("a", encoding="utf-8") as file:
+        file.write(lines)
+    with closing(Ledger(tmp_path / "night.sqlite")) as ledger:
+        bind(ledger, plan, check_plan(plan))
+        with ledger.writing():
+            for place in range(8):
+                ledger.put(Job(f"p{place:03d}.csv"), "new")
+        ledger.store([measure(plan, job) for job in ledger.claim(100)])
+    found = json.loads(run(capsys, "rates", ledger.path, "--json")[1])["isotherms"][0]
+    lost = found["losses"]
+    assert lost["corrected"]
+    assert lost["lost_percent"]["sigma"] > 0.2 * lost["lost_percent"]["value"]
+    assert "by temperature and pressure" in lost["density"]
+    path = tmp_path / "night.csv"
+    assert run(capsys, "export", ledger.path, path)[0] == 0
+    row = path.read_text(encoding="utf-8").splitlines()[2].split(",")
+    head = path.read_text(encoding="utf-8").splitlines()[0].split(",")
+    assert float(row[head.index("background_concentration_per_cm3")]) == 5e4
+    assert float(row[head.index("background_concentration_per_cm3_sigma")]) == 1e4
+    _, out, err = run(capsys, "rates", path, "--json", "--substance", "water")
+    assert "nitrogen assumed" in err
+    out = run(capsys, "rates", path, "--json", "--substance", "water", "--carrier", "argon")[1]
+    same = json.loads(out)["isotherms"][0]
+    assert same["losses"] == lost
+    assert same["slope"] == found["slope"]
+    plain = json.loads(run(capsys, "rates", ledger.path, "--json", "--quote-losses")[1])
+    ratio = found["rate_range_per_cm3_s"][0] / plain["isotherms"][0]["rate_range_per_cm3_s"][0]
+    assert ratio == pytest.approx(lost["factor_on_rate"]["value"], rel=0.01)
+    text = " ".join(run(capsys, "rates", ledger.path)[1].split())
+    assert "J above is corrected for them" in text
+    assert "J times" in text
 
 
 def test_pulses_excluded_in_a_ledger_stay_excluded_in_its_export(tmp_path):

@@ -7,6 +7,7 @@ from scatterfit.apparatus.overrides import apply_overrides
 from scatterfit.apparatus.records import (
     Analysis,
     Apparatus,
+    Background,
     Beam,
     Chamber,
     Detector,
@@ -30,6 +31,7 @@ _RECORDS = {
     "reference": Reference,
     "pressure": PressureGauge,
     "seed": Seed,
+    "background": Background,
     "chamber": Chamber,
     "growth": GasState,
     "pulse": Pulse,

@@ -99,6 +99,8 @@ TABLES = (
     Table("vapour", True, "the substance that condenses, and how much of it there is"),
     Table("gas", True, "the carrier gas"),
     Table("seed", False, "seed particles: droplets are born on them; may be empty"),
+    Table("background", False, "larger particles in the gas, which take droplets and vapour away "
+          "before they are seen: rates are corrected for them"),
     Table("chamber", True, "the gas before the expansion"),
     Table("growth", False, "undisturbed gas during growth, where no pressure is measured"),
     Table("pulse", False, "nucleation hold, where no pressure is measured"),
@@ -210,6 +212,13 @@ KEYS = (
         example="1000.0", doc="seed particles per volume at the chamber's state"),
     Key("seed", "diameter_nm", "diameter", "nm", bounds=Bounds(0.5, 1e5), example="80.0",
         doc="diameter of the seed particles"),
+    Key("background", "concentration_per_cm3", "concentration", "per_cm3", bounds=_NOT_NEGATIVE,
+        required=True, example="5.0e4", doc="particles per volume at the chamber's state"),
+    Key("background", "diameter_nm", "diameter", "nm", bounds=Bounds(5, 1e5), required=True,
+        example="200.0", doc="their diameter"),
+    Key("background", "detected_diameter_nm", "detected_diameter", "nm", bounds=Bounds(1, 1e5),
+        example="200.0", doc="diameter from which on droplets are no longer swept up; that of the "
+        "particles when absent"),
     Key("chamber", "temperature_K", "temperature", "K", bounds=_TEMPERATURE, required=True,
         example="296.15", doc="before the expansion"),
     Key("chamber", "pressure_kPa", "pressure", "kPa", bounds=_PRESSURE, example="92.0",

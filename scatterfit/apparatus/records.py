@@ -107,6 +107,18 @@ class Seed:
 
 
 @dataclass(frozen=True)
+class Background:
+    """Larger particles in the gas, which take droplets and vapour away."""
+
+    concentration: float
+    """At the chamber's state [1/m^3]."""
+    diameter: float
+    """Particle diameter [m]."""
+    detected_diameter: float | None = None
+    """Diameter from which on droplets are no longer swept up [m]; ``None``: the particles'."""
+
+
+@dataclass(frozen=True)
 class Chamber:
     """The gas before the expansion, and the path of light to the detectors."""
 
@@ -168,6 +180,7 @@ class Apparatus:
     reference: Reference | None = None
     pressure: PressureGauge | None = None
     seed: Seed | None = None
+    background: Background | None = None
     growth: GasState | None = None
     pulse: Pulse | None = None
     analysis: Analysis = field(default_factory=Analysis)

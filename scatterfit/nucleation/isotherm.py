@@ -37,7 +37,10 @@ class RateSettings:
     convention: int = 1
     """The number in slope = n* + 1 or n* + 2."""
     background: Background | None = None
-    """Particles that take droplets away; ``None``: those of the table's columns."""
+    """Particles that take droplets away, at the chamber's density; ``None``: those of the table's
+    columns."""
+    put_back: bool = True
+    """Whether rates are corrected for what such particles took."""
     pressure: float | None = None
     """During the hold [Pa]; ``None``: that of the table's column."""
     gas: Gas | None = None

@@ -1,35 +1,45 @@
 """What a background of larger particles takes between birth and detection."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from scatterfit.constants import AVOGADRO, BOLTZMANN, GAS_CONSTANT, STANDARD_PRESSURE
+from scatterfit.droplet_growth.properties import growth_properties
+from scatterfit.droplet_growth.single_droplet import growth_rate as radius_rate
 from scatterfit.droplet_growth.transition import transition_factor, vapour_mean_free_path
 from scatterfit.matter import diffusivity, mean_molecular_speed
 
-_STEPS = 201
+_FIRST = 1.05
+"""Critical sizes from which on a droplet counts as born (common practice, no source)."""
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(16)
+_COLDER, _WARMER = 5.0, 60.0  # droplets against the gas [K]
+_WARMTH, _STEPS = 10.0, 8
+_MOMENTS = 8
 
 
 @dataclass(frozen=True)
 class Background:
     """Particles that were there before the expansion, one size."""
 
-    concentration: float
-    """At the gas density of the hold [1/m^3]."""
-    diameter: float
-    """[m]."""
+    concentration: object
+    """At the gas density in question, a number or shape (n,) [1/m^3]."""
+    diameter: object
+    """A number or shape (n,) [m]."""
+    until: object = None
+    """Diameter at which a droplet counts as detected, likewise [m]; ``None``: that of the
+    particles, beyond which it is no smaller than what it meets."""
 
 
 @dataclass(frozen=True)
 class Surroundings:
-    """The gas around a growing cluster."""
+    """The gas around a growing cluster; numbers, or arrays of one shape for many pulses."""
 
-    temperature: float
+    temperature: object
     """[K]."""
-    pressure: float
+    pressure: object
     """[Pa]."""
-    saturation_ratio: float
+    saturation_ratio: object
     """Over the liquid [-]."""
     substance: object
     """The vapour, a ``Substance``."""
@@ -51,7 +61,7 @@ def condensation_sink(surroundings, background):
 
     Returns
     -------
-    sink : float
+    sink : ndarray, shape (...)
         Part of the vapour lost per time [1/s].
 
     References
@@ -63,14 +73,14 @@ def condensation_sink(surroundings, background):
     --------
     >>> from scatterfit.matter import carrier, substance
     >>> state = Surroundings(240.0, 60e3, 12.0, substance("water"), carrier("argon"))
-    >>> condensation_sink(state, Background(1e9, 100e-9))
+    >>> float(condensation_sink(state, Background(1e9, 100e-9)))
     0.00372
     """
     diffusion = _vapour_diffusion(surroundings)
     speed = mean_molecular_speed(surroundings.temperature, surroundings.substance.molar_mass)
     knudsen = 2.0 * vapour_mean_free_path(diffusion, speed) / background.diameter
     factor = transition_factor(knudsen, 1.0)
-    return float(2.0 * np.pi * diffusion * factor * background.diameter * background.concentration)
+    return 2.0 * np.pi * diffusion * factor * background.diameter * background.concentration
 
 
 def _vapour_diffusion(surroundings):
@@ -78,22 +88,53 @@ def _vapour_diffusion(surroundings):
     return law(surroundings.temperature) * STANDARD_PRESSURE / surroundings.pressure
 
 
-def growth_rate(surroundings, diameter):
-    r"""Return how fast a small droplet's diameter grows, gas and droplet equally warm.
-
-    .. math:: \frac{dd}{dt} = \frac{4 D v_m \beta_m}{d} \frac{p_s}{k T}
-        (S - e^{4 \sigma v_m / k T d})
+def critical_diameter(surroundings):
+    r"""Return the size at which a droplet neither grows nor shrinks, 4 sigma v / (k T ln S).
 
     Parameters
     ----------
     surroundings : Surroundings
         The gas.
-    diameter : array_like, shape (n,)
+
+    Returns
+    -------
+    diameter : ndarray, shape (...)
+        Critical diameter [m].
+
+    References
+    ----------
+    .. [1] W. Thomson, Philosophical Magazine 42 (1871) 448-452. doi:10.1080/14786447108640606
+
+    Examples
+    --------
+    >>> from scatterfit.matter import carrier, substance
+    >>> state = Surroundings(240.0, 60e3, 12.0, substance("water"), carrier("argon"))
+    >>> float(critical_diameter(state)) * 1e9
+    1.19
+    """
+    substance, temperature = surroundings.substance, surroundings.temperature
+    volume = substance.molar_mass / AVOGADRO / substance.density(temperature)
+    length = 4.0 * substance.surface_tension(temperature) * volume / (BOLTZMANN * temperature)
+    return length / np.log(surroundings.saturation_ratio)
+
+
+def growth_rate(surroundings, diameter):
+    r"""Return how fast a small droplet's diameter grows, at the temperature that it takes.
+
+    The law of ``droplet_growth.single_droplet``: heat and vapour in balance. A droplet in the
+    strongly supersaturated gas of a hold is 10 to 17 K warmer than it, and grows half as fast
+    as one that is not.
+
+    Parameters
+    ----------
+    surroundings : Surroundings
+        The gas.
+    diameter : array_like, shape (...)
         Diameter, > 0 [m].
 
     Returns
     -------
-    growth : ndarray, shape (n,)
+    growth : ndarray, shape (...)
         dd/dt [m/s]; negative below the critical size.
 
     Examples
@@ -101,19 +142,23 @@ def growth_rate(surroundings, diameter):
     >>> from scatterfit.matter import carrier, substance
     >>> state = Surroundings(240.0, 60e3, 12.0, substance("water"), carrier("argon"))
     >>> float(growth_rate(state, [10e-9])[0])
-    9.74e-4
+    5.83e-4
     """
-    diameter = np.asarray(diameter, dtype=float)
-    substance, temperature = surroundings.substance, surroundings.temperature
-    diffusion = _vapour_diffusion(surroundings)
-    path = vapour_mean_free_path(diffusion, mean_molecular_speed(temperature, substance.molar_mass))
-    volume = substance.molar_mass / AVOGADRO / substance.density(temperature)
-    thermal = BOLTZMANN * temperature
-    curved = np.exp(4.0 * substance.surface_tension(temperature) * volume / (thermal * diameter))
-    excess = substance.saturation_pressure(temperature) / thermal
-    excess = excess * (surroundings.saturation_ratio - curved)
-    factor = transition_factor(2.0 * path / diameter, 1.0)
-    return 4.0 * diffusion * volume * factor * excess / diameter
+    substance = surroundings.substance
+    temperature = np.asarray(surroundings.temperature, dtype=float)
+    pressure = np.asarray(surroundings.pressure, dtype=float)
+    fraction = surroundings.saturation_ratio * substance.saturation_pressure(temperature) / pressure
+    properties = growth_properties(
+        substance, surroundings.gas, float(np.mean(fraction)), float(temperature.min()) - _COLDER,
+        float(temperature.max()) + _WARMER, float(temperature.mean()))
+    # The density of the cold liquid everywhere, so that growth is nil at the critical size.
+    volume = substance.molar_mass / substance.density(temperature)
+    properties = replace(properties, molar_volume=volume)
+    radius = 0.5 * np.asarray(diameter, dtype=float)
+    guess = temperature + np.full(radius.shape, _WARMTH)
+    grown, *_ = radius_rate(properties, radius, (temperature, pressure, fraction), (1.0, 1.0),
+                            guess, steps=_STEPS)
+    return 2.0 * grown
 
 
 def particle_diffusivity(surroundings, diameter):
@@ -200,24 +245,24 @@ def coagulation_coefficient(surroundings, small, large, density):
     return 2 * np.pi * moving * together * (1 + knudsen) / (1 + 2 * knudsen * (1 + knudsen))
 
 
-def survival(diameter, sink, growth):
-    r"""Return the part of new droplets that reaches the last size before the background.
+def loss_exponent(surroundings, background):
+    r"""Return how many times over a droplet is lost on its way to the size of detection.
 
-    .. math:: P = \exp \left( - \int \frac{CoagS(d)}{dd / dt} \, dd \right)
+    .. math:: \Lambda = \int \frac{K(d, d_b) \, N_b}{dd / dt} \, dd , \qquad P = e^{-\Lambda}
+
+    from 1.05 times the critical size on, where P is the part of the droplets that survives.
 
     Parameters
     ----------
-    diameter : ndarray, shape (n,)
-        Ascending sizes from birth to detection [m].
-    sink : ndarray, shape (n,)
-        Rate at which droplets of each size are lost [1/s].
-    growth : ndarray, shape (n,)
-        dd/dt, > 0 [m/s].
+    surroundings : Surroundings
+        The gas during the hold, arrays of shape (n,).
+    background : Background
+        The particles, at its density.
 
     Returns
     -------
-    probability : float
-        Of survival, between 0 and 1 [-].
+    exponent : ndarray, shape (n,)
+        Losses per droplet [-].
 
     References
     ----------
@@ -230,70 +275,72 @@ def survival(diameter, sink, growth):
 
     Examples
     --------
-    >>> size = np.linspace(1e-9, 3e-9, 201)
-    >>> survival(size, np.full(201, 1.0), np.full(201, 1e-8))
-    0.819
+    >>> from scatterfit.matter import carrier, substance
+    >>> state = Surroundings(240.0, 60e3, 12.0, substance("water"), carrier("argon"))
+    >>> float(loss_exponent(state, Background(1e12, 100e-9))[0]) * 1e6
+    4.61
     """
-    lost = np.asarray(sink) / np.asarray(growth)
-    return float(np.exp(-np.sum(0.5 * (lost[1:] + lost[:-1]) * np.diff(diameter))))
+    temperature, pressure, ratio, number, large = (
+        np.atleast_1d(np.asarray(value, dtype=float))[:, None] for value in np.broadcast_arrays(
+            surroundings.temperature, surroundings.pressure, surroundings.saturation_ratio,
+            background.concentration, background.diameter))
+    around = Surroundings(temperature, pressure, ratio, surroundings.substance, surroundings.gas)
+    critical = critical_diameter(around)
+    until = large if background.until is None else np.atleast_1d(background.until)[:, None]
+    # Growth starts as d - d_critical does: in its logarithm the integrand is smooth.
+    low = np.log((_FIRST - 1.0) * critical)
+    high = np.maximum(np.log(np.maximum(until - critical, 1e-300)), low)
+    beyond = np.exp(0.5 * (low + high) + 0.5 * (high - low) * _NODES)
+    sizes = critical + beyond
+    met = coagulation_coefficient(around, sizes, large, around.substance.density(temperature))
+    lost = met * number * beyond / growth_rate(around, sizes)
+    return 0.5 * (high - low)[:, 0] * (lost @ _WEIGHTS)
 
 
-@dataclass(frozen=True)
-class Losses:
-    """What a background took from one isotherm's droplets."""
+def vapour_taken(surroundings, background, duration):
+    r"""Return which part of the vapour the particles have taken in the course of a hold.
 
-    sink: float
-    """Condensation sink [1/s]."""
-    growth: float
-    """dd/dt of a droplet of twice the critical size [m/s]."""
-    survival: float
-    """Part of the droplets that reaches the detected size [-]."""
-    detected: float
-    """That size [m]."""
-    vapour: float | None = None
-    """Part of the vapour that the background takes during the hold [-]."""
+    They grow, so that their sink does as well: the part is what their own volume gains,
 
+    .. math:: f(t) = N_b \frac{\pi}{6} \frac{d_b(t)^3 - d_b(0)^3}{v_m} \frac{k T}{S p_s}
 
-def losses(surroundings, background, detected=None, duration=None):
-    """Return what a background takes from the droplets of a pulse.
+    with vapour and temperature as at first, so that a part beyond some 0.2 is too large.
 
     Parameters
     ----------
     surroundings : Surroundings
-        The gas during the hold.
+        The gas during the hold, arrays of shape (n,).
     background : Background
-        The particles.
-    detected : float, optional
-        Diameter at which a droplet counts [m]; that of the background when absent, beyond which
-        it is no smaller than what it meets.
-    duration : float, optional
+        The particles, at its density; they are wettable.
+    duration : array_like, shape (n,)
         Of the hold [s].
 
     Returns
     -------
-    losses : Losses
-        Sink, growth and survival from 1.05 times the critical size on.
+    taken : ndarray, shape (n, 8)
+        At the middles of eight equal parts of the duration [-].
 
     Examples
     --------
     >>> from scatterfit.matter import carrier, substance
     >>> state = Surroundings(240.0, 60e3, 12.0, substance("water"), carrier("argon"))
-    >>> losses(state, Background(1e12, 100e-9)).survival
-    1.00
+    >>> vapour_taken(state, Background(1e11, 100e-9), 1e-3)[0, [0, 7]] * 100
+    array([0.002, 0.190])
     """
-    substance, temperature = surroundings.substance, surroundings.temperature
-    detected = background.diameter if detected is None else detected
-    density = substance.density(temperature)
-    volume = substance.molar_mass / AVOGADRO / density
-    critical = 4.0 * substance.surface_tension(temperature) * volume
-    critical = critical / (BOLTZMANN * temperature * np.log(surroundings.saturation_ratio))
-    first = 1.05 * float(critical)
-    sizes = np.geomspace(first, max(detected, 1.1 * first), _STEPS)
-    growing = growth_rate(surroundings, sizes)
-    met = coagulation_coefficient(surroundings, sizes, background.diameter, density)
-    sink = condensation_sink(surroundings, background)
-    taken = None if duration is None else float(-np.expm1(-sink * duration))
-    return Losses(sink,
-                  float(growth_rate(surroundings, [2.0 * float(critical)])[0]),
-                  survival(sizes, met * background.concentration, growing), float(sizes[-1]),
-                  taken)
+    temperature, pressure, ratio, number, size, duration = (
+        np.array(values, dtype=float, ndmin=1) for values in np.broadcast_arrays(
+            surroundings.temperature, surroundings.pressure, surroundings.saturation_ratio,
+            background.concentration, background.diameter, duration))
+    substance = surroundings.substance
+    around = Surroundings(temperature, pressure, ratio, substance, surroundings.gas)
+    molecule = substance.molar_mass / AVOGADRO / substance.density(temperature)
+    vapour = ratio * substance.saturation_pressure(temperature) / (BOLTZMANN * temperature)
+    least = np.maximum(size, _FIRST * critical_diameter(around))
+    grown, step = least, duration / _MOMENTS
+    taken = np.empty((temperature.size, _MOMENTS))
+    for moment in range(_MOMENTS):
+        length = 0.5 * step if moment == 0 else step
+        first = growth_rate(around, grown)  # the midpoint rule: d(t) is nearly straight
+        grown = grown + length * growth_rate(around, grown + 0.5 * length * first)
+        taken[:, moment] = (grown**3 - least**3) * np.pi / 6.0 * number / (molecule * vapour)
+    return taken

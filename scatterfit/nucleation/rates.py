@@ -5,23 +5,16 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from scatterfit.nucleation.background import Losses, background_losses, put_back
 from scatterfit.nucleation.comparison import Comparison
 from scatterfit.nucleation.estimate import Estimate
 from scatterfit.nucleation.grouping import isotherms
 from scatterfit.nucleation.hold_series import HoldSeries, hold_series
 from scatterfit.nucleation.isotherm import Isotherm, RateSettings, analyse_isotherm
 from scatterfit.nucleation.line import Points, fit_line
-from scatterfit.nucleation.losses import Background, Losses, Surroundings, losses
 from scatterfit.nucleation.select import rate_pulses
-from scatterfit.nucleation.table import (
-    BACKGROUND,
-    BACKGROUND_DIAMETER,
-    DURATION,
-    PRESSURE,
-    group_rows,
-)
+from scatterfit.nucleation.table import group_rows
 from scatterfit.nucleation.theory import theories
-from scatterfit.units import to_si
 
 _FEWEST_FOR_TREND = 3
 
@@ -51,6 +44,8 @@ class Rates:
     trends: Mapping[str, TheoryTrend | None] = field(default_factory=dict)
     losses: tuple[Losses | None, ...] = ()
     """One entry an isotherm."""
+    background: bool = False
+    """Whether the table or the settings name particles that cause losses."""
     series: tuple[HoldSeries, ...] = ()
     comparison: tuple[Comparison, ...] = ()
 
@@ -94,6 +89,9 @@ def analyse_rates(table, settings, *, by=None, ambiguous=False, series=False):
     (29.4, 1)
     """
     pulses, left_out = rate_pulses(table, ambiguous=ambiguous)
+    lost, given = background_losses(table, pulses, settings)
+    if lost is not None and settings.put_back:
+        pulses = put_back(pulses, lost)
     found, held = [], []
     for value, rows in group_rows(table, by).items():
         part = pulses.take(np.flatnonzero(np.isin(pulses.row, rows)))
@@ -101,10 +99,11 @@ def analyse_rates(table, settings, *, by=None, ambiguous=False, series=False):
         found += [analyse_isotherm(part.take(group), settings, value) for group in groups]
         if series:
             held += hold_series(table, part, groups, settings, value)
-    lost = tuple(_losses(table, isotherm, settings) for isotherm in found)
+    each = tuple(None if lost is None else lost.of(isotherm.pulses.row) for isotherm in found)
     names = [theory.name for theory in theories(settings.substance)]
     trends = {name: _trend(found, name) for name in names}
-    return Rates(table.source, settings, by, tuple(found), left_out, trends, lost, tuple(held))
+    return Rates(table.source, settings, by, tuple(found), left_out, trends, each, given,
+                 tuple(held))
 
 
 def _trend(found, name):
@@ -127,30 +126,3 @@ def _trend(found, name):
     shared = unit * float(np.mean([estimate.systematic for _, estimate in ratios]))
     return TheoryTrend(Estimate(float(line.at(0.0)), float(line.sigma_at(0.0)), shared, factor),
                        Estimate(1e3 * line.slope, 1e3 * line.slope_sigma, 0.0, factor))
-
-
-def _losses(table, isotherm, settings):
-    """Return what a background took, where one is given by the settings or the table."""
-    seen = isotherm.measured
-    if not seen.names:
-        return None
-    background, pressure = settings.background, settings.pressure
-    if background is None:
-        number = _middle(table, BACKGROUND, seen.row, "per_cm3")
-        diameter = _middle(table, BACKGROUND_DIAMETER, seen.row, "nm")
-        background = Background(number, diameter)
-    if pressure is None:
-        pressure = _middle(table, PRESSURE, seen.row, "kPa")
-    given = np.isfinite([background.concentration, background.diameter, pressure]).all()
-    if not given or settings.gas is None or not background.concentration > 0:
-        return None
-    ratio = float(np.exp(np.mean(np.log(seen.ratio))))
-    around = Surroundings(isotherm.temperature, pressure, ratio, settings.substance, settings.gas)
-    duration = _middle(table, DURATION, seen.row, "ms")
-    return losses(around, background, duration=duration if duration > 0 else None)
-
-
-def _middle(table, name, rows, unit):
-    values = table.number(name)[rows]
-    values = values[np.isfinite(values)]
-    return to_si(float(np.median(values)), unit) if values.size else np.nan

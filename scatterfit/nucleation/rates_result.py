@@ -18,7 +18,8 @@ _PER_CM3 = 1e-6
 _FEWEST = 3
 _LARGE_CORRECTION = 0.1  # rms of ln J
 _FAR = math.log(10.0)
-_HARDLY_ANY = 0.95  # what is left, from where on losses are worth a caution
+_WORTH_SAYING = 0.05  # ln of J, from where on losses are worth a caution
+_MOST = math.log(2.0)  # the same, from where on a correction is as large as what it corrects
 
 
 def rates_to_dict(rates):
@@ -40,7 +41,7 @@ def rates_to_dict(rates):
         "source": rates.source,
         "substance": settings.substance.name,
         "by": rates.by,
-        "isotherms": [_isotherm(isotherm, lost, settings)
+        "isotherms": [_isotherm(isotherm, lost, rates)
                       for isotherm, lost in zip(rates.isotherms, rates.losses, strict=True)],
         "theories": {theory.name: {"source": theory.source,
                                    "temperature_range_K": [_plain(end) for end in theory.range]}
@@ -62,8 +63,8 @@ def rates_to_dict(rates):
     }
 
 
-def _isotherm(isotherm, lost, settings):
-    seen, line = isotherm.measured, isotherm.line
+def _isotherm(isotherm, lost, rates):
+    seen, line, settings = isotherm.measured, isotherm.line, rates.settings
     scatter = chi2 = None
     if line is not None:
         scatter, chi2 = _plain(line.scatter), _plain(line.chi2_reduced)
@@ -90,12 +91,9 @@ def _isotherm(isotherm, lost, settings):
         "scatter_ln_rate": scatter,
         "chi2_reduced": chi2,
         "temperature_correction": _correction(isotherm, settings),
-        "losses": None if lost is None else {
-            "condensation_sink_per_s": lost.sink, "growth_rate_nm_per_ms": lost.growth * 1e6,
-            "survival": lost.survival, "detected_diameter_nm": lost.detected * 1e9,
-            "vapour_taken": _plain(lost.vapour)},
-        "reasons": [{"code": code, "text": text}
-                    for code, text in reasons_of(isotherm, settings, lost)],
+        "losses": _losses(lost, settings),
+        "reasons": [{"code": code, "text": text} for code, text in
+                    reasons_of(isotherm, settings, lost, background=rates.background)],
     }
 
 
@@ -104,6 +102,28 @@ def _ratio(ratio):
     if found is None:
         return None
     return {**found, "scatter": _plain(ratio.scatter), "in_range": ratio.in_range}
+
+
+def _losses(lost, settings):
+    """Return what a background took: of J in percent, and what that rests on."""
+    if lost is None:
+        return None
+    whole = lost.droplets + lost.vapour
+    left = math.exp(-whole)
+    return {
+        "corrected": settings.put_back,
+        "lost_percent": {"value": -100 * math.expm1(-whole), "sigma": 100 * left * lost.sigma},
+        "factor_on_rate": {"value": 1 / left, "sigma": lost.sigma / left},
+        "lost_droplets_percent": -100 * math.expm1(-lost.droplets),
+        "lost_by_vapour_percent": None if lost.taken is None else -100 * math.expm1(-lost.vapour),
+        "survival": math.exp(-lost.droplets),
+        "detected_diameter_nm": lost.detected * 1e9,
+        "condensation_sink_per_s": lost.sink,
+        "growth_rate_nm_per_ms": lost.growth * 1e6,
+        "vapour_taken": lost.taken,
+        "density": "as given, at the density of the hold" if lost.density is None else
+        f"taken from the chamber's gas density to that of the hold, {lost.density}",
+    }
 
 
 def _correction(isotherm, settings):
@@ -147,7 +167,7 @@ def _sigmas(estimate):
     return _plain(abs(estimate.value) / estimate.sigma) if estimate.sigma > 0 else None
 
 
-def reasons_of(isotherm, settings, lost=None):
+def reasons_of(isotherm, settings, lost=None, *, background=False):
     """Return what a reader of an isotherm should know, with what would help.
 
     Parameters
@@ -158,6 +178,8 @@ def reasons_of(isotherm, settings, lost=None):
         How it was analysed.
     lost : Losses, optional
         What a background took.
+    background : bool
+        Whether there is one.
 
     Returns
     -------
@@ -180,20 +202,28 @@ def reasons_of(isotherm, settings, lost=None):
                                   "they grow: sizes and numbers assume liquid"))
     if isotherm.theory and not any(ratio.in_range for ratio in isotherm.theory.values()):
         found.append(("theory-out-of-range", "no theory claims to hold at this temperature"))
-    if lost is not None:
-        found += _about_losses(isotherm, lost)
+    if background:
+        found += _about_losses(lost, settings)
     return found
 
 
-def _about_losses(isotherm, lost):
-    if lost.survival < _HARDLY_ANY:
-        yield ("losses", f"the background takes {100 * (1 - lost.survival):.2g} percent of the "
-               "droplets before they are seen: J is that much larger")
-    slope = isotherm.slope.value if isotherm.slope else 0.0
-    lower = 1.0 - (1.0 - (lost.vapour or 0.0)) ** max(slope, 0.0)
-    if lower > 1.0 - _HARDLY_ANY:
-        yield ("vapour-taken", f"the background takes {100 * lost.vapour:.2g} percent of the "
-               f"vapour during the hold, which lowers J by {100 * lower:.2g} percent at its end")
+def _about_losses(lost, settings):
+    if lost is None:
+        yield ("losses-unknown", "a background is stated, but not the pressure of the hold: "
+               "--pressure-kPa, or a column nucleation_pressure_kPa")
+        return
+    done = "put back" if settings.put_back else "not put back"
+    if lost.droplets + lost.vapour > _WORTH_SAYING:
+        part = -100 * math.expm1(-lost.droplets - lost.vapour)
+        yield ("losses", f"the background took {part:.2g} percent of J, {done}: a cleaner gas "
+               "would need no such correction")
+    if lost.taken is None:
+        yield ("losses-unknown", "what the background took of the vapour is not counted: the "
+               "effective duration of the hold is not known")
+    elif lost.vapour > _MOST:
+        yield ("vapour-taken", f"the background took {100 * lost.taken:.2g} percent of the vapour "
+               "by the middle of the hold, and with it most of J: that is too much for the "
+               "correction to be trusted")
 
 
 def _about_the_fit(isotherm, count):

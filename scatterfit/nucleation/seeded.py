@@ -4,9 +4,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from scatterfit.constants import GAS_CONSTANT
 from scatterfit.nucleation.activation_fit import Fractions
-from scatterfit.nucleation.select import errors_of
+from scatterfit.nucleation.select import errors_of, to_chamber_density
 from scatterfit.nucleation.table import (
     CONCENTRATION,
     SATURATION_RATIO,
@@ -106,27 +105,11 @@ def seeded_pulses(table, gas=None, *, ambiguous=False):
 
 
 def _density_factor(table, gas):
-    """Return what takes a number during growth to the chamber's state, where seeds are counted.
-
-    By the two pressures where they are given, else along an adiabat of the carrier,
-    n / n0 = (T / T0)^(cp / R - 1).
-    """
-    pressures = ("chamber.pressure_kPa", "growth_pressure_kPa")
-    temperatures = ("growth_temperature_K", "chamber.temperature_K")
-    as_given = np.ones(len(table.names)), "number and seeds as given, at the same gas density"
-    if not all(map(table.has, temperatures)):
-        return as_given
-    cold, warm = map(table.number, temperatures)
-    if all(map(table.has, pressures)):
-        before, during = map(table.number, pressures)
-        factor, how = before * cold / (during * warm), "by temperature and pressure"
-    elif gas is not None:
-        power = gas.heat_capacity(0.5 * (cold + warm)) / GAS_CONSTANT - 1.0
-        factor, how = (warm / cold) ** power, "along an adiabat of the carrier"
-    else:
-        return as_given
-    return (np.where(np.isfinite(factor), factor, 1.0),
-            f"number taken from the gas density of growth to that of the chamber, {how}")
+    """Return what takes a number during growth to the chamber's state, where seeds are counted."""
+    factor, how = to_chamber_density(table, gas, "growth")
+    if how is None:
+        return factor, "number and seeds as given, at the same gas density"
+    return factor, f"number taken from the gas density of growth to that of the chamber, {how}"
 
 
 def _fractions(table, rows, fraction, limit):

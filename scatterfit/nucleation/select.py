@@ -5,6 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from scatterfit.constants import GAS_CONSTANT
 from scatterfit.nucleation.table import (
     CONCENTRATION,
     COVARIANCE,
@@ -248,3 +249,42 @@ def _filled(values):
 def _difference(whole, part):
     """Return the other part of an uncertainty."""
     return np.zeros_like(part) if whole is None else np.sqrt(np.maximum(whole**2 - part**2, 0.0))
+
+
+def to_chamber_density(table, gas, state):
+    """Return what takes a number per volume at another state to the chamber's before expansion.
+
+    By the two pressures where they are given, else along an adiabat of the carrier,
+    n / n0 = (T / T0)^(cp / R - 1).
+
+    Parameters
+    ----------
+    table : Table
+        The table.
+    gas : Gas or None
+        The carrier, which tells the density of the gas from its temperature.
+    state : str
+        ``growth`` or ``nucleation``, which the columns of the other state begin with.
+
+    Returns
+    -------
+    factor : ndarray, shape (n,)
+        One where it is not known [-].
+    how : str or None
+        In words; ``None`` where the table does not tell.
+    """
+    temperatures = (f"{state}_temperature_K", "chamber.temperature_K")
+    pressures = ("chamber.pressure_kPa", f"{state}_pressure_kPa")
+    one = np.ones(len(table.names))
+    if not all(map(table.has, temperatures)):
+        return one, None
+    cold, warm = map(table.number, temperatures)
+    if all(map(table.has, pressures)):
+        before, during = map(table.number, pressures)
+        factor, how = before * cold / (during * warm), "by temperature and pressure"
+    elif gas is not None:
+        power = gas.heat_capacity(0.5 * (cold + warm)) / GAS_CONSTANT - 1.0
+        factor, how = (warm / cold) ** power, "along an adiabat of the carrier"
+    else:
+        return one, None
+    return np.where(np.isfinite(factor), factor, 1.0), how

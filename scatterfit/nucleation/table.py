@@ -19,25 +19,39 @@ RATE_LIMIT = "nucleation_rate_upper_limit_per_cm3_s"
 DURATION = "nucleation_effective_ms"
 COVARIANCE = "nucleation_temperature_saturation_covariance_K"
 PRESSURE = "nucleation_pressure_kPa"
-BACKGROUND = "background.concentration_per_cm3"
-BACKGROUND_DIAMETER = "background.diameter_nm"
+BACKGROUND = "background_concentration_per_cm3"
+BACKGROUND_DIAMETER = "background_diameter_nm"
+BACKGROUND_UNTIL = "background_detected_diameter_nm"
 VIEWED_VOLUME = "viewed_volume_mm3"
 BLANK = "blank"
+
+OTHER_NAMES = {
+    "background.concentration_per_cm3": BACKGROUND,
+    "background.concentration_per_cm3_sigma": f"{BACKGROUND}_sigma",
+    "background.diameter_nm": BACKGROUND_DIAMETER,
+    "background.diameter_nm_sigma": f"{BACKGROUND_DIAMETER}_sigma",
+    "background.detected_diameter_nm": BACKGROUND_UNTIL,
+    "start_temperature_K": "chamber.temperature_K",
+    "start_pressure_kPa": "chamber.pressure_kPa",
+}
+"""Key path, or an export's column, to the column that means the same and wins where both are."""
 
 SUFFIXES = ("_sigma", "_sigma_statistical", "_sigma_systematic")
 """What may follow a measured column's name."""
 
 _POSITIVE = (TEMPERATURE, SATURATION_RATIO, SEEDS, SEED_DIAMETER, PRESSURE, VIEWED_VOLUME,
-             BACKGROUND_DIAMETER, "growth_temperature_K", "growth_pressure_kPa",
+             BACKGROUND_DIAMETER, BACKGROUND_UNTIL, "growth_temperature_K", "growth_pressure_kPa",
              "chamber.temperature_K", "chamber.pressure_kPa")
 _NOT_NEGATIVE = (RATE, CONCENTRATION, UPPER_LIMIT, RATE_LIMIT, DURATION, BACKGROUND)
-_WITH_SIGMA = (TEMPERATURE, SATURATION_RATIO, RATE, CONCENTRATION, SEEDS, DURATION)
+_WITH_SIGMA = (TEMPERATURE, SATURATION_RATIO, RATE, CONCENTRATION, SEEDS, DURATION, BACKGROUND,
+               BACKGROUND_DIAMETER)
 _RULES = {
     **dict.fromkeys(_POSITIVE, "positive"),
     **dict.fromkeys(_NOT_NEGATIVE, "not negative"),
     **{name + suffix: "not negative" for name in _WITH_SIGMA for suffix in SUFFIXES},
     COVARIANCE: "a number",
 }
+_RULES |= {other: _RULES[name] for other, name in OTHER_NAMES.items()}
 _VERDICTS = ("accepted", "ambiguous", "rejected", "failed", "")
 _YES, _NO = ("1", "true", "yes"), ("", "0", "false", "no")
 
@@ -113,6 +127,10 @@ def table_from_columns(columns, source="table", rows=None):
     for name, cells in columns.items():
         if name in _RULES:
             texts[name] = _Texts(cells)
+    for other, name in OTHER_NAMES.items():
+        if other in numbers:
+            own = numbers.get(name, numbers[other])
+            numbers[name] = np.where(np.isfinite(own), own, numbers[other])
     _check_words(texts, "verdict", _VERDICTS, source, rows)
     _check_words(texts, BLANK, _YES + _NO, source, rows)
     labels = texts.get("trace", ("",) * count)

@@ -67,6 +67,15 @@ COLUMNS = (
     Column("seed_concentration_per_cm3", "cm-3", "seeds per volume at the chamber's state",
            ("seed", "concentration_per_cm3")),
     Column("seed_diameter_nm", "nm", "diameter of the seeds", ("seed", "diameter_nm")),
+    Column("background_concentration_per_cm3", "cm-3", "larger particles per volume at the "
+           "chamber's state", ("background", "concentration_per_cm3")),
+    Column("background_diameter_nm", "nm", "their diameter", ("background", "diameter_nm")),
+    Column("background_detected_diameter_nm", "nm", "diameter from which on droplets are no longer "
+           "swept up", ("background", "detected_diameter_nm")),
+    Column("start_temperature_K", "K", "before the expansion, as stated",
+           ("chamber", "temperature_K")),
+    Column("start_pressure_kPa", "kPa", "before the expansion, as stated",
+           ("chamber", "pressure_kPa")),
 )
 """Every number that the table has of a pulse, in its order."""
 
@@ -113,15 +122,19 @@ KEPT_BY_HAND = {
 """Columns that say whether a pulse was excluded by hand."""
 
 
-def flat_row(result, seed=None):
+STATED = ("seed", "background", "chamber")
+"""Tables of the chamber file that the columns show as they are stated."""
+
+
+def flat_row(result, stated=None):
     """Return the flat columns of one result.
 
     Parameters
     ----------
     result : mapping
         A result as ``MeasuredPulse.to_dict`` gives it.
-    seed : mapping, optional
-        The chamber file's ``[seed]`` table with this pulse's overrides.
+    stated : mapping, optional
+        The chamber file's tables of `STATED` with this pulse's overrides.
 
     Returns
     -------
@@ -132,7 +145,7 @@ def flat_row(result, seed=None):
     --------
     >>> from scatterfit.measured_pulse.record import MeasuredPulse, Quantity
     >>> pulse = MeasuredPulse("a.csv", "accepted", final_radius=Quantity(1.5e-6, 1e-9))
-    >>> row = flat_row(pulse.to_dict(), {"diameter_nm": 80.0})
+    >>> row = flat_row(pulse.to_dict(), {"seed": {"diameter_nm": 80.0}})
     >>> row["final_radius_um"], row["final_radius_um_sigma"], row["seed_diameter_nm"]
     (1.5, 0.001, 80.0)
     """
@@ -141,13 +154,15 @@ def flat_row(result, seed=None):
         "verdict": result["verdict"],
         "reasons": ";".join(dict.fromkeys(reason["code"] for reason in result["reasons"])),
     }
-    seed = seed or {}
-    stated = {name: {"value": value, "sigma": seed.get(f"{name}_sigma")}
-              for name, value in seed.items() if not name.endswith("_sigma")}
-    tree = {**result, "seed": stated}
+    tree = {**result, **{table: _quantities(keys) for table, keys in (stated or {}).items()}}
     for column in COLUMNS:
         row.update(_cells(column, _found(tree, column.path)))
     return row
+
+
+def _quantities(keys):
+    return {name: {"value": value, "sigma": keys.get(f"{name}_sigma")}
+            for name, value in keys.items() if not name.endswith("_sigma")}
 
 
 def _found(tree, path):

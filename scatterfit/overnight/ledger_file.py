@@ -7,7 +7,7 @@ from urllib.parse import quote
 
 from scatterfit.apparatus.values import printable
 from scatterfit.errors import ScatterfitError
-from scatterfit.overnight.schema import APPLICATION_ID, SCHEMA, VERSION
+from scatterfit.overnight.schema import ADDED, APPLICATION_ID, SCHEMA, VERSION, VIEW
 from scatterfit.overnight.shares import on_network_share
 
 _BUSY_SECONDS = 60.0
@@ -147,6 +147,20 @@ def _check(connection, path, write):
         message = (f"{path}: written by a newer scatterfit (ledger version {version}, this one "
                    f"knows up to {VERSION}); update scatterfit, or choose another file")
         raise LedgerError(printable(message))
+    if write and version < VERSION:
+        _bring_up(connection)
+
+
+def _bring_up(connection):
+    """Add what newer tables have, for a ledger of an older version."""
+    with transaction(connection):
+        there = {row["name"] for row in connection.execute("PRAGMA table_info(pulses)")}
+        for name in ADDED:
+            if name not in there:  # another process may have been quicker
+                connection.execute(f'ALTER TABLE pulses ADD COLUMN "{name}" REAL')
+        connection.execute("DROP VIEW IF EXISTS night")
+        connection.execute(VIEW)  # a view keeps the columns that there were when it was made
+        connection.execute(f"PRAGMA user_version = {VERSION}")
 
 
 def _is_empty(connection):

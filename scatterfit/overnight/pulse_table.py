@@ -4,11 +4,11 @@ import tomllib
 from contextlib import closing
 
 from scatterfit.apparatus.check import apparatus_from_mapping
-from scatterfit.nucleation.table import BACKGROUND, BACKGROUND_DIAMETER, table_from_columns
+from scatterfit.nucleation.table import table_from_columns
 from scatterfit.overnight.ledger_file import connect, explained
 from scatterfit.overnight.results import open_results
 
-_FROM_CHAMBER = ("chamber.temperature_K", "chamber.pressure_kPa", BACKGROUND, BACKGROUND_DIAMETER)
+_FROM_CHAMBER = ("chamber.temperature_K", "chamber.pressure_kPa")
 
 
 def pulse_table(path):

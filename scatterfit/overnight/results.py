@@ -131,8 +131,8 @@ class Results:
         """
         overridden = self._overridden()
         for row in self._query(f"SELECT * FROM night {self._where()} ORDER BY trace"):
-            overrides = json.loads(row["overrides"])
-            yield {name: row[name] for name in _FLAT} | {
+            overrides, there = json.loads(row["overrides"]), set(row.keys())
+            yield {name: row[name] if name in there else None for name in _FLAT} | {
                 name: _cell(overrides.get(name)) for name in overridden}
 
     def table(self):

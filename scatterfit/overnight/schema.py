@@ -5,10 +5,23 @@ from scatterfit.overnight.columns import NUMBERS
 APPLICATION_ID = 0x53466C67
 """Marks the SQLite file as a ledger (``PRAGMA application_id``)."""
 
-VERSION = 1
+VERSION = 2
 """Of the tables (``PRAGMA user_version``); a newer one is refused, an older one brought up."""
 
+ADDED = tuple(name for name in NUMBERS
+              if name.startswith(("background_", "start_")))
+"""Columns of numbers that version 1 lacks."""
+
 _NUMBERS = ",\n".join(f'    "{name}" REAL' for name in NUMBERS)
+
+VIEW = """CREATE VIEW night AS
+SELECT pulses.*,
+       coalesce(last.excluded, 0) AS excluded,
+       CASE WHEN last.excluded THEN last.author END AS excluded_by,
+       CASE WHEN last.excluded THEN last.note END AS excluded_note
+FROM pulses LEFT JOIN exclusions AS last
+  ON last.id = (SELECT max(id) FROM exclusions WHERE exclusions.trace = pulses.trace)"""
+"""The view for people: one row a trace, with what is excluded by hand."""
 
 SCHEMA = f"""
 CREATE TABLE about (
@@ -69,12 +82,6 @@ CREATE TABLE queue (
 CREATE INDEX queue_free ON queue (trace) WHERE claimed_by IS NULL;
 CREATE INDEX queue_claimed ON queue (claimed_until) WHERE claimed_by IS NOT NULL;
 
-CREATE VIEW night AS
-SELECT pulses.*,
-       coalesce(last.excluded, 0) AS excluded,
-       CASE WHEN last.excluded THEN last.author END AS excluded_by,
-       CASE WHEN last.excluded THEN last.note END AS excluded_note
-FROM pulses LEFT JOIN exclusions AS last
-  ON last.id = (SELECT max(id) FROM exclusions WHERE exclusions.trace = pulses.trace);
+{VIEW};
 """
 """Statements that make a new ledger."""

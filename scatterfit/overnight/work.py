@@ -12,7 +12,7 @@ from pathlib import Path
 from scatterfit.apparatus.values import printable
 from scatterfit.errors import ChamberFileError, ScatterfitError
 from scatterfit.measured_pulse.record import MeasuredPulse, Reason
-from scatterfit.overnight.columns import flat_row
+from scatterfit.overnight.columns import STATED, flat_row
 from scatterfit.overnight.deadline import TookTooLongError, last_resort, time_limit
 from scatterfit.overnight.jobs import Job, Plan, Seen, hash_of, seen, set_outside, version
 from scatterfit.overnight.thin import thinned
@@ -154,33 +154,33 @@ def _ready(plan, job, pulse):
     result = pulse.to_dict() | {"trace": job.trace}
     overrides = result["provenance"].get("overrides") or {}
     return {
-        "row": flat_row(result, _seed(plan.chamber, overrides)),
+        "row": flat_row(result, _stated(plan.chamber, overrides)),
         "result": json.dumps(result, allow_nan=False, ensure_ascii=False, default=str),
         "thinned": json.dumps(thinned(pulse.channels), allow_nan=False, separators=(",", ":")),
         "overrides": json.dumps(overrides, ensure_ascii=False, default=str),
     }
 
 
-def _seed(chamber, overrides):
-    """Return the seeds that the chamber file states, with this pulse's own values."""
+def _stated(chamber, overrides):
+    """Return what the chamber file states of `STATED`, with this pulse's own values."""
     try:
-        seed = dict(_seed_table(Path(chamber).read_bytes()))
+        tables = dict(_tables(Path(chamber).read_bytes()))
     except OSError:
-        seed = {}
+        tables = {}
     for path, value in overrides.items():
         table, _, name = path.partition(".")
-        if table == "seed":
-            seed[name] = value
-    return seed
+        if table in STATED:
+            tables[table] = {**tables.get(table, {}), name: value}
+    return tables
 
 
 @lru_cache(maxsize=4)
-def _seed_table(content):
+def _tables(content):
     try:
-        table = tomllib.loads(content.decode("utf-8-sig")).get("seed")
+        found = tomllib.loads(content.decode("utf-8-sig"))
     except ValueError:
         return ()
-    return tuple(table.items()) if isinstance(table, dict) else ()
+    return tuple((name, found[name]) for name in STATED if isinstance(found.get(name), dict))
 
 
 def _described(error):

@@ -31,7 +31,7 @@ def rates_text(result):
     parts += [
         _lines("Series of holds", map(_series, result["hold_series"])),
         _lines("Compared with the other table", map(_night, result["comparison"])),
-        _lines("Losses to the background", _losses(isotherms)),
+        _lines(*_losses(isotherms)),
         _cautions(isotherms),
         _left_out(result["left_out"]),
     ]
@@ -120,13 +120,24 @@ def _night(found):
 
 
 def _losses(isotherms):
-    for isotherm in isotherms:
-        lost = isotherm["losses"]
-        if lost:
-            yield (f"{_named(isotherm)} K: condensation sink "
-                   f"{format_number(lost['condensation_sink_per_s'], '1/s', 3)}, growth "
-                   f"{format_number(lost['growth_rate_nm_per_ms'], 'nm/ms', 3)}, survival "
-                   f"{lost['survival']:.3f}")
+    """Return title and lines on what a background took of each isotherm's rates."""
+    found = [(isotherm, isotherm["losses"]) for isotherm in isotherms if isotherm["losses"]]
+    done = found and found[0][1]["corrected"]
+    how = "J above is corrected for them" if done else "J above is not corrected for them"
+    title = f"Losses to the background ({how})"
+    return title, [_lost(isotherm, lost) for isotherm, lost in found]
+
+
+def _lost(isotherm, lost):
+    vapour = lost["lost_by_vapour_percent"]
+    by_vapour = "not known" if vapour is None else f"{format_number(vapour, digits=2)} %"
+    return (f"{_named(isotherm)} K: {_pm(lost['lost_percent'])} % of J lost, so J times "
+            f"{_pm(lost['factor_on_rate'])}; droplets swept up before "
+            f"{format_number(lost['detected_diameter_nm'], 'nm', 3)}: "
+            f"{format_number(lost['lost_droplets_percent'], digits=2)} % (survival "
+            f"{lost['survival']:.4f}), by vapour taken: {by_vapour}; condensation sink "
+            f"{format_number(lost['condensation_sink_per_s'], '1/s', 3)}, growth "
+            f"{format_number(lost['growth_rate_nm_per_ms'], 'nm/ms', 3)}")
 
 
 def activation_text(result):

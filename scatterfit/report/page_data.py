@@ -145,9 +145,9 @@ class _Row:
         self.fitted, self.seconds = row["fitted_utc"], row["fit_seconds"] or 0.0
         self.version = row["version"]
         self.overrides = json.loads(row["overrides"])
-        self.numbers = [(row[column.name],
-                         row[f"{column.name}_sigma"] if column.has_sigma else None)
-                        for column in COLUMNS]
+        there = set(row.keys())  # a ledger of an older version has fewer columns
+        self.numbers = [tuple(row[name] if name in there else None for name in
+                              (column.name, f"{column.name}_sigma")) for column in COLUMNS]
         key = row["id"], row["fitted_utc"], points
         if key not in thumbs:
             thumbs[key] = thumbnail(json.loads(row["thinned"]), points)
