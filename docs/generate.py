@@ -55,9 +55,9 @@ def chamber_keys():
 
 
 def _table(table):
-    brackets = f"[[{table.name}]]" if table.repeated else f"[{table.name}]"
+    heading = f"`{table.heading}`" + (f" or `[[{table.name}]]`" if table.several else "")
     needed = "required" if table.required else "optional"
-    lines = [f"### `{brackets}`: {table.doc} ({needed})", ""]
+    lines = [f"### {heading}: {table.doc} ({needed})", ""]
     lines += ["| key | meaning | values | example | sigma |", "|---|---|---|---|---|"]
     for key in (key for key in key_table() if key.table == table.name):
         values = str(key.bounds) if key.kind == "number" else key.kind

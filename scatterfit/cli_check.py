@@ -3,7 +3,7 @@
 from scatterfit import matter
 from scatterfit.apparatus.check import apparatus_from_mapping, apply_overrides
 from scatterfit.apparatus.saturation import saturation_before
-from scatterfit.cloud_optics.build import build_kernel
+from scatterfit.cloud_optics.beams import beam_indices, build_bench_kernel
 from scatterfit.constants import STANDARD_PRESSURE
 from scatterfit.droplet_growth.setup import growth_setup
 from scatterfit.files import load_pulse, parse_assignment, read_chamber_mapping
@@ -71,14 +71,11 @@ def _kernel_table(bench, setup):
     if setup is not None:
         temperature = setup.path.reference_temperature
         pressure = setup.path.reference_pressure
-    wavelength = bench.beam.wavelength
-    gas = matter.carrier(bench.carrier)
-    gas_index = float(gas.refractive_index(wavelength, temperature, pressure or STANDARD_PRESSURE))
-    liquid = bench.vapour.refractive_index
-    if liquid is None:
-        liquid = matter.substance(bench.vapour.substance).refractive_index(wavelength, temperature)
-    relative = complex(liquid) / gas_index
-    return build_kernel(bench, gas_index, relative, default_store()).at(relative, spread=SPREAD)
+    state = temperature, pressure or STANDARD_PRESSURE, temperature
+    gas, liquid = beam_indices(
+        bench, matter.carrier(bench.carrier), matter.substance(bench.vapour.substance), state)
+    kernel = build_bench_kernel(bench, gas, liquid / gas, default_store())
+    return kernel.at(liquid / gas, spread=SPREAD)
 
 
 def _start(bench, setup):

@@ -4,7 +4,7 @@ import csv
 from functools import lru_cache
 from pathlib import Path
 
-from scatterfit.apparatus.overrides import known_paths, split_path
+from scatterfit.apparatus.overrides import known_paths, paths_like, split_path
 from scatterfit.apparatus.values import nearest, printable, suggestion
 from scatterfit.errors import ChamberFileError
 from scatterfit.files_text import delimiter_of, parse_scalar
@@ -101,9 +101,8 @@ def _check_remark(name, where):
     """Refuse a column that looks like a mistyped key path; other names are remarks."""
     by_key = {path.rpartition(".")[2]: path for path in reversed(known_paths())}
     if "." in name:
-        columns = (name.removeprefix("detector.").rpartition(".")[0] or "COLUMN",)
         raise _refused(where, f"column {name}: unknown key path; "
-                              f"{suggestion(name, known_paths(columns))}")
+                              f"{suggestion(name, paths_like(name))}")
     match = nearest(name, by_key)
     if match:
         raise _refused(where, f"column {name}: not a key path; did you mean {by_key[match]}?")

@@ -338,7 +338,8 @@ MISTAKES = {
     "no channel": (GAUGE[GAUGE.index("[[detector]]"):GAUGE.index("[pressure]")], "",
                    ["detector", "at least one [[detector]] or a [transmission]"]),
     "detector as one table": ("[[detector]]", "[detector]", ["detector = {", "[[detector]]"]),
-    "beam as many tables": ("[beam]", "[[beam]]", ["beam = [{", "one table, [beam]"]),
+    "gas as many tables": ("[gas]", "[[gas]]", ["gas = [{", "one table, [gas]"]),
+    "beam as a number": ("[beam]", "beam = 3\n[seed]", ["beam = 3", "[beam]", "[[beam]]"]),
     "table is a number": ("[beam]", "seed = 3\n[beam]", ["seed = 3", "[seed]"]),
     "growth beside a gauge": ("[gas]", "[growth]\ntemperature_K = 265\npressure_kPa = 70\n[gas]",
                               ["growth = {temperature_K = 265", "[pressure]", "leave out"]),
@@ -483,6 +484,8 @@ def test_every_example_is_allowed(key):
         del content["mole_fraction"]
     if key.table == "reference":
         content["column"] = "monitor_V"
+    if key.name == "beam":
+        mapping["beam"]["name"] = value
     content[key.name] = value
     apparatus_from_mapping(mapping)
 
@@ -558,7 +561,7 @@ def test_overrides_of_a_mapping_that_is_wrong_itself_leave_the_message_to_the_ch
         apparatus_from_mapping(changed)
 
 
-@pytest.mark.parametrize("path", known_paths(["a.b_V"]))
+@pytest.mark.parametrize("path", known_paths(["a.b_V"], ["red", "2.5 um"]))
 def test_every_key_path_is_understood(path):
     table, column, name = split_path(path)
     assert path == ".".join(part for part in (table, column, name) if part)

@@ -63,7 +63,7 @@ CLOUD = Cloud(number=np.log(8e9), variance=2e-5, angles=(0.0, 0.0))
 @pytest.mark.parametrize("variance", [1e-5, 1e-4, 2e-3])
 def test_spread_table_against_the_kernels_own_widening(optics, model, variance):
     _, kernel, relative = optics
-    wide = kernel.at(relative, spread=float(np.sqrt(BASE_SPREAD**2 + variance)))
+    wide = kernel.kernels[0].at(relative[0], spread=float(np.sqrt(BASE_SPREAD**2 + variance)))
     rows = np.vstack([wide.collected, wide.extinction, wide.extinction - wide.forward])
     grid = wide.log_radius_start + wide.step * np.arange(rows.shape[1])
     table = spread_table(model.light, variance)
@@ -79,7 +79,7 @@ def test_spread_table_against_the_kernels_own_widening(optics, model, variance):
 def test_spread_table_against_brute_force_quadrature(optics, model):
     """Averages over a normal distribution of ln r, by Gauss and Hermite's rule."""
     _, kernel, relative = optics
-    base = kernel.at(relative)
+    base = kernel.kernels[0].at(relative[0])
     grid = base.log_radius_start + base.step * np.arange(base.extinction.size)
     nodes, weights = np.polynomial.hermite_e.hermegauss(60)
     table = spread_table(model.light, 9e-4)
@@ -220,7 +220,7 @@ def test_forward_light_of_the_receiver_is_not_lost(optics, model):
     shares = []
     for radius in (1e-6, 3e-6, 4.5e-6):
         sizes = wavenumber * radius * np.exp(BASE_SPREAD * nodes)
-        light = scatter(sizes, relative, theta)
+        light = scatter(sizes, relative[0], theta)
         mean = 0.5 * (light.perpendicular + light.parallel).T
         ring = np.trapezoid(2 * np.pi * np.sin(theta) * mean, theta, axis=1) / wavenumber**2
         forward = weights @ ring / weights.sum()

@@ -25,8 +25,6 @@ from scatterfit.errors import ChamberFileError, InvalidInputError
 __all__ = ["apparatus_from_mapping", "apply_overrides", "nearest"]
 
 _RECORDS = {
-    "beam": Beam,
-    "detector": Detector,
     "transmission": Transmission,
     "reference": Reference,
     "pressure": PressureGauge,
@@ -78,11 +76,14 @@ def apparatus_from_mapping(mapping, where="chamber file"):
     sigmas = {}
     records = {}
     for name, table in mapping.items():
-        if name in _RECORDS and name != "detector":
+        if name in _RECORDS:
             fields = _read_table(name, table, name, where, sigmas)
             records[name] = _RECORDS[name](**fields)
+    first, *others = _beams(mapping["beam"], where, sigmas)
     bench = Apparatus(
         **records,
+        beam=first,
+        other_beams=tuple(others),
         detectors=_detectors(mapping.get("detector", []), where, sigmas),
         vapour=_vapour(mapping["vapour"], where, sigmas),
         carrier=_carrier(mapping["gas"], where, sigmas),
@@ -97,15 +98,24 @@ def _check_tables(mapping, where):
     for name, content in mapping.items():
         if name not in TABLE_BY_NAME:
             _unknown_at_top(name, content, where)
-        elif TABLE_BY_NAME[name].repeated:
-            if not isinstance(content, list) or not all(isinstance(c, dict) for c in content):
-                fail(where, name, content, f"write one [[{name}]] table for each of them")
-        elif not isinstance(content, dict):
-            fail(where, name, content, f"write it as one table, [{name}]")
+        else:
+            _check_shape(TABLE_BY_NAME[name], content, where)
     for table in TABLES:
         if table.required and table.name not in mapping:
             message = f"{where}: {table.name}: the table [{table.name}] is missing ({table.doc})"
             raise ChamberFileError(message)
+
+
+def _check_shape(table, content, where):
+    """Refuse one table where several are meant, and the other way round."""
+    many = isinstance(content, list) and all(isinstance(part, dict) for part in content)
+    if table.repeated and not many:
+        fail(where, table.name, content, f"write one [[{table.name}]] table for each of them")
+    if table.several and many and content:
+        return
+    if not table.repeated and not isinstance(content, dict):
+        more = f", or as several, [[{table.name}]]" if table.several else ""
+        fail(where, table.name, content, f"write it as one table, [{table.name}]{more}")
 
 
 def _unknown_at_top(name, content, where):
@@ -155,14 +165,26 @@ def _read_sibling(keys, name, content, where, prefix, sigmas):
     return True
 
 
+def _beams(content, where, sigmas):
+    """Return every beam; sigmas of several carry their names."""
+    if isinstance(content, dict) or len(content) == 1:
+        table = content if isinstance(content, dict) else content[0]
+        return [Beam(**_read_table("beam", table, "beam", where, sigmas))]
+    return [Beam(**_read_table("beam", table, prefix, where, sigmas))
+            for prefix, table in _named("beam", "name", content)]
+
+
 def _detectors(tables, where, sigmas):
-    detectors = []
-    for number, content in enumerate(tables, start=1):
-        column = content.get("column")
-        named = isinstance(column, str) and column.strip()
-        prefix = f"detector.{column.strip()}" if named else f"detector[{number}]"
-        detectors.append(Detector(**_read_table("detector", content, prefix, where, sigmas)))
-    return tuple(detectors)
+    return tuple(Detector(**_read_table("detector", table, prefix, where, sigmas))
+                 for prefix, table in _named("detector", "column", tables))
+
+
+def _named(kind, key, tables):
+    """Yield tables of an array with the start of their key paths, by name where they have one."""
+    for number, table in enumerate(tables, start=1):
+        name = table.get(key)
+        named = isinstance(name, str) and name.strip()
+        yield f"{kind}.{name.strip()}" if named else f"{kind}[{number}]", table
 
 
 def _vapour(content, where, sigmas):

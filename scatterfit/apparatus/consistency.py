@@ -2,7 +2,7 @@
 
 from scatterfit.apparatus.keys import HUMIDITY
 from scatterfit.apparatus.saturation import check_saturation
-from scatterfit.apparatus.values import fail
+from scatterfit.apparatus.values import fail, suggestion
 from scatterfit.errors import ChamberFileError
 
 
@@ -21,11 +21,14 @@ def check_bench(bench, mapping, where):
     Raises
     ------
     ChamberFileError
-        If it has no optical channel, two of them in one column, a cone that takes in the direct
-        beam, no or two statements of the vapour or of the growth state, vapour above saturation,
-        or a reference radius that is not considered.
+        If it has no optical channel, two of them in one column, a channel of no known beam, a beam
+        of no channel, a cone that takes in the direct beam, no or two statements of the vapour, of
+        the liquid's index or of the growth state, vapour above saturation, or a reference radius
+        that is not considered.
     """
     _check_channels(bench, where)
+    _check_beams(bench, where)
+    _check_indices(bench, mapping, where)
     _check_cones(bench, mapping, where)
     _check_vapour_stated_once(mapping["vapour"], where)
     _check_growth_state(bench, mapping, where)
@@ -65,6 +68,66 @@ def _check_channels(bench, where):
             other = "another detector" if path == seen[column] else seen[column]
             fail(where, path, column, f"the same column is named by {other}; give each its own")
         seen[column] = path
+
+
+def _check_beams(bench, where):
+    """Refuse names of beams that are missing or not their own, and beams that no channel sees."""
+    names = [beam.name for beam in bench.beams]
+    several = len(names) > 1
+    for number, name in enumerate(names):
+        if several and name is None:
+            message = (f"{where}: beam[{number + 1}].name is missing: each of several [[beam]] "
+                       'tables needs one, e.g. name = "green"')
+            raise ChamberFileError(message)
+        if name in names[:number]:
+            fail(where, f"beam[{number + 1}].name", name,
+                 "another beam has this name; give each its own")
+    seen = {channel.beam for _, channel in _channels(bench)}
+    _check_whose_light(bench, names, where)
+    for name in names if several else ():
+        if name not in seen:
+            fail(where, f"beam.{name}.name", name,
+                 "no detector and no transmission names this beam; leave it out, or name it there")
+
+
+def _channels(bench):
+    """Return key paths of the optical channels and their records."""
+    channels = [(f"detector.{d.column}", d) for d in bench.detectors]
+    return channels + ([("transmission", bench.transmission)] if bench.transmission else [])
+
+
+def _check_whose_light(bench, names, where):
+    """Refuse channels that do not tell which beam they see."""
+    channels = _channels(bench)
+    without = next((path for path, channel in channels if channel.beam is None), None)
+    if len(names) > 1 and without:
+        message = (f"{where}: {without}.beam is missing: the bench has several beams, "
+                   f"{', '.join(names)}; say whose light this is")
+        raise ChamberFileError(message)
+    if bench.reference is not None:
+        channels.append(("reference", bench.reference))
+    for path, channel in channels:
+        if channel.beam is not None and channel.beam not in names:
+            known = [name for name in names if name]
+            remedy = (f"no beam has this name; {suggestion(channel.beam, known)}" if known else
+                      "the one [beam] has no name; leave this key out, or name the beam")
+            fail(where, f"{path}.beam", channel.beam, remedy)
+
+
+def _check_indices(bench, mapping, where):
+    """Refuse one index of the liquid for several colours, and two for one."""
+    if bench.vapour.refractive_index is None:
+        return
+    written = mapping["vapour"]["refractive_index"]
+    for beam in bench.beams:
+        if beam.refractive_index is not None:
+            path = bench.path_of(beam)
+            fail(where, "vapour.refractive_index", written,
+                 f"{path}.refractive_index says the same; leave out one of the two")
+    if len({beam.wavelength for beam in bench.beams}) > 1:
+        fail(where, "vapour.refractive_index", written,
+             "the beams differ in wavelength, and the index with it; give refractive_index in each "
+             "[[beam]], or leave it out for the built-in correlation")
 
 
 def _check_cones(bench, mapping, where):

@@ -88,10 +88,17 @@ class Table:
     """What it describes, one line."""
     repeated: bool = False
     """Whether it is an array of tables."""
+    several: bool = False
+    """Whether it may be one table or an array of tables with names."""
+
+    @property
+    def heading(self):
+        """Return how its heading is written in the file."""
+        return f"[[{self.name}]]" if self.repeated else f"[{self.name}]"
 
 
 TABLES = (
-    Table("beam", True, "the laser beam"),
+    Table("beam", True, "the laser beam", several=True),
     Table("detector", False, "one detector of scattered light; as many as there are", True),
     Table("transmission", False, "the transmitted beam"),
     Table("reference", False, "laser-power monitor: optical columns are divided by it"),
@@ -125,6 +132,10 @@ KEYS = (
         bounds=Bounds(-180, 180), required=True, example='"perpendicular"',
         doc='electric field against the scattering plane: "perpendicular", "parallel", '
             '"unpolarized", or degrees from the plane'),
+    Key("beam", "name", "name", kind="text", example='"green"',
+        doc="what a detector calls it; required where there are several, then written [[beam]]"),
+    Key("beam", "refractive_index", "refractive_index", kind="index", example="1.3368",
+        doc="of the liquid against vacuum at this wavelength, instead of the one in [vapour]"),
     Key("detector", "column", "column", kind="column", required=True, example='"scatter1_V"',
         doc="trace column it fills"),
     Key("detector", "angle_deg", "angle", "deg", bounds=Bounds(0, 180), required=True,
@@ -142,6 +153,8 @@ KEYS = (
         doc="electronic offset with the laser off"),
     Key("detector", "volume_mm3", "volume", "mm3", bounds=_POSITIVE, example="5.0",
         doc="viewed volume; adds counting noise"),
+    Key("detector", "beam", "beam", kind="text", example='"green"',
+        doc="name of the beam whose light it collects, where there are several"),
     Key("transmission", "column", "column", kind="column", required=True,
         example='"transmitted_V"', doc="trace column it fills"),
     Key("transmission", "path_mm", "path", "mm", bounds=_POSITIVE, required=True, example="120.0",
@@ -151,10 +164,14 @@ KEYS = (
         doc="acceptance of its receiver; forward light collected there is not lost"),
     Key("transmission", "dark_V", "dark", "V", default=0.0, example="0.0",
         doc="reading with the laser off"),
+    Key("transmission", "beam", "beam", kind="text", example='"green"',
+        doc="name of the beam it receives, where there are several"),
     Key("reference", "column", "column", kind="column", required=True, example='"monitor_V"',
         doc="trace column it fills"),
     Key("reference", "dark_V", "dark", "V", default=0.0, example="0.0",
         doc="reading with the laser off"),
+    Key("reference", "beam", "beam", kind="text", example='"green"',
+        doc="name of the one beam it monitors; without it, all columns are divided by it"),
     Key("pressure", "column", "column", kind="column", required=True, example='"pressure_kPa"',
         doc="trace column it fills"),
     Key("pressure", "offset_kPa", "offset", "kPa", default=0.0, example="0.0",

@@ -3,6 +3,9 @@
 from scatterfit.apparatus.keys import HUMIDITY, KEYS_OF, TABLE_BY_NAME, allowed_names
 from scatterfit.apparatus.values import fail, nearest, read_sigma, read_value, suggestion
 
+_NAMED_BY = {"detector": "column", "beam": "name"}
+"""Tables of which there may be several, and the key that tells them apart."""
+
 
 def split_path(path):
     """Split a key path into table, column of a detector, and key.
@@ -15,13 +18,16 @@ def split_path(path):
     Returns
     -------
     parts : tuple of str or None
-        Table, column (empty but for detectors; the gas for ``gas.carrier.GAS``) and key;
-        ``None`` where no key of the chamber file has this path.
+        Table, column (a detector's, the name of one of several beams, the gas for
+        ``gas.carrier.GAS``; empty for the rest) and key; ``None`` where no key of the chamber
+        file has this path.
 
     Examples
     --------
     >>> split_path("detector.scatter1_V.gain_V_m")
     ('detector', 'scatter1_V', 'gain_V_m')
+    >>> split_path("beam.red.wavelength_nm")
+    ('beam', 'red', 'wavelength_nm')
     >>> split_path("gas.carrier.helium")
     ('gas', 'helium', 'carrier')
     >>> split_path("chamber.colour") is None
@@ -31,9 +37,9 @@ def split_path(path):
     if table not in TABLE_BY_NAME:
         return None
     column, key = "", rest
-    if table == "detector":
+    if table in _NAMED_BY:
         column, _, key = rest.rpartition(".")
-        if not column or key == "column":
+        if key == _NAMED_BY[table] or not (column or table == "beam"):
             return None
     elif rest.startswith("carrier.") and table == "gas":
         key, _, column = rest.partition(".")
@@ -63,8 +69,7 @@ def check_override(path, value, where):
     """
     parts = split_path(path)
     if parts is None:
-        columns = (path.removeprefix("detector.").rpartition(".")[0] or "COLUMN",)
-        fail(where, path, value, f"unknown key path; {_path_meant(path, columns)}")
+        fail(where, path, value, f"unknown key path; {_path_meant(path)}")
     table, column, name = parts
     if table == "gas" and column:
         return
@@ -74,19 +79,44 @@ def check_override(path, value, where):
         read_sigma(KEYS_OF[table][name.removesuffix("_sigma")], value, where, path)
 
 
-def _path_meant(path, columns):
-    match = nearest(path, known_paths(columns))
+def _path_meant(path):
+    match = nearest(path, paths_like(path))
     return f"did you mean {match}?" if match else (
         "a key path reads TABLE.KEY, or detector.COLUMN.KEY, such as chamber.temperature_K")
 
 
-def known_paths(columns=("COLUMN",)):
+def paths_like(path):
+    """Return every key path, with the column or the beam's name that a mistyped one holds.
+
+    Parameters
+    ----------
+    path : str
+        What was written.
+
+    Returns
+    -------
+    paths : list of str
+        Key paths.
+
+    Examples
+    --------
+    >>> "beam.red.wavelength_nm" in paths_like("beam.red.wavelenght_nm")
+    True
+    """
+    column = path.removeprefix("detector.").rpartition(".")[0] or "COLUMN"
+    name = path.partition(".")[2].rpartition(".")[0] if path.startswith("beam.") else ""
+    return known_paths([column], [name] if name else [])
+
+
+def known_paths(columns=("COLUMN",), beams=()):
     """Return every key path, with the given columns for detectors.
 
     Parameters
     ----------
     columns : sequence of str
         Columns of the bench's detectors.
+    beams : sequence of str
+        Names of the bench's beams, where it has several.
 
     Returns
     -------
@@ -104,7 +134,10 @@ def known_paths(columns=("COLUMN",)):
         if table == "detector":
             paths += [f"detector.{c}.{name}" for c in columns for name in names[1:]]
         else:
+            names = [name for name in names if name != _NAMED_BY.get(table)]
             paths += [f"{table}.{name}" for name in names]
+        if table == "beam":
+            paths += [f"beam.{beam}.{name}" for beam in beams for name in names]
     return paths
 
 
@@ -130,8 +163,8 @@ def apply_overrides(mapping, overrides, where="overrides"):
     Raises
     ------
     ChamberFileError
-        If a key path is not known, names a detector that the bench does not have, or its value
-        could not hold on any bench.
+        If a key path is not known, names a detector or a beam that the bench does not have, or
+        its value could not hold on any bench.
 
     Examples
     --------
@@ -144,8 +177,8 @@ def apply_overrides(mapping, overrides, where="overrides"):
     for path, value in overrides.items():
         check_override(path, value, where)
         table, column, name = split_path(path)
-        if table == "detector":
-            _detector(changed, path, value, where)[name] = value
+        if table == "detector" or (table == "beam" and (column or _many(changed.get("beam")))):
+            _named_table(changed, path, value, where)[name] = value
         else:
             _put(changed, table, column, name, value)
     return changed
@@ -179,15 +212,30 @@ def _make_room_for_vapour(mapping, overrides):
             mapping["vapour"].pop(f"{name}_sigma", None)
 
 
-def _detector(mapping, path, value, where):
-    """Return the detector's table that an override's key path names."""
-    tables = [table for table in mapping.get("detector", []) if isinstance(table, dict)]
-    column = split_path(path)[1]
+def _many(content):
+    """Return whether beams are an array of tables."""
+    return isinstance(content, list)
+
+
+def _named_table(mapping, path, value, where):
+    """Return the detector's or beam's table that an override's key path names."""
+    kind, wanted, key = split_path(path)
+    content = mapping.get(kind, [])
+    tables = [table for table in (content if _many(content) else [content])
+              if isinstance(table, dict)]
+    names = [str(table[_NAMED_BY[kind]]).strip() for table in tables if _NAMED_BY[kind] in table]
+    if not wanted and len(tables) == 1:
+        return tables[0]
     for table in tables:
-        if str(table.get("column")).strip() == column:
+        if wanted and str(table.get(_NAMED_BY[kind])).strip() == wanted:
             return table
-    columns = [str(table.get("column")) for table in tables]
-    remedy = f"no detector fills column {column}; " + (
-        suggestion(column, columns) if columns else "the bench has no detectors"
-    )
+    if kind == "detector":
+        remedy = f"no detector fills column {wanted}; " + (
+            suggestion(wanted, names) if names else "the bench has no detectors")
+    elif wanted:
+        remedy = f"no beam is named {wanted}; " + (
+            suggestion(wanted, names) if names else f"there is one beam: write beam.{key}")
+    else:
+        choice = " or ".join(f"beam.{name}.{key}" for name in names)
+        remedy = f"the bench has several beams; write {choice}"
     return fail(where, path, value, remedy)

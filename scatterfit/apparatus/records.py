@@ -6,12 +6,16 @@ from dataclasses import dataclass, field
 
 @dataclass(frozen=True)
 class Beam:
-    """The laser beam."""
+    """A laser beam."""
 
     wavelength: float
     """Vacuum wavelength [m]."""
     polarization: float | None
     """Angle of the electric field from the scattering plane [rad]; ``None`` is unpolarized."""
+    name: str | None = None
+    """What detectors call it, where there are several."""
+    refractive_index: complex | None = None
+    """Of the liquid against vacuum at this wavelength, n + ik [-]; ``None``: the vapour's."""
 
 
 @dataclass(frozen=True)
@@ -34,6 +38,8 @@ class Detector:
     """Electronic offset with the laser off [V]."""
     volume: float | None = None
     """Viewed volume [m^3]."""
+    beam: str | None = None
+    """Name of the beam whose light it collects; ``None``: there is one."""
 
 
 @dataclass(frozen=True)
@@ -48,6 +54,8 @@ class Transmission:
     """Acceptance of its receiver [rad]."""
     dark: float = 0.0
     """Reading with the laser off [V]."""
+    beam: str | None = None
+    """Name of the beam it receives; ``None``: there is one."""
 
 
 @dataclass(frozen=True)
@@ -58,6 +66,8 @@ class Reference:
     """Trace column it fills."""
     dark: float = 0.0
     """Reading with the laser off [V]."""
+    beam: str | None = None
+    """Name of the beam it monitors; ``None``: all."""
 
 
 @dataclass(frozen=True)
@@ -171,6 +181,7 @@ class Apparatus:
     """One bench, complete."""
 
     beam: Beam
+    """The beam; where there are several, the first."""
     detectors: tuple[Detector, ...]
     vapour: Vapour
     carrier: Mapping[str, float]
@@ -190,5 +201,22 @@ class Apparatus:
     For example ``{"chamber.temperature_K": 0.15, "detector.scatter1_V.angle_deg": 0.0026}``
     (kelvin, radian): the unit is that of the record's field, not of the key's suffix. A sigma of
     zero is left out, as it says nothing. ``vapour.refractive_index_k`` is that of the absorbing
-    part where the file gives two, ``gas.carrier.helium`` that of a mole fraction.
+    part where the file gives two, ``gas.carrier.helium`` that of a mole fraction, and
+    ``beam.red.wavelength_nm`` that of a beam that has a name.
     """
+    other_beams: tuple[Beam, ...] = ()
+    """Beams after the first."""
+
+    @property
+    def beams(self) -> tuple[Beam, ...]:
+        """Return every beam."""
+        return (self.beam, *self.other_beams)
+
+    def path_of(self, beam: Beam) -> str:
+        """Return the start of a beam's key paths."""
+        return f"beam.{beam.name}" if self.other_beams else "beam"
+
+    def beam_number(self, record: Detector | Transmission | Reference) -> int:
+        """Return the position among the beams of the one that a record names."""
+        names = [beam.name for beam in self.beams]
+        return 0 if record.beam is None else names.index(record.beam)

@@ -19,13 +19,15 @@ class Channel:
     kind: str
     """``"scatter"`` or ``"transmission"``."""
     row: int
-    """Row of its cross section in the light; for a transmission that of the extinction."""
+    """Row of its cross section in the light; for a transmission that of what it loses."""
     path: float
     """Cloud that attenuates it [m]."""
     gain: float | None
     """[V m]; ``None`` where the amplitude is free."""
     time_constant: float
     """[s]."""
+    dimming_row: int
+    """Row of what attenuates its light: extinction in its beam, or what a transmission loses."""
     angle_row: int | None = None
     """Row with the derivative of its cross section by the angle [m^2/rad]."""
 
@@ -38,6 +40,7 @@ class PulseModel:
     light: CloudLight
     channels: tuple[Channel, ...]
     extinction_row: int
+    """Row of extinction in the beam whose optical depth is quoted."""
 
 
 @dataclass(frozen=True)
@@ -122,7 +125,7 @@ def _one_channel(model, position, cloud_light, time, names):
     channel = model.channels[position]
     density = state.number_density
     scatter = channel.kind == "scatter"
-    row = model.extinction_row if scatter else channel.row
+    row = channel.dimming_row
     depth = density * mean[row] * channel.path
     light = np.exp(-depth)
     own = mean[channel.row]

@@ -4,6 +4,7 @@ import numpy as np
 
 from scatterfit.forward.model import channel_signals
 from scatterfit.inversion.prior import depletion_sigma
+from scatterfit.measured_pulse.prepare import optical_columns
 
 _CREEP = 0.02
 """Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
@@ -105,22 +106,36 @@ def _signal_inputs(prepared, problem, best, index_shift):
         parts = [s.by["number_extinction"] if c.kind == "scatter" else none
                  for s, c in zip(signals, model.channels, strict=True)]
         found.append(("chamber.path_mm", sigma / apparatus.chamber.path, parts))
-    sigma = _index_sigma(prepared)
-    if sigma:
+    inputs = _index_inputs(prepared)
+    if inputs:
         # The two index models share their angles' base; the difference is the index alone.
         plain, _ = channel_signals(prepared.model, cloud, time, (), linear)
         shifted, _ = channel_signals(prepared.index_model, cloud, time, (), linear)
         parts = [(b.shape - a.shape) / index_shift for a, b in zip(plain, shifted, strict=True)]
-        found.append(("vapour.refractive_index", sigma, parts))
+        seen = [apparatus.beam_number(record) for _, _, record in optical_columns(apparatus)]
+        for name, sigma, beams in inputs:
+            found.append((name, sigma, [part if beam in beams else none
+                                        for part, beam in zip(parts, seen, strict=True)]))
     return found
 
 
-def _index_sigma(prepared):
-    """Return the standard uncertainty of the liquid's index [-]."""
-    apparatus = prepared.setup.apparatus
-    stated = apparatus.sigmas.get("vapour.refractive_index")
-    if stated is not None:
-        return float(stated)
-    if apparatus.vapour.refractive_index is not None:
-        return 0.0
-    return float(prepared.setup.substance.refractive_index.uncertainty)
+def _index_inputs(prepared):
+    """Return (name, standard uncertainty, beams it moves) of what is uncertain in the index [-].
+
+    What is stated for a beam is its own; a stated index of the vapour or a correlation is off by
+    the same in all beams.
+    """
+    bench = prepared.setup.apparatus
+    found, shared = [], []
+    for number, beam in enumerate(bench.beams):
+        path = f"{bench.path_of(beam)}.refractive_index"
+        if beam.refractive_index is None and path not in bench.sigmas:
+            shared.append(number)
+        elif bench.sigmas.get(path):
+            found.append((path, float(bench.sigmas[path]), (number,)))
+    sigma = bench.sigmas.get("vapour.refractive_index")
+    if sigma is None and bench.vapour.refractive_index is None:
+        sigma = prepared.setup.substance.refractive_index.uncertainty
+    if sigma and shared:
+        found.append(("vapour.refractive_index", float(sigma), tuple(shared)))
+    return found

@@ -7,7 +7,7 @@ from scatterfit.measured_pulse.record import BudgetLine, Learnt
 
 DURATION = "effective duration of the hold"
 """Line of the nucleation rate's budget."""
-_STATED = ("temperature", "vapour", "detector.", "transmission.", "chamber.")
+_STATED = ("temperature", "vapour", "beam.", "detector.", "transmission.", "chamber.")
 _INPUTS = {
     "scale": "computed growth rate", "bend": "shape of the growth law",
     "creep": "creep of the gas during growth", "stretch": "duration of the births",

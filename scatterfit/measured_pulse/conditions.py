@@ -169,15 +169,13 @@ def _hold_sigmas(setup):
     }
 
 
-def property_sources(setup, index_given):
+def property_sources(setup):
     """Return where each property came from.
 
     Parameters
     ----------
     setup : GrowthSetup
         Of the pulse.
-    index_given : bool
-        Whether the chamber file gives the refractive index.
 
     Returns
     -------
@@ -190,7 +188,10 @@ def property_sources(setup, index_given):
         for name in ("saturation_pressure", "density", "surface_tension", "latent_heat",
                      "vapour_heat_capacity")
     }
-    sources["refractive_index"] = "chamber file" if index_given else s.refractive_index.source
+    bench = setup.apparatus
+    known = [bench.vapour.refractive_index or beam.refractive_index for beam in bench.beams]
+    sources["refractive_index"] = "; ".join(dict.fromkeys(
+        s.refractive_index.source if index is None else "chamber file" for index in known))
     sources["diffusivity"] = matter.diffusivity(s, setup.gas).source
     sources["conductivity"] = setup.gas.conductivity.source
     sources["heat_capacity"] = setup.gas.heat_capacity.source

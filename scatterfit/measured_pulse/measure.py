@@ -83,9 +83,8 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
     if flat:
         return MeasuredPulse(trace, "rejected", flat, provenance=provenance)
     prepared = prepare(apparatus, time, columns, store, exclude)
-    given = apparatus.vapour.refractive_index is not None
-    provenance["properties"] = conditions.property_sources(prepared.setup, given)
-    provenance["refractive_index"] = prepared.index
+    provenance["properties"] = conditions.property_sources(prepared.setup)
+    provenance["refractive_index"] = _indices(apparatus, prepared.index)
     gas = {**gas_records(prepared.setup), "provenance": provenance, "trace": trace}
     warnings = tuple(Reason(*w) for w in prepared.setup.warnings)
     if dry(prepared.setup):
@@ -125,6 +124,13 @@ def gas_records(setup):
         "growth_temperature": temperature, "growth_saturation_ratio": saturation,
         "nucleation": conditions.nucleation_conditions(setup, None),
     }
+
+
+def _indices(apparatus, indices):
+    """Return the liquid's index, by the name of the beam where there are several [-]."""
+    if len(indices) == 1:
+        return float(indices[0])
+    return {beam.name: float(n) for beam, n in zip(apparatus.beams, indices, strict=True)}
 
 
 def _flat_columns(apparatus, columns):
@@ -172,10 +178,15 @@ def _settle_angles(prepared, fit, base, offsets):
 
 def _views(prepared, fit):
     """Return the channels for figures."""
-    angles = {d.column: f"scattered light, {np.degrees(d.angle):g}\N{DEGREE SIGN}"
-              for d in prepared.setup.apparatus.detectors}
+    bench = prepared.setup.apparatus
+    labels = {}
+    for column, kind, record in optical_columns(bench):
+        angle = f", {np.degrees(record.angle):g}\N{DEGREE SIGN}" if kind == "scatter" else ""
+        word = "scattered" if kind == "scatter" else "transmitted"
+        whose = f", {record.beam}" if bench.other_beams else ""
+        labels[column] = f"{word} light{angle}{whose}"
     return tuple(
-        ChannelView(d.column, angles.get(d.column, "transmitted light"), prepared.time,
+        ChannelView(d.column, labels[d.column], prepared.time,
                     d.signal, fit.model[i], fit.residual[i], d.used)
         for i, d in enumerate(fit.channels)
     )

@@ -124,10 +124,14 @@ def drawn(apparatus, generator):
         spread = sigmas.get(f"detector.{d.column}.angle_deg", 0.0)
         offsets.append(spread * float(generator.standard_normal()))
     vapour, chamber = apparatus.vapour, apparatus.chamber
-    index = vapour.refractive_index
-    if index is not None and "vapour.refractive_index" in sigmas:
-        index = index + sigmas["vapour.refractive_index"] * float(generator.standard_normal())
+    first, *others = (
+        replace(beam, refractive_index=draw(
+            beam.refractive_index, f"{apparatus.path_of(beam)}.refractive_index", positive=False))
+        for beam in apparatus.beams
+    )
+    index = draw(vapour.refractive_index, "vapour.refractive_index", positive=False)
     changes = {
+        "beam": first, "other_beams": tuple(others),
         "detectors": tuple(detectors),
         "vapour": replace(
             vapour, refractive_index=index,

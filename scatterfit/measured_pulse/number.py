@@ -105,16 +105,21 @@ def _handles(prepared, cloud, posterior, second, counting):
 
 
 def _side_depth(prepared, fit):
-    """Return the largest optical depth over the chamber's path [-]."""
+    """Return the largest optical depth in any detector's beam over the chamber's path [-]."""
     path = prepared.setup.apparatus.chamber.path
     transmission = prepared.setup.apparatus.transmission
     path = max(path, transmission.path if transmission else 0.0)
     state = fit.best.state
     table = spread_table(fit.problem.model.light, fit.best.cloud.variance)
     place = (np.log(np.maximum(state.radius, 1e-9)) - table.start) / table.step
-    row = table.values[fit.problem.model.extinction_row]
-    mean = state.growth.weights @ np.interp(place, np.arange(row.size), row)
-    return float(np.max(state.number_density * mean * path))
+    model = fit.problem.model
+    rows = {c.dimming_row for c in model.channels if c.kind == "scatter"} or {model.extinction_row}
+    depths = [
+        np.max(state.number_density * path * (
+            state.growth.weights @ np.interp(place, np.arange(row.size), row)))
+        for row in table.values[sorted(rows)]
+    ]
+    return float(max(depths))
 
 
 def _second_order(prepared, depth):

@@ -4,7 +4,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from scatterfit.cloud_optics.build import build_kernel
+from scatterfit.cloud_optics.beams import BenchKernel, beam_indices, build_bench_kernel
 from scatterfit.droplet_growth.setup import GrowthSetup, growth_setup
 from scatterfit.errors import TraceError
 from scatterfit.forward.light import cloud_light
@@ -31,12 +31,12 @@ class Prepared:
     model: PulseModel
     index_model: PulseModel
     """The model with the liquid's index a little higher, for derivatives."""
-    kernel: object
-    """The bench's kernel (OpticalKernel)."""
-    relative_index: complex
-    """Of the liquid against the gas [-]."""
-    index: float
-    """Of the liquid at the droplets' typical temperature, real part [-]."""
+    kernel: BenchKernel
+    """The bench's."""
+    relative_index: np.ndarray
+    """Of the liquid against the gas in each beam, complex, shape (n_beams,) [-]."""
+    index: np.ndarray
+    """Of the liquid at the droplets' typical temperature, real part, shape (n_beams,) [-]."""
     time: np.ndarray
     """Every sample, shape (n,) [s]."""
     channels: tuple
@@ -86,7 +86,7 @@ def prepare_setup(apparatus, time, columns):
 
 
 def pulse_kernel(setup, store=None):
-    """Return the kernel of a pulse's bench and the index to use it at.
+    """Return the kernel of a pulse's bench and the indices to use it at.
 
     Parameters
     ----------
@@ -97,28 +97,23 @@ def pulse_kernel(setup, store=None):
 
     Returns
     -------
-    kernel : OpticalKernel
+    kernel : BenchKernel
         Of the bench.
-    relative : complex
-        Index of the liquid over that of the gas [-].
-    index : float
+    relative : ndarray of complex, shape (n_beams,)
+        Index of the liquid over that of the gas in each beam [-].
+    index : ndarray, shape (n_beams,)
         Of the liquid, real part [-].
     """
-    apparatus = setup.apparatus
-    path, wavelength = setup.path, apparatus.beam.wavelength
-    gas_index = setup.gas.refractive_index(
-        wavelength, path.reference_temperature, path.reference_pressure
-    )
-    liquid = apparatus.vapour.refractive_index
-    if liquid is None:
-        liquid = setup.substance.refractive_index(wavelength, setup.droplet_temperature)
-    relative = complex(liquid) / float(gas_index)
+    apparatus, path = setup.apparatus, setup.path
+    state = path.reference_temperature, path.reference_pressure, setup.droplet_temperature
+    gas_indices, liquid = beam_indices(apparatus, setup.gas, setup.substance, state)
+    relative = liquid / gas_indices
     reach = [min(ANGLE_SIGMAS * apparatus.sigmas.get(f"detector.{d.column}.angle_deg", 0.0),
                  LARGEST_ANGLE) for d in apparatus.detectors]
-    kernel = build_kernel(
-        apparatus, float(gas_index), [relative, relative + INDEX_STEP], store, angle_reach=reach
+    kernel = build_bench_kernel(
+        apparatus, gas_indices, relative, store, index_reach=INDEX_STEP, angle_reach=reach
     )
-    return kernel, relative, float(complex(liquid).real)
+    return kernel, relative, liquid.real
 
 
 def pulse_model(setup, kernel, relative, angles):
@@ -128,10 +123,10 @@ def pulse_model(setup, kernel, relative, angles):
     ----------
     setup : GrowthSetup
         Of the pulse.
-    kernel : OpticalKernel
+    kernel : BenchKernel
         Of the bench.
-    relative : complex
-        Index of the liquid over that of the gas [-].
+    relative : ndarray of complex, shape (n_beams,)
+        Index of the liquid over that of the gas in each beam [-].
     angles : sequence of float
         Shift of each detector's angle [rad].
 
@@ -144,25 +139,25 @@ def pulse_model(setup, kernel, relative, angles):
     turning = any(f"detector.{d.column}.angle_deg" in apparatus.sigmas
                   for d in apparatus.detectors)
     table = kernel.at(relative, np.array(angles) if any(angles) else None, derivatives=turning)
-    rows = [*table.collected, table.extinction, table.extinction - table.forward]
-    count = len(apparatus.detectors)
+    rows = [*table.collected, *table.extinction, table.lost]
+    count, lost = len(apparatus.detectors), len(rows) - 1
     if turning:
         rows += list(table.d_collected_d_angle)
     channels = [
         Channel(d.column, "scatter", i, apparatus.chamber.path, d.gain, d.time_constant,
-                angle_row=count + 2 + i if turning else None)
+                count + apparatus.beam_number(d), lost + 1 + i if turning else None)
         for i, d in enumerate(apparatus.detectors)
     ]
     if apparatus.transmission is not None:
         t = apparatus.transmission
-        channels.append(Channel(t.column, "transmission", count + 1, t.path, None, 0.0))
+        channels.append(Channel(t.column, "transmission", lost, t.path, None, 0.0, lost))
     # Sizes that scatter next to nothing are cut; every second point carries the averaged curves.
     first = int(np.searchsorted(table.radius * kernel.wavenumber, _LEAST_SIZE))
     light = cloud_light(
         np.array(rows)[:, first::_STRIDE], table.log_radius_start + first * table.step,
         _STRIDE * table.step,
     )
-    return PulseModel(setup, light, tuple(channels), extinction_row=count)
+    return PulseModel(setup, light, tuple(channels), extinction_row=count + kernel.transmitted)
 
 
 def reangled(prepared, angles):
@@ -341,11 +336,14 @@ def _normalised(apparatus, time, columns, baseline):
     darks = {t.column: t.dark for t in apparatus.detectors if t.dark}
     if apparatus.transmission is not None and apparatus.transmission.dark:
         darks[apparatus.transmission.column] = apparatus.transmission.dark
+    found = {name: values - darks.get(name, 0.0) for name, values in found.items()}
     if apparatus.reference is None:
-        return {name: values - darks.get(name, 0.0) for name, values in found.items()}
+        return found
     monitor = np.asarray(columns[apparatus.reference.column], dtype=float)
     monitor = monitor - apparatus.reference.dark
     rest = float(np.nanmedian(monitor[baseline]))
     relative = monitor / rest if rest else np.full(time.size, np.nan)
     relative = np.where(relative > 0.02, relative, np.nan)
-    return {name: (values - darks.get(name, 0.0)) / relative for name, values in found.items()}
+    only = apparatus.reference.beam
+    seen = {name for name, _, record in optical_columns(apparatus) if only in (None, record.beam)}
+    return {name: values / relative if name in seen else values for name, values in found.items()}

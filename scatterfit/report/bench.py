@@ -30,17 +30,28 @@ def light_section(bench):
     text : str
         A titled table.
     """
-    beam = bench.beam
+    rows = [_beam(bench, beam) for beam in bench.beams]
+    rows += [(f"detector {d.column}", _whose(bench, d) + _detector(d)) for d in bench.detectors]
+    if bench.transmission is not None:
+        rows.append((f"transmission {bench.transmission.column}",
+                     _whose(bench, bench.transmission)
+                     + f"path {1e3 * bench.transmission.path:g} mm"))
+    rows.append(("path to a detector", f"{1e3 * bench.chamber.path:g} mm of cloud, in and out"))
+    return table("Light", rows)
+
+
+def _beam(bench, beam):
+    """Return the row of one laser beam."""
     angle = _POLARIZATIONS.get(beam.polarization)
     if angle is None:
         angle = f"polarized {math.degrees(beam.polarization):g} degrees from the plane"
-    rows = [("laser", f"{1e9 * beam.wavelength:g} nm in vacuum, {angle}")]
-    rows += [(f"detector {d.column}", _detector(d)) for d in bench.detectors]
-    if bench.transmission is not None:
-        rows.append((f"transmission {bench.transmission.column}",
-                     f"path {1e3 * bench.transmission.path:g} mm"))
-    rows.append(("path to a detector", f"{1e3 * bench.chamber.path:g} mm of cloud, in and out"))
-    return table("Light", rows)
+    label = f"laser {beam.name}" if bench.other_beams else "laser"
+    return label, f"{1e9 * beam.wavelength:g} nm in vacuum, {angle}"
+
+
+def _whose(bench, record):
+    """Return the start of a text that says which of several beams a channel sees."""
+    return f"{record.beam}, " if bench.other_beams else ""
 
 
 def _detector(detector):
@@ -166,15 +177,20 @@ def _property(quantity, name, unit, temperatures):
 
 
 def _index(bench, substance, temperatures):
-    if bench.vapour.refractive_index is not None:
-        stated = bench.vapour.refractive_index
-        value = f"{stated.real:g}" + (f" + {stated.imag:g} i" if stated.imag else "")
-        return _lines("refractive index", f"{value:<22}", "chamber file")
     index = substance.refractive_index
     middle = sum(temperatures) / len(temperatures)
-    value = f"{float(index(bench.beam.wavelength, middle).real):.5g}"
-    outside = index.outside(bench.beam.wavelength, temperatures)
-    return _sourced("refractive index", value, f"± {index.uncertainty:.1g}", outside, index)
+    lines = []
+    for beam in bench.beams:
+        name = f"refractive index, {beam.name}" if bench.other_beams else "refractive index"
+        stated = bench.vapour.refractive_index or beam.refractive_index
+        if stated is not None:
+            value = f"{stated.real:g}" + (f" + {stated.imag:g} i" if stated.imag else "")
+            lines += _lines(name, f"{value:<22}", "chamber file")
+            continue
+        value = f"{float(index(beam.wavelength, middle).real):.5g}"
+        outside = index.outside(beam.wavelength, temperatures)
+        lines += _sourced(name, value, f"± {index.uncertainty:.1g}", outside, index)
+    return lines
 
 
 def _sourced(name, value, spread, outside, quantity):

@@ -24,7 +24,7 @@ def lobes_section(bench, table):
     ----------
     bench : Apparatus
         The bench.
-    table : KernelTable
+    table : BenchTable
         Its cross sections at the spread of radii to show.
 
     Returns
@@ -38,7 +38,7 @@ def lobes_section(bench, table):
         parts += _channel(bench, table, detector.column, row)
     if bench.transmission is not None:
         name = bench.transmission.column
-        parts += _channel(bench, table, name, table.extinction - table.forward)
+        parts += _channel(bench, table, name, table.lost)
     return "\n".join(parts)
 
 

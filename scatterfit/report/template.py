@@ -21,6 +21,8 @@ is safe on your bench. This file and this program do not.
 """
 
 NOTES = {
+    "beam": "Two colours or two polarizations: write a [[beam]] table for each, with a name, which "
+    "the key beam of each detector and of the transmission then states.",
     "vapour": "Say how much vapour there is by exactly one of mole_fraction, "
     "partial_pressure_kPa, saturation_ratio and dew_point_K. The keys from refractive_index on "
     "replace what the program knows of the substance.",
@@ -64,8 +66,7 @@ def chamber_template():
 
 def _table(table):
     active = table.name in _ACTIVE_TABLES
-    brackets = f"[[{table.name}]]" if table.repeated else f"[{table.name}]"
-    lines = [_line(active, brackets, table.doc)]
+    lines = [_line(active, table.heading, table.doc)]
     for key in (key for key in key_table() if key.table == table.name):
         wanted = key.required or key.name in _ACTIVE_KEYS.get(table.name, ())
         lines.append(_line(active and wanted, f"{key.name} = {key.example}", key.doc))
