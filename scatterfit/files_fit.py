@@ -3,6 +3,7 @@
 import hashlib
 import platform
 from dataclasses import replace
+from functools import lru_cache
 from importlib import metadata
 from pathlib import Path
 
@@ -139,6 +140,7 @@ def _sha256(path):
         return None
 
 
+@lru_cache
 def _version(name):
     """Return the installed version of a package, or ``None``."""
     try:

@@ -12,6 +12,7 @@ import tempfile
 import zipfile
 import zlib
 from collections.abc import Mapping
+from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
@@ -29,6 +30,7 @@ _UNSOUND = (
 )
 """What reading a damaged or foreign file may raise."""
 _MOST_FILES = 500
+_MOST_IN_MEMORY = 24
 _NAME = re.compile(r"[0-9a-f]{40}\.npz")
 
 
@@ -59,10 +61,10 @@ class FolderStore:
         """
         if self.folder is None:
             return None
+        path = self.folder / f"{key}.npz"
         try:
-            with (self.folder / f"{key}.npz").open("rb") as opened:
-                file = np.load(opened, allow_pickle=False)
-                arrays = {name: file[name] for name in file.files}
+            status = path.stat()
+            arrays = dict(_read(str(path), (status.st_mtime_ns, status.st_size, status.st_ino)))
         except _UNSOUND:
             return None
         return arrays if str(arrays.pop("key", "")) == key else None
@@ -102,6 +104,17 @@ class FolderStore:
             ours.sort(key=lambda path: path.stat().st_mtime)
             for path in ours[: len(ours) - _MOST_FILES]:
                 path.unlink(missing_ok=True)
+
+
+@lru_cache(maxsize=_MOST_IN_MEMORY)
+def _read(path, stamp):  # noqa: ARG001  (a file that was written anew is read anew)
+    """Return the arrays of a file; a night reads the same few again and again."""
+    with Path(path).open("rb") as opened:
+        file = np.load(opened, allow_pickle=False)
+        arrays = {name: file[name] for name in file.files}
+    for array in arrays.values():
+        array.flags.writeable = False
+    return arrays
 
 
 def default_store() -> FolderStore:

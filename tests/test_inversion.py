@@ -362,12 +362,14 @@ def test_descent_from_afar_and_polish_reach_the_same_cloud(settled):
     problem, solution = settled
     start = replace(TRUE, number=TRUE.number - 0.2, scale=0.02, variance=2e-5, delay=2e-5)
     again = descend(problem, start, iterations=20, tolerance=1e-4)
-    assert again.best.chi2 == pytest.approx(solution.best.chi2, abs=0.2)
+    # Growth solved at either end, not followed to first order from wherever it was solved last.
+    misfits = [evaluate(problem, end.best.cloud, False).chi2 for end in (again, solution)]
+    assert misfits[0] == pytest.approx(misfits[1], abs=0.1)
     assert again.best.state.radius[:, -1] == pytest.approx(solution.best.state.radius[:, -1],
                                                           rel=1e-4)
     polished = polish(problem, again)
     assert polished.best.chi2 <= again.best.chi2
-    assert solution.best.chi2 - polished.best.chi2 < 0.1
+    assert evaluate(problem, polished.best.cloud, False).chi2 < misfits[1] + 0.1
     errors = np.geterr()
     polish(problem, again)
     assert np.geterr() == errors
@@ -512,7 +514,7 @@ def test_posterior_against_draws_of_the_noise(plain):
 def test_covariance_is_the_inverse_of_the_normal_matrix(settled):
     problem, solution = settled
     after = posterior(problem, solution.best, NO_INPUTS)
-    jacobian = solution.best.jacobian
+    jacobian = evaluate(problem, solution.best.cloud).jacobian
     scale = np.array([SCALES[family(name)] for name in problem.names])
     inverse = np.linalg.inv((jacobian * scale).T @ (jacobian * scale)) * np.outer(scale, scale)
     prior = after.covariance - after.noise

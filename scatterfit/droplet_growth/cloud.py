@@ -8,7 +8,7 @@ equation a round (Newton's method for integral equations), which also holds in t
 relax much faster than the nodes are apart.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -17,7 +17,8 @@ from scatterfit.droplet_growth.properties import horner, mean_speed
 from scatterfit.droplet_growth.single_droplet import growth_rate
 
 _ROUNDS = 80
-_TOLERANCE = 2e-6
+SOLVED = 2e-6
+"""Change of (r + l)^2 in a round at which a cloud counts as solved [-]."""
 _SERVES = 1e-3
 _SMALLEST_FRACTION = 1e-9
 _MICROMETRE = 1e-6
@@ -104,8 +105,22 @@ class CloudGrowth:
         moles = self.pressure / (GAS_CONSTANT * self.temperature * (1.0 - self.condensed))
         return self.droplets_per_mole[:, None] * moles
 
+    def variant(self, index):
+        """Return one variant alone."""
+        part = slice(index, index + 1)
+        return replace(
+            self, square=self.square[part], square_rate=self.square_rate[part],
+            length=self.length[part], birth_times=self.birth_times[part],
+            condensed=self.condensed[part], temperature=self.temperature[part],
+            vapour_fraction=self.vapour_fraction[part],
+            droplet_temperature=self.droplet_temperature[part],
+            droplets_per_mole=self.droplets_per_mole[part],
+        )
 
-def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=None):
+
+def solve_cloud(  # noqa: PLR0913  (each argument is a source of its own)
+    properties, path, births, parameters, start_radius=3e-9, *, start=None, tolerance=SOLVED,
+):
     """Return how a cloud grows.
 
     Parameters
@@ -122,6 +137,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
         Radius at birth [m].
     start : CloudGrowth, optional
         A solution nearby on the same nodes, to start from.
+    tolerance : float
+        Change of (r + l)^2 in a round that ends the rounds [-].
 
     Returns
     -------
@@ -131,7 +148,9 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
     weights = births[1]
     cloud = _Cloud(properties, path, births, parameters, start_radius)
     square, condensed, warmth = _first_guess(path, cloud.times, cloud.floor, cloud.length, start)
-    temperature, share = cloud.gas.state(condensed)
+    temperature, share = cloud.gas.state(condensed, cloud.gas.undisturbed)
+    if start is not None:
+        temperature, share = cloud.gas.state(condensed, temperature)
     droplet_temperature = temperature[:, None, :] + warmth
     steps = 3 if start is None else 1
     for _ in range(_ROUNDS):
@@ -147,8 +166,8 @@ def solve_cloud(properties, path, births, parameters, start_radius=3e-9, start=N
         new_square = np.maximum(cloud.floor + grown + moving, cloud.floor)
         moved = np.max(np.abs(new_square - square) / new_square)
         square, steps = new_square, 1
-        temperature, share = cloud.gas.state(condensed)
-        if moved < _TOLERANCE:
+        temperature, share = cloud.gas.state(condensed, temperature)
+        if moved < tolerance:
             break
     return CloudGrowth(
         time=path.time, square=np.where(alive, square, cloud.floor + since), square_rate=rate,
@@ -223,10 +242,6 @@ def _first_guess(path, times, floor, length, start):
         return square, np.zeros((shape[0], shape[2])), np.zeros(shape)
     warmth = start.droplet_temperature[0] - start.temperature[0]
     radius = start.radius[0]
-    if start.weights.size != shape[1]:
-        # Other classes: each takes the nearest in time of birth.
-        nearest = np.argmin(np.abs(start.birth_times[0] - times[0][:, None]), axis=1)
-        radius, warmth = radius[nearest], warmth[nearest]
     square = np.maximum((radius + length) ** 2, floor)
     condensed = np.broadcast_to(start.condensed[0], (shape[0], shape[2])).copy()
     return square, condensed, np.broadcast_to(warmth, shape)
@@ -243,27 +258,21 @@ class _Gas:
     def warming(self, temperature):
         """Return by how much the gas warms per mole condensed per mole of gas, (v, m) [K]."""
         p = self.properties
-        return horner(p.latent_heat_of, p.scaled(temperature)) / p.heat_capacity
+        return p.latent.at(temperature) / p.heat_capacity
 
-    def state(self, condensed):
+    def state(self, condensed, warmed):
         """Return temperature [K] and vapour mole fraction [-], shape (v, m).
 
-        From cp dT = R T dp/p + L dq: the heat enters as a factor exp(sum of L dq / (cp T)).
+        From cp dT = R T dp/p + L dq: the heat enters as a factor exp(sum of L dq / (cp T)), in
+        which T is that of the round before.
         """
-        p = self.properties
-        temperature = self.undisturbed
-        if condensed.any():
-            guess = self.undisturbed
-            for _ in range(2):
-                latent = horner(p.latent_heat_of, p.scaled(guess)) / (p.heat_capacity * guess)
-                heat = np.zeros_like(condensed)
-                np.cumsum(
-                    0.5 * (latent[:, 1:] + latent[:, :-1]) * np.diff(condensed, axis=1),
-                    axis=1, out=heat[:, 1:],
-                )
-                heat += (latent * condensed)[:, :1]
-                guess = self.undisturbed * np.exp(heat)
-            temperature = guess
+        half = self.warming(warmed)
+        half *= 0.5 / warmed
+        heat = np.zeros_like(condensed)
+        np.cumsum((half[:, 1:] + half[:, :-1]) * (condensed[:, 1:] - condensed[:, :-1]), axis=1,
+                  out=heat[:, 1:])
+        heat += 2.0 * half[:, :1] * condensed[:, :1]
+        temperature = self.undisturbed * np.exp(heat, out=heat)
         share = (self.fraction - condensed) / (1.0 - condensed)
         return temperature, np.maximum(share, _SMALLEST_FRACTION)
 

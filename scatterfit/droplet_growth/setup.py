@@ -14,6 +14,7 @@ from scatterfit.droplet_growth.cautions import (
     range_warnings,
 )
 from scatterfit.droplet_growth.classical_rate import classical_log_rate
+from scatterfit.droplet_growth.cloud import SOLVED
 from scatterfit.droplet_growth.gas_path import GasPath, adiabatic_temperature, choose_nodes
 from scatterfit.droplet_growth.hold import settle_hold
 from scatterfit.droplet_growth.pressure import smooth, undo_lag
@@ -78,6 +79,8 @@ class GrowthSetup:
     """Time [s] and undisturbed saturation ratio [-] of seeded pulses."""
     warnings: tuple[tuple[str, str], ...] = field(default=())
     """Codes and texts worth telling the user."""
+    tolerance: float = SOLVED
+    """Change of (r + l)^2 in a round at which growth counts as solved [-]."""
 
 
 def vapour_mole_fraction(apparatus, substance, pressure):

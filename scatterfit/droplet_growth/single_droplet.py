@@ -3,12 +3,7 @@
 import numpy as np
 
 from scatterfit.constants import GAS_CONSTANT
-from scatterfit.droplet_growth.properties import horner, mean_speed
-from scatterfit.droplet_growth.transition import (
-    heat_mean_free_path,
-    transition_factor,
-    vapour_mean_free_path,
-)
+from scatterfit.droplet_growth.transition import transition_factor
 
 _LARGEST_SURFACE_FRACTION = 0.9
 
@@ -63,51 +58,29 @@ def growth_rate(properties, radius, gas, accommodation, droplet_temperature, ste
     """
     temperature, pressure, fraction = gas
     far = np.log1p(-fraction)
-    inverse_pressure = 1.0 / pressure
+    # ln of the pressure and the logarithm of what a flat surface would hold: one exponential.
+    log_pressure = np.log(pressure)
+    thinness = 1.0 / (pressure * radius)
+    warm_thinness = thinness * temperature
+    mass, thermal = accommodation
     for _ in range(steps):
-        film = properties.scaled(0.5 * (droplet_temperature + temperature))
-        film_temperature = properties.middle + properties.half_width * film
-        flow, conduction = _conductances(
-            properties, radius, (temperature, pressure), accommodation, (film, film_temperature)
-        )
-        own = properties.scaled(droplet_temperature)
-        latent = horner(properties.latent_heat_of, own)
-        inverse_thermal = 1.0 / (GAS_CONSTANT * droplet_temperature)
-        curvature = (
-            (2.0 * properties.molar_volume) * horner(properties.tension_of, own)
-            * inverse_thermal / radius
-        )
-        surface = np.exp(horner(properties.log_pressure, own) + curvature) * inverse_pressure
-        surface = np.minimum(surface, _LARGEST_SURFACE_FRACTION)
+        flow, conduction, path, heat_path = properties.film.at(
+            0.5 * (droplet_temperature + temperature))
+        flow *= transition_factor(path * thinness, mass)
+        conduction *= transition_factor(heat_path * warm_thinness, thermal)
+        exponent, latent, tension = properties.liquid.at(droplet_temperature)
+        inverse = 1.0 / droplet_temperature
+        exponent += tension * inverse / radius
+        exponent -= log_pressure
+        surface = np.minimum(np.exp(exponent, out=exponent), _LARGEST_SURFACE_FRACTION)
         flux = flow * (np.log1p(-surface) - far)
-        slope = -flow * surface / (1.0 - surface) * latent * inverse_thermal / droplet_temperature
+        surface_slope = surface / (1.0 - surface) * latent * inverse * (inverse / GAS_CONSTANT)
+        loss = latent * flow * surface_slope
         change = (latent * flux - conduction * (droplet_temperature - temperature)) / (
-            conduction - latent * slope
+            conduction + loss
         )
         droplet_temperature = droplet_temperature + change
     per_flux = properties.molar_volume / radius
-    rate = (flux + slope * change) * per_flux
-    surface_slope = -slope / flow
-    by_vapour = per_flux * flow / (1.0 - latent * slope / conduction)
+    rate = (flux - flow * surface_slope * change) * per_flux
+    by_vapour = per_flux * flow * conduction / (conduction + loss)
     return rate, droplet_temperature, by_vapour, surface_slope
-
-
-def _conductances(properties, radius, gas, accommodation, film):
-    """Return what the vapour flux [mol/(m s)] and the heat flux [W/(m K)] are multiples of."""
-    temperature, pressure = gas
-    scaled, film_temperature = film
-    density_diffusivity = horner(properties.diffusivity_of, scaled) / GAS_CONSTANT
-    conductivity = horner(properties.conductivity_of, scaled)
-    vapour_speed = mean_speed(film_temperature, properties.vapour_molar_mass)
-    gas_speed = vapour_speed * np.sqrt(properties.vapour_molar_mass / properties.gas_molar_mass)
-    molar_density = pressure / (GAS_CONSTANT * temperature)
-    vapour_path = vapour_mean_free_path(
-        density_diffusivity * (GAS_CONSTANT * film_temperature) / pressure, vapour_speed
-    )
-    heat_path = heat_mean_free_path(
-        conductivity, molar_density, gas_speed, properties.heat_capacity, GAS_CONSTANT
-    )
-    mass, thermal = accommodation
-    flow = density_diffusivity * transition_factor(vapour_path / radius, mass)
-    conduction = conductivity * transition_factor(heat_path / radius, thermal)
-    return flow, conduction

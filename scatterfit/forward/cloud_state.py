@@ -6,6 +6,8 @@ import numpy as np
 
 from scatterfit.forward.growth_model import LinearGrowth
 
+_LARGEST_MOVE = 10.0
+
 
 @dataclass(frozen=True)
 class Segment:
@@ -98,27 +100,28 @@ def _classes(linear, cloud, clock, place, names, births=None):
     """Return a stretch of samples with the solved classes or with finer ones."""
     growth = linear.growth
     index, t, width = place
-    square, rate = growth.square[0], growth.square_rate[0]
-    times, weights, carry = growth.birth_times[0], growth.weights, linear.carry
-    square = hermite(square, rate, index, t, width)
-    slope = _straight(rate, index, t) if "delay" in names else None
+    times, weights = growth.birth_times[0], growth.weights
+    square = hermite(growth.square[0], growth.square_rate[0], index, t, width)
+    rows = [*linear.log_radius_by.values()]
+    if "delay" in names:
+        rows.append(growth.square_rate[0])
+    rows = _straight(np.array(rows), index, t) if rows else np.empty((0, *square.shape))
     if births is not None:
         plain, finer = births
         longer = (times[-1] - times[0]) / (plain.times[-1] - plain.times[0])
         times = times[0] + longer * (finer.times - plain.times[0])
-        weights, square = finer.weights, finer.carry @ square
-        carry = None if carry is None else finer.carry @ carry
-        slope = None if slope is None else finer.carry @ slope
+        weights, square, rows = finer.weights, finer.carry @ square, finer.carry @ rows
     length = growth.length[0]
     born = clock > times[:, None]
     # Before its birth a class's (r + l)^2 is carried on backwards: there it has no size.
     safe = np.sqrt(np.maximum(square, (growth.start_radius + length) ** 2)) - length
-    by = {name: carry @ _straight(rows, index, t) for name, rows in linear.log_radius_by.items()}
+    by = dict(zip(linear.log_radius_by, rows, strict=False))
     move = _log_move(linear, cloud, by)
     if move is not None:
-        safe = safe * np.exp(move)
-    if slope is not None:
-        by["delay"] = np.where(born, -slope / (2.0 * (safe + length) * safe), 0.0)
+        # Far from where growth was solved first order is no guide, but must stay a number.
+        safe = safe * np.exp(np.clip(move, -_LARGEST_MOVE, _LARGEST_MOVE))
+    if "delay" in names:
+        by["delay"] = np.where(born, rows[-1] / (-2.0 * (safe + length) * safe), 0.0)
     return Segment(np.where(born, safe, 0.0), weights, by)
 
 
@@ -163,8 +166,12 @@ def _log_move(linear, cloud, by):
 
 def _straight(values, index, t):
     """Return values between nodes by straight lines, shape (..., n)."""
-    low = values[..., index]
-    return low + t * (values[..., index + 1] - low)
+    low = values.take(index, axis=-1)
+    rise = values.take(index + 1, axis=-1)
+    rise -= low
+    rise *= t
+    rise += low
+    return rise
 
 
 def _places(nodes, clock):
@@ -196,8 +203,9 @@ def hermite(values, rates, index, t, width):
     interpolated : ndarray, shape (..., n)
         Values at the points [any].
     """
-    low, high = values[..., index], values[..., index + 1]
-    first, last = rates[..., index] * width, rates[..., index + 1] * width
+    after = index + 1
+    low, high = values.take(index, axis=-1), values.take(after, axis=-1)
+    first, last = rates.take(index, axis=-1) * width, rates.take(after, axis=-1) * width
     rise = high - low
     c = first + last - 2.0 * rise
     b = rise - first - c

@@ -31,28 +31,22 @@ class CloudLight:
 class SpreadTable:
     """Rows of cross section at one spread, with what interpolation and derivatives need."""
 
+    values: np.ndarray
+    """Shape (rows, n) [m^2]."""
     cells: np.ndarray
-    """All rows' values, then slopes (d/d ln r times the step), then derivatives by the variance,
-    shape (3 rows, n) [m^2]."""
+    """Of each cell between two radii: the four coefficients of the cubic in the place within it,
+    lowest first, then the derivative by the variance and its rise, shape (6 rows, n - 1) [m^2]."""
     start: float
+    """ln of the first radius in metres [-]."""
     step: float
+    """Of ln r [-]."""
     variance: float
     """Beyond that of the base table [-]."""
 
     @property
-    def rows(self):
-        """Return how many cross sections there are."""
-        return self.cells.shape[0] // 3
-
-    @property
-    def values(self):
-        """Return the cross sections, shape (rows, n) [m^2]."""
-        return self.cells[: self.rows]
-
-    @property
     def log_radius(self):
         """Return ln of the radii in metres, shape (n,) [-]."""
-        return self.start + self.step * np.arange(self.cells.shape[1])
+        return self.start + self.step * np.arange(self.values.shape[1])
 
 
 def cloud_light(rows, start, step):
@@ -88,6 +82,25 @@ def cloud_light(rows, start, step):
     return CloudLight(np.fft.rfft(padded, axis=1), wavenumber, start, step, count, size)
 
 
+def widened(light, variance):
+    """Return the rows averaged over a wider spread, without what derivatives need.
+
+    Parameters
+    ----------
+    light : CloudLight
+        Of the pulse.
+    variance : float
+        Variance of ln r beyond that of the base table, >= 0 [-].
+
+    Returns
+    -------
+    values : ndarray, shape (rows, n)
+        Cross sections [m^2].
+    """
+    damped = light.spectrum * np.exp(-0.5 * variance * light.wavenumber**2)
+    return np.fft.irfft(damped, light.size, axis=1)[:, : light.count]
+
+
 def spread_table(light, variance, near=None):
     """Return the rows averaged over a wider spread.
 
@@ -116,12 +129,17 @@ def spread_table(light, variance, near=None):
     slope = damped * (1j * light.wavenumber * light.step)
     curvature = damped * (-0.5 * light.wavenumber**2)
     both = np.fft.irfft(np.concatenate([damped, slope, curvature]), light.size, axis=1)
-    return SpreadTable(
-        np.ascontiguousarray(both[:, : light.count]), light.start, light.step, variance
-    )
+    values, slopes, bends = both[:, : light.count].reshape(3, -1, light.count)
+    rise, first, last = np.diff(values), slopes[:, :-1], slopes[:, 1:]
+    # Cubic Hermite: low + t (first + t (b + t c)).
+    c = first + last - 2.0 * rise
+    cells = np.concatenate([
+        values[:, :-1], first, rise - first - c, c, bends[:, :-1], np.diff(bends),
+    ])
+    return SpreadTable(values, cells, light.start, light.step, variance)
 
 
-def look_up(table, log_radius, variance):
+def look_up(table, log_radius, variance, derivatives=True):
     """Return cross sections at given radii, with derivatives.
 
     Parameters
@@ -132,6 +150,8 @@ def look_up(table, log_radius, variance):
         ln of the radius in metres [-]; beyond the ends the end values hold.
     variance : float
         Variance wanted; to first order from that of the table [-].
+    derivatives : bool
+        Whether slopes and curvatures are wanted; ``None`` stands for them where they are not.
 
     Returns
     -------
@@ -143,21 +163,35 @@ def look_up(table, log_radius, variance):
         Their derivatives by the variance of ln r [m^2].
     """
     place = (log_radius - table.start) * (1.0 / table.step)
-    last = table.cells.shape[1] - 2
-    place = np.clip(place, 0.0, last + 0.999999)
+    np.minimum(np.maximum(place, 0.0, out=place), table.cells.shape[1] - 1e-9, out=place)
     index = place.astype(np.intp)
-    t = place - index
-    low = table.cells.take(index, axis=1)
-    high = table.cells.take(index + 1, axis=1)
-    rows = table.rows
-    low_slope, high_slope = low[rows:2 * rows], high[rows:2 * rows]
-    rise = high[:rows] - low[:rows]
-    # Cubic Hermite: low + t (s0 + t (b + t c)).
-    c = low_slope + high_slope - 2.0 * rise
-    b = rise - low_slope - c
-    values = low[:rows] + t * (low_slope + t * (b + t * c))
-    slopes = (low_slope + t * (2.0 * b + 3.0 * t * c)) * (1.0 / table.step)
-    bend = low[2 * rows:] + t * (high[2 * rows:] - low[2 * rows:])
-    if variance != table.variance:
-        values = values + (variance - table.variance) * bend
+    t = place
+    t -= index
+    rows = table.values.shape[0]
+    corrected = variance != table.variance
+    wanted = table.cells if derivatives or corrected else table.cells[: 4 * rows]
+    found = wanted.take(index, axis=1)
+    low, first, b, c = (found[k * rows:(k + 1) * rows] for k in range(4))
+    bend = None
+    if derivatives or corrected:
+        bend = found[5 * rows:]
+        bend *= t
+        bend += found[4 * rows:5 * rows]
+    values = c * t
+    values += b
+    slopes = None
+    if derivatives:
+        # With the cubic's inner sum s = b + t c: value low + t (first + t s), slope
+        # first + t (2 s + t c).
+        slopes = 2.0 * values
+        slopes += c * t
+        slopes *= t
+        slopes += first
+        slopes *= 1.0 / table.step
+    values *= t
+    values += first
+    values *= t
+    values += low
+    if corrected:
+        values += (variance - table.variance) * bend
     return values, slopes, bend

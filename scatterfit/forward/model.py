@@ -102,14 +102,15 @@ def channel_signals(model, cloud, time, names=(), linear=None, near=None):
 def _cross_sections(model, cloud, table, segment, names):
     """Return the cross sections averaged over the classes, (rows, n), and their derivatives."""
     born = segment.radius > 0.0
-    log_radius = np.log(np.where(born, segment.radius, np.exp(table.start)))
-    values, slopes, bends = look_up(table, log_radius, cloud.variance)
+    log_radius = np.log(np.maximum(segment.radius, np.exp(table.start)))
+    values, slopes, bends = look_up(table, log_radius, cloud.variance, derivatives=bool(names))
     weights = np.where(born, segment.weights[:, None], 0.0)
     mean = np.einsum("cn,rcn->rn", weights, values)
     for detector, channel in enumerate(model.channels):
         if channel.angle_row is not None and cloud.angles:
             mean[channel.row] += cloud.angles[detector] * mean[channel.angle_row]
-            slopes[channel.row] += cloud.angles[detector] * slopes[channel.angle_row]
+            if names:
+                slopes[channel.row] += cloud.angles[detector] * slopes[channel.angle_row]
     mean_by = {
         name: np.einsum("cn,rcn->rn", weights * segment.log_radius_by[name], slopes)
         for name in names if name in segment.log_radius_by

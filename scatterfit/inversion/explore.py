@@ -6,6 +6,7 @@ import numpy as np
 
 from scatterfit.forward.growth_model import Cloud
 from scatterfit.inversion.data import bin_channels, bin_edges
+from scatterfit.inversion.disturbances import find_disturbances, stack_columns
 from scatterfit.inversion.problem import evaluate
 from scatterfit.inversion.solve import descend
 from scatterfit.inversion.uncertainty import channel_inflation
@@ -16,6 +17,7 @@ SOFT = 1.6
 """From which inflation on a channel's weights are lowered [-]."""
 
 _COARSE = 260
+_COARSE_TOLERANCE = 2e-5
 _APART = 4e-3
 _ROUGHLY = 0.012
 _RIVAL = 400.0
@@ -25,6 +27,7 @@ _CONTINUED = 3
 _COMPARABLE = 2.5
 _SLOW_MISFIT = 0.02
 _BATCHES = (1, 3, 6, 10, 10)
+_CLEARED_AFTER = 1
 # How near a template must come, and how many are followed, once one describes the trace: few
 # where lobes tell, many where only shoulders do.
 _LIKELY = (1.6, 10)
@@ -108,7 +111,8 @@ def coarse_model(model):
     chosen = np.unique(np.append(np.arange(0, path.time.size, 2), path.time.size - 1))
     path = replace(path, time=path.time[chosen], pressure=path.pressure[chosen],
                    temperature=path.temperature[chosen])
-    return replace(model, setup=replace(setup, path=path, births=setup.few_births))
+    setup = replace(setup, path=path, births=setup.few_births, tolerance=_COARSE_TOLERANCE)
+    return replace(model, setup=setup)
 
 
 def coarse_bins(time, channels, onset, slow):
@@ -172,7 +176,8 @@ def explore(problem, candidates):
 
     The most likely candidate is followed first. If it describes the trace, only those whose
     templates came near are followed too, as possible rivals; if not, the others are, more and
-    more of them, until one does or none is left.
+    more of them, until one does or none is left. A trace may be out of reach of every cloud
+    because of hum or drift: with those allowed for, the first few candidates may do.
 
     Parameters
     ----------
@@ -185,20 +190,42 @@ def explore(problem, candidates):
     -------
     found : list of Solution
         Distinct ends.
+    disturbances : tuple of tuple of str
+        Names by channel, where they had to be allowed for.
     """
     rough, start = [], 0
-    for size in _BATCHES:
+    disturbances = ((),) * len(problem.model.channels)
+    for turn, size in enumerate(_BATCHES):
         batch = candidates[start:start + size]
         if rough and _good(rough[0]):
             factor, most = _LIKELY if _lobed(problem) else _LIKELY_SMOOTH
             near = factor * candidates[0].chi2 + _RIVAL
             batch = [c for c in candidates[start:start + most] if c.chi2 < near]
-        rough = sorted([*rough, *_descents(problem, [c.cloud for c in batch])],
-                       key=lambda s: s.best.chi2)
+        rough = _sorted([*rough, *_descents(problem, [c.cloud for c in batch])])
         start += size
+        if turn == _CLEARED_AFTER and not _good(rough[0]):
+            problem, rough, disturbances = _cleared(problem, rough)
         if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
-    return settle(problem, rough)
+    return settle(problem, rough), disturbances
+
+
+def _sorted(solutions):
+    """Return solutions, best first."""
+    return sorted(solutions, key=lambda s: s.best.chi2)
+
+
+def _cleared(problem, rough):
+    """Return the problem with hum and drift allowed for, and its solutions, if that explains it."""
+    names = find_disturbances(problem, rough[0].best)
+    none = ((),) * len(problem.model.channels)
+    if names == none:
+        return problem, rough, none
+    extras = tuple(stack_columns(problem.bins.time, group) for group in names)
+    clearer = replace(problem, extras=extras)
+    again = _sorted(descend(clearer, s.best.cloud, iterations=5, tolerance=1.0, rounds=1,
+                            linear=s.best.state.linear) for s in rough)
+    return (clearer, again, names) if _good(again[0]) else (problem, rough, none)
 
 
 def _lobed(problem):

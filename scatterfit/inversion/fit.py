@@ -27,7 +27,7 @@ from scatterfit.inversion.explore import (
 )
 from scatterfit.inversion.problem import Evaluation, Problem, evaluate
 from scatterfit.inversion.search import search
-from scatterfit.inversion.solve import Solution, descend, polish
+from scatterfit.inversion.solve import descend, polish
 from scatterfit.inversion.uncertainty import channel_inflation
 
 _FINE = 800
@@ -98,16 +98,17 @@ def _one_look(model, time, channels, options, slow):
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     candidates = search(problem, options.delays, options.widest, CANDIDATES)
-    found = explore(problem, candidates)
+    found, disturbances = explore(problem, candidates)
     channels, found = _without_hops(problem, found, time, channels, (options.onset, slow))
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
     kinds = [data.kind for data in channels]
     start = fine if "scatter" in kinds else blunted(fine, kinds, slow)
-    best, others = best_of(_with(problem, start, ((),) * len(channels)), found)
-    best = Solution(evaluate(_with(problem, fine, ((),) * len(channels)), best.best.cloud,
-                             linear=best.best.state.linear), best.iterations, best.converged)
-    problem, best, disturbances = _undisturbed(problem, fine, best)
+    best, others = best_of(_with(problem, start, disturbances), found)
+    if start is not fine:
+        best = replace(best, best=evaluate(_with(problem, fine, disturbances), best.best.cloud,
+                                           linear=best.best.state.linear))
+    problem, best, disturbances = _undisturbed(problem, fine, best, disturbances)
     glitchy = tuple(
         find_glitches(r, d.used)
         for r, d in zip(full_residual(problem, best.best, time, channels)[1], channels, strict=True)
@@ -166,9 +167,8 @@ def _without_hops(problem, found, time, channels, look):
     return channels, found
 
 
-def _undisturbed(problem, fine, best, known=None):
+def _undisturbed(problem, fine, best, disturbances):
     """Return the problem with drift and hum, where there are any, and the best cloud in it."""
-    disturbances = known or ((),) * len(problem.model.channels)
     problem = _with(problem, fine, disturbances)
     for _ in range(3):
         again = find_disturbances(problem, best.best, disturbances)

@@ -9,9 +9,12 @@ from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
 from scatterfit.forward.growth_model import Cloud, grow, no_shifts, per_mole
-from scatterfit.forward.light import spread_table
+from scatterfit.forward.light import widened
 
 _NODES = 70
+# Templates are compared to a few percent: half the memory is more than half the time saved.
+_COARSE = np.float32
+_TOLERANCE = 5e-4
 _STICKING = (0.0, -1.2)
 _DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.2, 3.4, 5.0, 7.0, 10.0, 14.0, 20.0, 28.0)
 _VARIANCE = 2e-5
@@ -67,7 +70,8 @@ def search(problem, delays, widest, count=6):
     lone = grow(setup, Cloud(number=0.0))
     levels = _levels(setup, max(float(lone.radius[0].max()), 1e-7))
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
-    tables = [spread_table(problem.model.light, _VARIANCE * _RATIO**k) for k in range(_SPREADS)]
+    tables = np.stack([widened(problem.model.light, _VARIANCE * _RATIO**k)
+                       for k in range(_SPREADS)], axis=1)
     width = problem.priors.get(axis, (0.0, 0.15))[1]
     curves = _curves(setup, sticking, level, (axis, scales))
     found = []
@@ -141,7 +145,7 @@ def _curves(setup, sticking, level, axis):
             vapour.mass_accommodation * np.exp(sticking), vapour.thermal_accommodation,
             setup.vapour_fraction * np.exp(shift if name == "vapour" else 0.0 * shift), 1.0,
         ),
-        setup.start_radius,
+        setup.start_radius, tolerance=_TOLERANCE,
     )
     shape = (level.size, 1, -1) if stretched else (level.size // scales.size, scales.size, -1)
     origin = birth if stretched else 0.0
@@ -180,15 +184,21 @@ def _sampled(curves, scales, clock):
     t = (age - curves.time[index]) / (curves.time[index + 1] - curves.time[index])
     t = np.clip(t, 0.0, 1.0)
 
-    def at(values):
-        values = values[:, 0] if curves.stretched else values
-        return values[..., index] + t * (values[..., index + 1] - values[..., index])
+    t = t.astype(_COARSE)
+    after = index + 1
 
-    radius = np.maximum(np.sqrt(np.maximum(at(curves.square), 0.0)) - curves.length, 0.0)
+    def at(values):
+        values = (values[:, 0] if curves.stretched else values).astype(_COARSE)
+        low, rise = values.take(index, axis=-1), values.take(after, axis=-1)
+        rise -= low
+        rise *= t
+        rise += low
+        return rise
+
+    radius = np.sqrt(np.maximum(at(curves.square), 0.0)) - curves.length.astype(_COARSE)
     # A cloud in a gas that cannot be has no radius: it does not shine, and is not chosen.
-    radius = np.where(np.isfinite(radius), radius, 0.0)
     born = age > 0.0 if curves.stretched else clock > curves.births
-    return np.where(born, radius, 0.0), at(curves.density)
+    return np.where(born & (radius > 0.0), radius, 0.0), at(curves.density)
 
 
 def _thinned(path, birth, stretch=1.0):
@@ -241,11 +251,16 @@ def _spread_by_birth(lone, clock):
 def _misfits(problem, spread, radius, density):
     """Return chi-square [-], shape (l, s), and fitted ln amplitudes, shape (channels, l, s)."""
     bins, model = problem.bins, problem.model
-    tables, which = spread
-    table, size = tables[0], tables[0].cells.shape[1]
+    (tables, which), light = spread, model.light
+    size = tables.shape[-1]
     born = radius > 0.0
-    place = (np.log(np.maximum(radius, 1e-9)) - table.start) * (1.0 / table.step)
-    index = np.clip(np.rint(place), 0, size - 1).astype(np.intp) + which * size
+    place = np.log(np.maximum(radius, _COARSE(1e-9)))
+    place -= _COARSE(light.start)
+    place *= _COARSE(1.0 / light.step)
+    np.minimum(np.maximum(np.rint(place, out=place), 0.0, out=place), size - 1, out=place)
+    index = place.astype(np.intp)
+    index += which * size
+    density = density * born
     everywhere = born.any(axis=(0, 1))
     total = np.zeros(radius.shape[:2])
     amplitudes = []
@@ -253,15 +268,24 @@ def _misfits(problem, spread, radius, density):
         data = bins.values[i]
         weight = _blunted(bins.weights[i], data, channel.kind)
         row = model.extinction_row if channel.kind == "scatter" else channel.row
-        stacked = np.concatenate([t.cells[row] for t in tables])
-        depth = density * stacked.take(index) * born * channel.path
+        depth = 0.0
+        if channel.path > 0.0:
+            depth = tables[row].ravel().astype(_COARSE).take(index)
+            depth *= density
+            depth *= _COARSE(channel.path)
         if channel.kind == "scatter":
-            stacked = np.concatenate([t.cells[channel.row] for t in tables])
-            shape = stacked.take(index) * born * density
-            shape = (channel.gain or 1.0) * shape * np.exp(-depth)
+            # Of order one, so that squares and sums keep their digits.
+            unit = np.max(density) * np.max(tables[channel.row])
+            shape = (tables[channel.row].ravel() / unit).astype(_COARSE).take(index)
+            shape *= density
+            if channel.path > 0.0:
+                shape *= np.exp(-depth)
+            unit *= channel.gain or 1.0
         else:
             shape, data, weight = _optical_depth(depth, data, weight, everywhere)
+            unit = 1.0
         misfit, amplitude, certain = _line_fit(shape, data, weight)
+        amplitude = amplitude / unit
         total += misfit
         known = channel.gain is not None or channel.kind == "transmission"
         amplitudes.append(np.log(np.maximum(amplitude, 1e-30)) if known
@@ -302,9 +326,9 @@ def _line_fit(shape, data, weight):
     square = weight**2
     total = square.sum()
     centred = data - (square @ data) / total
-    mean = shape @ square / total
-    top = shape @ (square * centred)
-    power = (shape * shape) @ square - total * mean**2
+    mean = (shape @ square.astype(shape.dtype)).astype(float) / total
+    top = (shape @ (square * centred).astype(shape.dtype)).astype(float)
+    power = ((shape * shape) @ square.astype(shape.dtype)).astype(float) - total * mean**2
     amplitude = top / np.maximum(power, 1e-300)
     certain = np.abs(top) / np.sqrt(np.maximum(power, 1e-300))
     return square @ centred**2 - amplitude * top, amplitude, certain

@@ -19,8 +19,8 @@ _DAMPING = 1e-4
 _RELATIVE = 1e-5
 # How far first order serves: what is left out is of the square of these.
 _NEAR = {
-    "number": 0.02, "scale": 0.004, "accommodation": 0.05, "temperature": 5e-4, "vapour": 4e-3,
-    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3, "stretch": 0.03,
+    "number": 0.02, "scale": 0.004, "accommodation": 0.015, "temperature": 5e-4, "vapour": 4e-3,
+    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3, "stretch": 0.01,
 }
 # How far a descent may go before growth is solved again.
 _REACH = {
@@ -174,10 +174,12 @@ def polish(problem, solution):
         low, high = limits_of(problem, name)
         parameters.add(f"p{i}", value=0.0, min=(low - start[i]) / scale[i] - 1e-9,
                        max=(high - start[i]) / scale[i] + 1e-9)
-    seen, linear, near = {}, solution.best.state.linear, solution.best.state.table
+    linear, near = solution.best.state.linear, solution.best.state.table
+    seen = {(0.0,) * len(names): solution.best}
 
     def at(values):
-        key = tuple(values[f"p{i}"].value for i in range(len(names)))
+        # Bounds are folded into the variables and out again, which costs the last digits.
+        key = tuple(round(values[f"p{i}"].value, 9) + 0.0 for i in range(len(names)))
         if key not in seen:
             cloud = shifted(solution.best.cloud, names, start + scale * np.array(key))
             seen[key] = evaluate(problem, cloud, linear=linear, near=near)

@@ -201,7 +201,7 @@ def at_reference(setup, posterior, radius):
     bend = _at(radius, median, np.gradient(speed, time)) / rate
     gradient = {}
     for name, rows in linear.log_radius_by.items():
-        change = median * (weights @ linear.carry @ rows)[late]
+        change = median * (weights @ rows)[late]
         # At fixed radius: what the curve gains in speed, less what it would have anyway there.
         gradient[name] = (_at(radius, median, np.gradient(change, time))
                           - bend * _at(radius, median, change))
