@@ -242,6 +242,8 @@ KEYS = (
         doc="before the expansion; without it, the start of the pressure trace"),
     Key("chamber", "path_mm", "path", "mm", bounds=_NOT_NEGATIVE, default=0.0, example="120.0",
         doc="cloud crossed by the light in all, on its way in and out to a detector"),
+    Key("chamber", "width_mm", "width", "mm", bounds=_POSITIVE, example="60.0",
+        doc="smallest inner width; tells how long heat from the walls leaves the gas adiabatic"),
     Key("growth", "temperature_K", "temperature", "K", bounds=_TEMPERATURE, required=True,
         example="265.0", doc="during growth"),
     Key("growth", "pressure_kPa", "pressure", "kPa", bounds=_PRESSURE, required=True,

@@ -138,6 +138,8 @@ class Chamber:
     """[Pa]; ``None``: the start of the pressure trace."""
     path: float = 0.0
     """Cloud crossed by the light in all, on its way in and out to a detector [m]."""
+    width: float | None = None
+    """Smallest inner width [m]."""
 
 
 @dataclass(frozen=True)

@@ -39,6 +39,8 @@ REASONS = {
     "not-converged": "the last descent did not settle",
     "never-supersaturated": "the vapour is never supersaturated",
     "pressure-disagrees": "stated and measured pressure disagree",
+    "warm-walls": "heat from the walls reaches far into the chamber",
+    "pressure-recovers": "the pressure rises during growth by more than heat explains",
     "may-freeze": "droplets may freeze",
     "out-of-range": "a property was used outside its range",
     "unusable": "the file could not be used",

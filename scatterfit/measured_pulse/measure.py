@@ -21,6 +21,7 @@ from scatterfit.measured_pulse import quantities as q
 from scatterfit.measured_pulse.bench_inputs import bench_inputs
 from scatterfit.measured_pulse.budget import budget_lines, learnt_inputs, rate_budget
 from scatterfit.measured_pulse.extrema import extrema_findings, matched_extrema
+from scatterfit.measured_pulse.heat import heat_findings
 from scatterfit.measured_pulse.limit import upper_limit
 from scatterfit.measured_pulse.number import final_depth, number_results
 from scatterfit.measured_pulse.prepare import optical_columns, prepare, reangled
@@ -233,8 +234,9 @@ def _puzzle(prepared, fit, gas, warnings):
         "the light changes far beyond its noise, but no cloud was found that explains it: check "
         "columns, angle, index and wavelength, or exclude what is not droplets (--exclude-ms)"
     ))
+    more = [Reason(f.code, f.text) for f in heat_findings(prepared.setup, prepared.time[-1])]
     return MeasuredPulse(
-        verdict="rejected", reasons=(reason, *warnings), channels=_views(prepared, fit),
+        verdict="rejected", reasons=(reason, *more, *warnings), channels=_views(prepared, fit),
         chi2_reduced=fit.chi2_reduced, residual_lag1=fit.lag1, **gas,
     )
 
@@ -348,6 +350,8 @@ def _findings(prepared, fit, scale, turns, left):
     prior = fit.problem.priors["scale"][1]
     found = residual_findings(fit) + sample_findings(fit)
     found += growth_findings(fit, (scale.value, prior), setup)
+    end = float(fit.problem.bins.time[-1]) - fit.best.cloud.delay
+    found += heat_findings(setup, end, fit.best.state.growth)
     if left:
         radii = ", ".join(f"{r.final_radius * 1e6:.3f}" for r in left)
         found.append(Finding("ambiguous-lobe", (

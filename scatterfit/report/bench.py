@@ -4,6 +4,7 @@ import math
 import textwrap
 
 from scatterfit import matter
+from scatterfit.droplet_growth.walls import adiabatic_lifetime, wall_heat
 from scatterfit.report.rounding import NOT_DETERMINED, format_number, format_quantity
 
 WIDTH = 80
@@ -118,7 +119,7 @@ def after_section(setup):
         ("pressure", format_number(path.reference_pressure / 1e3, "kPa")),
         ("saturation ratio", format_number(setup.growth_saturation_ratio)),
     ]
-    parts = [table("During growth (undisturbed gas)", growth)]
+    parts = [table("During growth (undisturbed gas)", growth + _walls(setup))]
     if hold is None:
         return "\n\n".join(["Nucleation hold: not stated", *parts])
     lasting = None if hold.effective is None else 1e3 * hold.effective
@@ -136,6 +137,25 @@ def after_section(setup):
         rows.append(("seeds' threshold", f"saturation ratio {format_number(setup.threshold)}"))
         title = "Peak of the saturation ratio (seeds: no nucleation)"
     return "\n\n".join([table(title, rows), *parts])
+
+
+def _walls(setup):
+    """Return rows about heat from the walls."""
+    heat = wall_heat(setup)
+    age = float(setup.path.time[-1] - setup.births.times[0])
+    after = f"after {1e3 * age:.3g} ms"
+    rows = [("thermal diffusivity", format_number(1e6 * heat.diffusivity, "mm2/s", 3)),
+            ("warm layer at the walls", f"{format_number(1e3 * heat.layer(age), 'mm', 2)} {after}")]
+    if heat.width is None:
+        return [*rows, ("adiabatic lifetime", "state chamber.width_mm to know it")]
+    lifetime = adiabatic_lifetime(heat.diffusivity, heat.width)
+    return [
+        *rows,
+        ("adiabatic lifetime", f"{format_number(lifetime, 's', 2)} in the middle of "
+                               f"{1e3 * heat.width:g} mm"),
+        ("core warmed, if closed", f"{format_number(heat.core_warming(age), 'K', 2)} {after}, at "
+                                   f"least"),
+    ]
 
 
 def properties_section(bench, temperatures):
