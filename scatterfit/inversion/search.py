@@ -215,10 +215,10 @@ def _thinned(path, birth, stretch=1.0):
 
 def _scale_count(problem, widest):
     """Return how many growth scales resolve the lobes at the largest radius."""
-    beam = problem.model.setup.apparatus.beam
-    detectors = problem.model.setup.apparatus.detectors
-    sines = [np.sin(0.5 * detector.angle) for detector in detectors] or [0.35]
-    phase = 4.0 * np.pi * 4e-6 / beam.wavelength * max(sines)
+    bench = problem.model.setup.apparatus
+    finest = [np.sin(0.5 * detector.angle) / bench.beams[bench.beam_number(detector)].wavelength
+              for detector in bench.detectors] or [0.35 / bench.beam.wavelength]
+    phase = 4.0 * np.pi * 4e-6 * max(finest)
     return int(np.clip(np.ceil(2.0 * widest * 0.5 * phase / _PHASE), 25, 90)) | 1
 
 
@@ -267,10 +267,9 @@ def _misfits(problem, spread, radius, density):
     for i, channel in enumerate(model.channels):
         data = bins.values[i]
         weight = _blunted(bins.weights[i], data, channel.kind)
-        row = model.extinction_row if channel.kind == "scatter" else channel.row
         depth = 0.0
         if channel.path > 0.0:
-            depth = tables[row].ravel().astype(_COARSE).take(index)
+            depth = tables[channel.dimming_row].ravel().astype(_COARSE).take(index)
             depth *= density
             depth *= _COARSE(channel.path)
         if channel.kind == "scatter":
