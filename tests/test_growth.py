@@ -774,6 +774,25 @@ def test_a_sloping_hold_is_followed():
     assert held[best] == pytest.approx(true[best], abs=30.0)
 
 
+def test_rims_that_still_settle_do_not_bend_the_hold():
+    """A flat hold reached and left along a cosine: a parabola through it would bend all of it.
+
+    With parabolas alone the standard deviation of the effective duration was 1.1 percent here.
+    """
+    off = []
+    for seed in range(24):
+        time, true, recorded, log_rate = hold_record(100 + seed, noise=9.0)
+        exact = births_from_rate(time, log_rate(true))
+        smoothed, noise = smooth(recorded)
+        found = births_from_rate(
+            time, log_rate(settle_hold(time, recorded, smoothed, log_rate(smoothed), noise)))
+        off.append((found.effective / exact.effective - 1.0, found.median - exact.median))
+    effective, median = np.array(off).T
+    assert np.mean(effective) == pytest.approx(0.0, abs=0.012)
+    assert np.std(effective) < 0.007
+    assert np.std(median) < 3.5e-6
+
+
 @settings(max_examples=25, deadline=None)
 @given(seed=st.integers(0, 10**6), noise=st.floats(0.5, 50.0), height=st.floats(3e3, 4e4))
 def test_smoothing_keeps_corners_and_lowers_the_noise(seed, noise, height):

@@ -3,8 +3,10 @@
 import numpy as np
 
 _DEPTH = 0.3
-_SIGNIFICANT = 2.5
+_SIGNIFICANT = 3.5
 _FEWEST = 4
+_RIMS = (0.07, 0.15, 0.3)
+"""Lengths over which the ends of a hold settle, in halves of the hold [-]."""
 
 
 def settle_hold(time, recorded, smoothed, log_rate, noise):
@@ -12,8 +14,8 @@ def settle_hold(time, recorded, smoothed, log_rate, noise):
 
     The classical rate changes by several percent for one part in a thousand of pressure, so its
     peak picks the lowest of the noisy samples of a hold. Where the rate is within a factor
-    exp(-0.3) of its peak the recorded pressure is replaced by the lowest polynomial, at most
-    quadratic, that the samples do not contradict.
+    exp(-0.3) of its peak the recorded pressure is replaced by the plainest curve that the samples
+    do not contradict: level, straight, a parabola, or level or straight with rims that decay.
 
     Parameters
     ----------
@@ -49,24 +51,34 @@ def settle_hold(time, recorded, smoothed, log_rate, noise):
         return smoothed
     x = time[part] - time[part].mean()
     x = x / max(np.abs(x).max(), 1e-300)
-    y = recorded[part]
     settled = smoothed.copy()
-    best = np.full(x.size, y[good].mean())
-    for degree in (1, 2):
-        if good.sum() < degree + _FEWEST:
-            break
-        fit = np.polyfit(x[good], y[good], degree)
-        curve = np.polyval(fit, x)
-        if _gain(y[good], np.polyval(fit, x[good]), best[good], noise):
-            best = curve
-    settled[part] = best
+    settled[part] = _plainest(x, recorded[part], good, noise)
     return settled
 
 
-def _gain(values, fit, simpler, noise):
-    """Return whether a fit is better than a simpler one by more than chance."""
-    drop = np.sum((values - simpler) ** 2) - np.sum((values - fit) ** 2)
-    return drop > (_SIGNIFICANT * noise) ** 2
+def _plainest(place, values, good, noise):
+    """Return the plainest curve through the good samples: each column must be worth its while.
+
+    A hold is level or drifts evenly; at its rims the gas still settles or already begins to be
+    recompressed, faster than a parabola bends.
+    """
+    level = np.ones_like(place)
+    rims = [np.exp(-(1.0 + sign * place) / length) for sign in (1.0, -1.0) for length in _RIMS]
+    both = [(first, last) for first in rims[:len(_RIMS)] for last in rims[len(_RIMS):]]
+    families = [(), (place,), (place, place**2), *((rim,) for rim in rims), *both,
+                *((place, rim) for rim in rims)]
+    best, least = None, np.inf
+    for columns in families:
+        if good.sum() < len(columns) + _FEWEST:
+            continue
+        matrix = np.stack([level, *columns], axis=1)
+        inner = matrix[good]
+        curve = matrix @ np.linalg.lstsq(inner, values[good], rcond=None)[0]
+        cost = np.sum((values[good] - curve[good]) ** 2) + (
+            len(columns) * (_SIGNIFICANT * noise) ** 2)
+        if cost < least:
+            best, least = curve, cost
+    return best
 
 
 def _run(near, peak):
