@@ -26,7 +26,7 @@ def budget_lines(name, factor, variances, fit):
     name : str
         Key of the quantity.
     factor : float
-        From SI to the unit of its key.
+        From SI to the unit of its key [-].
     variances : tuple
         From the noise, a dict by parameter or input, and the standard uncertainty that stands
         for the model, all in SI [any].
