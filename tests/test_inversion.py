@@ -18,7 +18,7 @@ from scatterfit.inversion.extrema import Turn, find_turns, match_turns
 from scatterfit.inversion.fit import coarse_model, fit_pulse, full_residual, whiteness
 from scatterfit.inversion.hops import find_hops
 from scatterfit.inversion.noise import estimate_noise, resolution_step, running_mean
-from scatterfit.inversion.onset import find_onset
+from scatterfit.inversion.onset import find_onsets
 from scatterfit.inversion.prior import growth_scale_sigma
 from scatterfit.inversion.problem import (
     LIMITS,
@@ -222,10 +222,23 @@ def test_onset_is_where_light_leaves_its_baseline(kind):
         noise = 2e-3 * np.random.default_rng(seed).standard_normal(3000)
         data = channel(signal + noise, kind)
         bins = bin_channels(time, [data], bin_edges(time, 0.0, 600))
-        onsets.append(find_onset(bins, [kind]))
+        onsets += find_onsets(bins, [kind])
+    assert len(onsets) == 5
     assert np.all(np.array(onsets) > 0.4)
     # A few percent of the light count as none: hum and drift are no onset.
     assert np.all(np.array(onsets) < 0.52)
+
+
+def test_a_slow_hum_before_the_droplets_leaves_two_onsets():
+    """A hump of 4 percent of the light at the start: the rise after it is an onset as well."""
+    time = np.linspace(0.0, 1.0, 3000)
+    light = np.maximum(time - 0.4, 0.0) ** 2 + 0.015 * np.maximum(np.sin(20.0 * time), 0.0) * (
+        time < 0.157)
+    data = channel(light + 1e-3 * np.random.default_rng(0).standard_normal(3000), "scatter")
+    bins = bin_channels(time, [data], bin_edges(time, 0.0, 600))
+    first, second = find_onsets(bins, ["scatter"])
+    assert first < 0.1
+    assert 0.4 < second < 0.52
 
 
 def test_glitches_are_what_lies_far_outside():

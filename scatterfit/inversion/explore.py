@@ -28,6 +28,7 @@ _COMPARABLE = 2.5
 _SLOW_MISFIT = 0.02
 _BATCHES = (1, 3, 6, 10, 10)
 _CLEARED_AFTER = 1
+_MUCH = 0.5
 # How near a template must come, and how many are followed, once one describes the trace: few
 # where lobes tell, many where only shoulders do.
 _LIKELY = (1.6, 10)
@@ -207,7 +208,9 @@ def explore(problem, candidates):
             problem, rough, disturbances = _cleared(problem, rough)
         if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
-    return settle(problem, rough), disturbances
+    # What a cloud in the wrong lobe seemed to need is forgotten.
+    known = rough and _good(rough[0])
+    return settle(problem, rough), disturbances if known else ((),) * len(disturbances)
 
 
 def _sorted(solutions):
@@ -216,16 +219,17 @@ def _sorted(solutions):
 
 
 def _cleared(problem, rough):
-    """Return the problem with hum and drift allowed for, and its solutions, if that explains it."""
+    """Return the problem with hum and drift allowed for, its solutions and names, if it helps."""
     names = find_disturbances(problem, rough[0].best)
     none = ((),) * len(problem.model.channels)
     if names == none:
         return problem, rough, none
     extras = tuple(stack_columns(problem.bins.time, group) for group in names)
     clearer = replace(problem, extras=extras)
-    again = _sorted(descend(clearer, s.best.cloud, iterations=5, tolerance=1.0, rounds=1,
+    again = _sorted(descend(clearer, s.best.cloud, iterations=8, tolerance=1.0, rounds=3,
                             linear=s.best.state.linear) for s in rough)
-    return (clearer, again, names) if _good(again[0]) else (problem, rough, none)
+    much = again[0].best.chi2 < _MUCH * rough[0].best.chi2
+    return (clearer, again, names) if much or _good(again[0]) else (problem, rough, none)
 
 
 def _lobed(problem):

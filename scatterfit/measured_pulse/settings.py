@@ -6,7 +6,7 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.forward.growth_model import Cloud, grow
 from scatterfit.inversion.data import bin_channels, bin_edges
 from scatterfit.inversion.fit import FitOptions
-from scatterfit.inversion.onset import find_onset
+from scatterfit.inversion.onset import find_onsets
 from scatterfit.inversion.prior import depletion_sigma, growth_scale_sigma
 from scatterfit.measured_pulse.bench_inputs import (
     temperature_relative_sigma,
@@ -64,13 +64,17 @@ def fit_options(prepared, angle_base, angle_offsets):
         prepared.time, prepared.channels,
         bin_edges(prepared.time, float(prepared.time[0]), _ONSET_BINS),
     )
-    onset = find_onset(bins, [c.kind for c in prepared.channels])
-    # At a thirtieth of its light a droplet has a third of its size, a tenth of its age.
-    rest = float(prepared.time[-1]) - onset
-    lag = _visible_after(prepared) + _AGE_AT_ONSET * rest
-    priors["delay"] = (onset - 0.4 * lag, _LOOSE_CLOCK + lag)
-    delays = tuple(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
-    return FitOptions(tuple(names), priors, onset, delays, widest, limits)
+    onsets = find_onsets(bins, [c.kind for c in prepared.channels])
+    delays, lags = [], []
+    for onset in onsets:
+        # At a thirtieth of its light a droplet has a third of its size, a tenth of its age.
+        rest = float(prepared.time[-1]) - onset
+        lag = _visible_after(prepared) + _AGE_AT_ONSET * rest
+        delays += list(onset + 0.02 * rest - (lag + 0.02 * rest) * np.linspace(0.0, 1.0, _DELAYS))
+        lags.append(lag)
+    apart = onsets[-1] - onsets[0]
+    priors["delay"] = (onsets[0] + 0.5 * apart - 0.4 * lags[0], _LOOSE_CLOCK + lags[0] + apart)
+    return FitOptions(tuple(names), priors, onsets[0], tuple(delays), widest, limits)
 
 
 def _free(prepared, angle_base, angle_offsets):
