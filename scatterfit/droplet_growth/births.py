@@ -61,7 +61,8 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
     time : ndarray, shape (n,)
         Increasing [s].
     log_rate : ndarray, shape (n,)
-        ln of the nucleation rate at those times [-]; straight in between.
+        ln of the nucleation rate at those times [-]; the rate itself is straight in between, so
+        that its integral holds on average where few samples fall into the hold.
     classes : int
         Number of classes.
     finer : sequence of tuple
@@ -95,7 +96,7 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
     first, last = max(kept[0] - 1, 0), min(kept[-1] + 1, time.size - 1)
     dense = np.linspace(time[first], time[last], _POINTS)
     low = np.maximum(log_rate, top - 60.0)
-    rate = np.exp(np.interp(dense, time, low) - top)
+    rate = np.interp(dense, time, np.exp(low - top))
     step = dense[1] - dense[0]
     share = step * rate
     share[[0, -1]] *= 0.5

@@ -16,7 +16,7 @@ from scatterfit.droplet_growth.cautions import (
 from scatterfit.droplet_growth.classical_rate import classical_log_rate
 from scatterfit.droplet_growth.cloud import SOLVED
 from scatterfit.droplet_growth.gas_path import GasPath, adiabatic_temperature, choose_nodes
-from scatterfit.droplet_growth.hold import settle_hold
+from scatterfit.droplet_growth.hold import STATED_DURATION, duration_sigma, settle_hold
 from scatterfit.droplet_growth.pressure import smooth, undo_lag
 from scatterfit.droplet_growth.properties import GrowthProperties, growth_properties
 
@@ -27,6 +27,7 @@ _BIRTH_RADIUS = 3e-9
 _RECOMPRESSION = 0.2
 _RAMP_NODES = 9
 _SEED_RADIUS = 0.2e-6
+_STEP = 1e-4
 
 
 @dataclass(frozen=True)
@@ -43,6 +44,10 @@ class Hold:
     """Integral of the rate over its peak [s]."""
     log_rate: float
     """ln of the classical rate there, per m3 and s [-]."""
+    effective_sigma: float = STATED_DURATION
+    """Relative standard uncertainty of ``effective`` [-]."""
+    samples: float = np.inf
+    """Samples of the gauge within ``effective`` [-]."""
 
 
 @dataclass(frozen=True)
@@ -173,9 +178,14 @@ def _measured(apparatus, substance, gas, record, classes):
         births = births_from_rate(time, log_rate, classes)
         few = births_from_rate(time, log_rate, _FEW, _FEW_FINE)
         peak = int(np.argmax(log_rate))
+    beside = smoothed[peak] * np.exp([-_STEP, _STEP])
+    lower, higher = np.maximum(_states(bench, before, beside)[2], -700.0)
+    steep = (higher - lower) / (2.0 * _STEP)
+    samples = births.effective / float(np.median(np.diff(time)))
     hold = Hold(
         float(temperature[peak]), float(smoothed[peak]), float(saturation[peak]),
         births.effective or None, float(log_rate[peak]),
+        duration_sigma(time, log_rate, abs(steep) * noise / smoothed[peak], samples), samples,
     )
     first, last = births.times[0], births.times[-1]
     nodes = choose_nodes(time, smoothed, (first, max(last, first + 1e-5)))

@@ -11,7 +11,8 @@ from scatterfit.measured_pulse.bench_inputs import (
 )
 from scatterfit.measured_pulse.record import NucleationConditions, Quantity
 
-_EFFECTIVE = 0.03
+_SAMPLING = 0.22
+"""Part of a sample by which sampling alone puts the effective duration off (measured)."""
 _PRESSURE = 2e-4
 
 
@@ -133,7 +134,8 @@ def nucleation_conditions(setup, concentration, stretch=None):
     if hold.effective and setup.threshold is None:
         longer = Quantity(1.0, 0.0) if stretch is None else stretch
         duration = hold.effective * longer.value
-        spread = float(np.hypot(sigmas["effective"], longer.sigma / longer.value))
+        spread = float(np.linalg.norm([
+            sigmas["effective"], longer.sigma / longer.value, _SAMPLING / max(hold.samples, 1.0)]))
         effective = Quantity(duration, duration * spread)
         if concentration is not None:
             path = setup.path
@@ -158,12 +160,12 @@ def _hold_sigmas(setup):
     if setup.clock_known:
         offset = known.get("pressure.offset_kPa", 0.0)
         start = np.hypot(known.get("chamber.pressure_kPa", 0.0), offset) / setup.start_pressure
-        return {**sigmas, "start": float(start), "effective": _EFFECTIVE,
+        return {**sigmas, "start": float(start), "effective": hold.effective_sigma,
                 "pressure": float(np.hypot(_PRESSURE, offset / hold.pressure))}
     effective = known.get("pulse.hold_ms", 0.0) / hold.effective if hold.effective else 0.0
     return {
         **sigmas, "temperature": known.get("pulse.temperature_K", 0.0) / hold.temperature,
-        "start": 0.0, "effective": float(np.hypot(_EFFECTIVE, effective)),
+        "start": 0.0, "effective": float(np.hypot(hold.effective_sigma, effective)),
         "pressure": float(np.hypot(
             _PRESSURE, known.get("pulse.pressure_kPa", 0.0) / hold.pressure)),
     }

@@ -33,6 +33,7 @@ VAPOUR_SIGMA = 0.5
 the hold is not known (common practice, no source)."""
 
 _LARGEST_PART = 0.5
+_STEP = 0.01
 
 
 @dataclass(frozen=True)
@@ -127,10 +128,13 @@ def background_losses(table, pulses, settings):
     duration = to_si(table.number(DURATION)[rows], "ms")
     part = vapour_taken(around, particles, np.nan_to_num(duration))
     vapour = _lower_rate(around, part)
-    by_size = (loss_exponent(around, replace(particles, diameter=1.01 * size)) - droplets) / 0.01
-    grown = vapour_taken(around, replace(particles, diameter=1.01 * size), np.nan_to_num(duration))
-    vapour_by_size = (_lower_rate(around, grown) - vapour) / 0.01
-    spread = ((droplets + vapour) * stated[0], (by_size + vapour_by_size) * stated[1],
+    by_size = np.zeros(rows.size)
+    if np.any(stated[1]):
+        larger = replace(particles, diameter=(1.0 + _STEP) * size)
+        grown = vapour_taken(around, larger, np.nan_to_num(duration))
+        more = loss_exponent(around, larger) + _lower_rate(around, grown)
+        by_size = (more - droplets - vapour) / _STEP
+    spread = ((droplets + vapour) * stated[0], by_size * stated[1],
               MODEL_SIGMA * droplets, VAPOUR_SIGMA * vapour)
     taken = np.where(np.isfinite(duration), part[:, part.shape[1] // 2], np.nan)
     return Lost(

@@ -14,7 +14,7 @@ _FIRST = 1.05
 """Critical sizes from which on a droplet counts as born (common practice, no source)."""
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(16)
 _COLDER, _WARMER = 5.0, 60.0  # droplets against the gas [K]
-_WARMTH, _STEPS = 10.0, 8
+_WARMTH, _STEPS = 10.0, 6
 _MOMENTS = 8
 
 

@@ -1,11 +1,14 @@
 """Do one-sigma intervals hold the truth as often as they should?
 
     python tests/studies/coverage.py --count 1000 --out tests/studies/coverage.jsonl
+    python tests/studies/coverage.py --count 60 --independent --out coverage_independent.jsonl
     python tests/studies/coverage.py --summary tests/studies/coverage.jsonl
 
 One bench whose chamber file states angle, gain and temperature with sigmas; the true values of
 each pulse are drawn from them, its number, growth scale and noise as well. A file that exists is
-continued. Not part of the test run.
+continued. With ``--independent`` the pulses are made by ``independent_pulse.py``, diffusivity,
+conductivity, vapour pressure and nucleation barrier off by what a handbook is. Not part of the
+test run.
 """
 
 import argparse
@@ -19,6 +22,7 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 
+from scatterfit import matter
 from scatterfit.apparatus.check import apparatus_from_mapping
 from scatterfit.droplet_growth.setup import growth_setup
 from scatterfit.files_fit import fit_loaded
@@ -52,15 +56,10 @@ def bench(temperature=TEMPERATURE):
     })
 
 
-def run(seed):
-    """Return errors and sigmas of one pulse."""
-    rng = np.random.default_rng([7, seed])
-    angle, gain, warmth = rng.standard_normal(3)
-    number = float(np.exp(rng.uniform(np.log(3e8), np.log(6e9))))
-    stated, store = bench(), default_store()
-    true = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth)
-    count = round((DURATION + 5e-3) * RATE) + 1
-    time = np.round(-5e-3 + np.arange(count) / RATE, 12)
+def made_here(rng, time, errors, number):
+    """Return light [V], pressure [Pa] and truth of a pulse by scatterfit's own simulation."""
+    angle, warmth = errors
+    true, store = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth), default_store()
     fine = np.arange(-5e-3, DURATION + 1e-6, 1e-5)
     ratio, start = 0.78, true.chamber.pressure
     low = hold_pressure(true, Scenario(number, DURATION, RATE, NOISE, HOLD, ratio))
@@ -72,26 +71,76 @@ def run(seed):
     cloud = Cloud(number=np.log(number), scale=float(GROWTH_SIGMA * rng.standard_normal()),
                   variance=7e-6, angles=(0.0,))
     signals, state = channel_signals(model, cloud, time)
-    light = signals[0].shape * (1.0 + GAIN_SIGMA * gain)
-    noise = np.hypot(0.0013 * light.max(), NOISE * light)
-    volts = 0.05 + light + noise * rng.standard_normal(count)
-    gauge = pressure_profile(time, levels, HOLD) + 2e-4 * start * rng.standard_normal(count)
-    columns = {"scatter_V": np.round(volts / 3e-4) * 3e-4, "gauge_kPa": gauge}
-    found = fit_loaded(stated, Trace(f"pulse{seed}", time, columns, ("time_s", *columns)))
     births, hold, path = setup.births, setup.hold, setup.path
     squares = state.radius[:, -1] ** 2
     radius = float(np.sqrt(np.interp(births.median, births.times, squares)))
     back = hold.pressure / hold.temperature * path.reference_temperature / path.reference_pressure
-    rate = number * back / hold.effective
+    return signals[0].shape, pressure_profile(time, levels, HOLD), {
+        "radius": radius, "number": number, "J": number * back / hold.effective,
+        "T": hold.temperature, "S": hold.saturation_ratio}
+
+
+def made_elsewhere(rng, time, errors, number):
+    """Return the same by the independent simulator; angles are drawn from nine."""
+    import independent_pulse as ip
+
+    steps, warmth = round(2.0 * errors[0]), errors[1]
+    true = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth)
+    liquid, gas = matter.substance("water"), matter.carrier("argon")
+    start, fraction = true.chamber.pressure, true.vapour.mole_fraction
+    nature = ip.Nature(
+        spread=0.004, diffusivity=float(np.exp(rng.normal(0, 0.01))),
+        conductivity=float(np.exp(rng.normal(0, 0.01))), barrier=float(rng.uniform(0.95, 1.05)),
+        saturation=float(np.exp(rng.normal(0, 0.003))))
+    props = ip.Properties(liquid, gas, fraction, nature)
+    cloud, pressure = ip.grow(props, time, (
+        true.chamber.temperature, (start, 0.78 * start), HOLD, fraction), number, nature)
+    truth = cloud.truth
+    gas_index = float(gas.refractive_index(532e-9, truth["T_growth"],
+                                           truth["p_growth_kPa"] * 1e3))
+    tables = independent_light(steps, 1.3368 / gas_index, gas_index)
+    shapes, *_ = ip.channel_shapes(cloud, tables, nature.spread, (0.12, 0.12), 1.0 / RATE, [2e-5])
+    return GAIN * shapes[0], pressure, {
+        "radius": float(cloud.median[-1]), "number": number, "J": truth["J_per_cm3_s"] * 1e6,
+        "T": truth["T_nuc"], "S": truth["S_nuc"]}
+
+
+def independent_light(steps, relative_index, gas_index):
+    """Return tables of light at one of nine angles; the gas differs too little to matter."""
+    import independent_pulse as ip
+
+    if steps not in _KNOWN:
+        angle = np.radians(ANGLE + 0.5 * ANGLE_SIGMA * steps)
+        optics = (532e-9, np.pi / 2, [(angle, np.radians(2.0))], 0.0)
+        _KNOWN[steps] = ip.light_tables(optics, relative_index, gas_index, 4.5e-6)
+    return _KNOWN[steps]
+
+
+_KNOWN = {}
+
+
+def run(seed, maker):
+    """Return errors and sigmas of one pulse."""
+    rng = np.random.default_rng([7, seed])
+    angle, gain, warmth = rng.standard_normal(3)
+    number = float(np.exp(rng.uniform(np.log(3e8), np.log(6e9))))
+    count = round((DURATION + 5e-3) * RATE) + 1
+    time = np.round(-5e-3 + np.arange(count) / RATE, 12)
+    light, pressure, truth = maker(rng, time, (angle, warmth), number)
+    light = light * (1.0 + GAIN_SIGMA * gain)
+    noise = np.hypot(0.0013 * light.max(), NOISE * light)
+    volts = 0.05 + light + noise * rng.standard_normal(count)
+    gauge = pressure + 2e-4 * pressure[0] * rng.standard_normal(count)
+    columns = {"scatter_V": np.round(volts / 3e-4) * 3e-4, "gauge_kPa": gauge}
+    found = fit_loaded(bench(), Trace(f"pulse{seed}", time, columns, ("time_s", *columns)))
     line = {"seed": seed, "verdict": found.verdict, "chi2": float(f"{found.chi2_reduced:.4g}")}
-    for name, quantity, value in (
-        ("radius", found.final_radius, radius), ("number", found.concentration, number),
-        ("J", found.nucleation.rate, rate),
-        ("T", found.nucleation.temperature, hold.temperature),
-        ("S", found.nucleation.saturation_ratio, hold.saturation_ratio),
-        ("growth", found.growth_scale, None),
+    for name, quantity in (
+        ("radius", found.final_radius), ("number", found.concentration),
+        ("J", found.nucleation.rate), ("T", found.nucleation.temperature),
+        ("S", found.nucleation.saturation_ratio),
     ):
-        if quantity is not None and value is not None:
+        if quantity is not None:
+            value = truth[name]
             line[name] = [float(f"{quantity.value / value - 1:.4g}"),
                           float(f"{quantity.sigma / value:.4g}")]
     return line
@@ -121,6 +170,7 @@ def main():
     parser.add_argument("--count", type=int, default=100)
     parser.add_argument("--out", type=Path, default=Path("coverage.jsonl"))
     parser.add_argument("--summary", type=Path)
+    parser.add_argument("--independent", action="store_true")
     args = parser.parse_args()
     if args.summary:
         lines = [json.loads(x) for x in args.summary.read_text().splitlines()]
@@ -129,10 +179,11 @@ def main():
     done = set()
     if args.out.exists():
         done = {json.loads(x)["seed"] for x in args.out.read_text().splitlines()}
+    maker = made_elsewhere if args.independent else made_here
     with args.out.open("a") as file:
         for seed in range(args.first, args.first + args.count):
             if seed not in done:
-                print(json.dumps(run(seed)), file=file, flush=True)
+                print(json.dumps(run(seed, maker)), file=file, flush=True)
 
 
 if __name__ == "__main__":
