@@ -1,11 +1,13 @@
-"""The effective duration of a hold, from gauges with few samples and with noise."""
+"""The gauge: wrong units refused; the duration of a hold from few samples and from noise."""
 
 import numpy as np
 import pytest
 
 from scatterfit.droplet_growth.births import births_from_rate
 from scatterfit.droplet_growth.setup import growth_setup
+from scatterfit.errors import TraceError
 from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile
+from scatterfit.measured_pulse.prepare import prepare_setup
 
 
 def steep_hold(time, begin, length):
@@ -42,3 +44,20 @@ def test_the_sigma_of_a_duration_is_its_scatter(make_bench):
         off.append((hold.effective / truth - 1.0) / sigma)
     assert 0.5 < np.sqrt(np.mean(np.square(off))) < 1.4
     assert np.mean(np.abs(off) < 2.0) > 0.88
+
+
+@pytest.mark.parametrize(("factor", "chamber", "parts"), [
+    (10.0, {}, ["starts at 900 kPa", "chamber.pressure_kPa is 90 kPa", "its unit"]),
+    (0.2, {}, ["starts at 18 kPa", "chamber.pressure_kPa"]),
+    (1e3, {"pressure_kPa": None}, ["starts at 9e+04 kPa", "1 to 5000 kPa"]),
+    (-1.0, {"pressure_kPa": None}, ["starts at -90 kPa"]),
+    (1e-3, {"pressure_kPa": None}, ["starts at 0.09 kPa"]),
+])
+def test_a_pressure_that_cannot_be_is_one_line(make_bench, factor, chamber, parts):
+    bench = make_bench(chamber=chamber)
+    time = np.linspace(-5e-3, 0.03, 400)
+    pressure = factor * pressure_profile(time, (9e4, 5.5e4, 7e4), 1e-3)
+    with pytest.raises(TraceError) as error:
+        prepare_setup(bench, time, {"pressure_kPa": pressure})
+    assert "\n" not in str(error.value)
+    assert all(part in str(error.value) for part in ["column pressure_kPa", *parts])

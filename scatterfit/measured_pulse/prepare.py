@@ -12,6 +12,9 @@ from scatterfit.forward.model import Channel, PulseModel
 from scatterfit.inversion.data import channel_data
 from scatterfit.inversion.noise import resolution_step
 
+_PRESSURES = (1e3, 5e6)
+"""Before an expansion, where gases are ideal and laws of growth hold [Pa] (common practice)."""
+_APART = 3.0
 _FEWEST = 20
 ANGLE_SIGMAS = 3.0
 """How many of its sigmas a detector's angle may be off [-]."""
@@ -80,9 +83,33 @@ def prepare_setup(apparatus, time, columns):
     -------
     setup : GrowthSetup
         Gas path, births, properties.
+
+    Raises
+    ------
+    TraceError
+        If the gauge shows a pressure that no bench has, or quite another than the stated one.
     """
     pressure = columns[apparatus.pressure.column] if apparatus.pressure is not None else None
+    if pressure is not None:
+        _check_pressure(apparatus, pressure)
     return growth_setup(apparatus, time, pressure, duration=float(time[-1] - time[0]))
+
+
+def _check_pressure(apparatus, pressure):
+    """Refuse a gauge whose unit, gain or column must be wrong."""
+    name, stated = apparatus.pressure.column, apparatus.chamber.pressure
+    shown = np.asarray(pressure, dtype=float)
+    shown = shown[np.isfinite(shown)] + apparatus.pressure.offset
+    start = float(np.median(shown[: max(shown.size // 20, 1)])) if shown.size else np.nan
+    remedy = "is it the right column, and its unit the one that its name ends in?"
+    if not _PRESSURES[0] < start < _PRESSURES[1]:
+        message = (f"column {name} starts at {start * 1e-3:.4g} kPa, where "
+                   f"{_PRESSURES[0] * 1e-3:g} to {_PRESSURES[1] * 1e-3:g} kPa can be: {remedy}")
+        raise TraceError(message)
+    if stated and not 1.0 / _APART < start / stated < _APART:
+        message = (f"column {name} starts at {start * 1e-3:.4g} kPa, chamber.pressure_kPa is "
+                   f"{stated * 1e-3:.4g} kPa: {remedy}")
+        raise TraceError(message)
 
 
 def pulse_kernel(setup, store=None):

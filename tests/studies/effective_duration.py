@@ -55,7 +55,8 @@ def summarise(lines):
         silent, noisy, sigma = (columns[name][chosen] for name in ("silent", "noisy", "sigma"))
         z = np.abs(noisy / sigma)
         rows.append(
-            f"| {low} to {high} | {z.size} | {silent.mean():+.2%}, {np.sqrt(np.mean(silent**2)):.2%} | "
+            f"| {low} to {high} | {z.size} | {silent.mean():+.2%}, "
+            f"{np.sqrt(np.mean(silent**2)):.2%} | "
             f"{noisy.mean():+.2%}, {np.sqrt(np.mean(noisy**2)):.2%} | {np.median(sigma):.2%} | "
             f"{np.mean(z < 1):.0%}; {np.mean(z < 2):.0%} |")
     return "\n".join(rows)
