@@ -1,6 +1,6 @@
 """What a background of larger particles takes between birth and detection."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -151,10 +151,9 @@ def growth_rate(surroundings, diameter):
     properties = growth_properties(
         substance, surroundings.gas, float(np.mean(fraction)), float(temperature.min()) - _COLDER,
         float(temperature.max()) + _WARMER, float(temperature.mean()))
-    # The density of the cold liquid everywhere, so that growth is nil at the critical size.
+    # Growth is nil at the critical size where volume over radius is that of each pulse's liquid.
     volume = substance.molar_mass / substance.density(temperature)
-    properties = replace(properties, molar_volume=volume)
-    radius = 0.5 * np.asarray(diameter, dtype=float)
+    radius = 0.5 * np.asarray(diameter, dtype=float) * (properties.molar_volume / volume)
     guess = temperature + np.full(radius.shape, _WARMTH)
     grown, *_ = radius_rate(properties, radius, (temperature, pressure, fraction), (1.0, 1.0),
                             guess, steps=_STEPS)

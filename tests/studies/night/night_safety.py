@@ -129,20 +129,20 @@ def misled(content, rng):
     elif kind == 2:
         cells[first:last, column] = cells[first, column]
     elif kind == 3:
-        cells[:, column] = [repr(x) for x in numbers * 10.0 ** rng.uniform(-6, 6)]
+        cells[:, column] = [repr(float(x)) for x in numbers * 10.0 ** rng.uniform(-6, 6)]
     elif kind == 4:
         cells = cells[np.sort(rng.choice(count, int(rng.integers(20, count)), replace=False))]
     elif kind == 5:
         other = int(rng.integers(1, len(names)))
         cells[:, [column, other]] = cells[:, [other, column]]
     elif kind == 6:
-        cells[:, column] = [repr(x) for x in -numbers]
+        cells[:, column] = [repr(float(x)) for x in -numbers]
     elif kind == 7:
-        cells[:, column] = [repr(x) for x in rng.normal(size=count)]
+        cells[:, column] = [repr(float(x)) for x in rng.normal(size=count)]
     elif kind == 8:
-        cells[:, column] = [repr(x) for x in numbers[::-1]]
+        cells[:, column] = [repr(float(x)) for x in numbers[::-1]]
     else:
-        cells[:, column] = [repr(x) for x in np.round(numbers, int(rng.integers(0, 3)))]
+        cells[:, column] = [repr(float(x)) for x in np.round(numbers, int(rng.integers(0, 3)))]
     lines = [*lines[: head + 1], *(",".join(row) for row in cells)]
     return ("\n".join(lines) + "\n").encode()
 
