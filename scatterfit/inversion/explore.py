@@ -34,6 +34,7 @@ _MUCH = 0.5
 _LIKELY = (1.6, 10)
 _LIKELY_SMOOTH = (10.0, 14)
 _DESCRIBED = 1.25
+_FAR = 3.0
 _LEAST_RADIUS = 8e-8
 
 
@@ -172,13 +173,14 @@ def blunted(bins, kinds, slow):
     return replace(bins, weights=np.array(weights))
 
 
-def explore(problem, candidates):
+def explore(problem, candidates, closer):
     """Return where descents from the candidates end, ordered by misfit and prior, best first.
 
     The most likely candidate is followed first. If it describes the trace, only those whose
     templates came near are followed too, as possible rivals; if not, the others are, more and
     more of them, until one does or none is left. A trace may be out of reach of every cloud
-    because of hum or drift: with those allowed for, the first few candidates may do.
+    because of hum or drift: with those allowed for, the first few candidates may do. If even so
+    none is near, a closer search gives the candidates from there on.
 
     Parameters
     ----------
@@ -186,6 +188,8 @@ def explore(problem, candidates):
         Coarse model and bins.
     candidates : sequence of Candidate
         Best first.
+    closer : callable
+        Gives more candidates, at some cost.
 
     Returns
     -------
@@ -206,6 +210,8 @@ def explore(problem, candidates):
         start += size
         if turn == _CLEARED_AFTER and not _good(rough[0]):
             problem, rough, disturbances = _cleared(problem, rough)
+            if _hopeless(rough[0]):
+                candidates, start = closer(), 0
         if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
     # What a cloud in the wrong lobe seemed to need is forgotten.
@@ -241,6 +247,11 @@ def _good(solution):
     """Return whether a solution describes the coarse bins."""
     residual = solution.best.residual
     return solution.best.chi2 < _DESCRIBED * residual.size
+
+
+def _hopeless(solution):
+    """Return whether a solution is nowhere near the trace."""
+    return solution.best.chi2 > _FAR * solution.best.residual.size
 
 
 def _descents(problem, clouds):

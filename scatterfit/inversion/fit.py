@@ -97,8 +97,8 @@ def _one_look(model, time, channels, options, slow):
     coarse = coarse_bins(time, channels, options.onset, slow)
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
-    candidates = search(problem, options.delays, options.widest, CANDIDATES)
-    found, disturbances = explore(problem, candidates)
+    looking = (problem, options.delays, options.widest, CANDIDATES)
+    found, disturbances = explore(problem, search(*looking), lambda: search(*looking, dense=True))
     channels, found = _without_hops(problem, found, time, channels, (options.onset, slow))
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))

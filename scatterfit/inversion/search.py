@@ -1,6 +1,7 @@
 """The right Mie lobe without a start value: many clouds grown at once, compared with the trace."""
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -21,6 +22,8 @@ _VARIANCE = 2e-5
 _RATIO = 4.0
 _SPREADS = 5
 _PHASE = 0.35
+_DENSE_PHASE = 0.7
+_ENOUGH = 0.6
 _GRID_ERROR = 0.05
 _FAINT = 0.01
 _CERTAIN = 4.0
@@ -39,7 +42,7 @@ class Candidate:
     """At the last sample [m]."""
 
 
-def search(problem, delays, widest, count=6):
+def search(problem, delays, widest, count=6, *, dense=False):
     """Return the clouds whose traces look most like the one seen.
 
     Clouds are grown for a grid of growth scale, sticking and depletion; amplitudes and offsets
@@ -56,6 +59,9 @@ def search(problem, delays, widest, count=6):
         Largest |ln growth scale| to try [-].
     count : int
         Candidates to return at the most.
+    dense : bool
+        Whether numbers stand so close that the radius at which the vapour is used up moves by a
+        part of a lobe from one to the next, at several times the cost.
 
     Returns
     -------
@@ -68,7 +74,8 @@ def search(problem, delays, widest, count=6):
         widest = min(_VAPOUR_SIGMAS * problem.priors["vapour"][1], 0.3)
     scales = np.linspace(-widest, widest, _scale_count(problem, widest))
     lone = grow(setup, Cloud(number=0.0))
-    levels = _levels(setup, max(float(lone.radius[0].max()), 1e-7))
+    free = max(float(lone.radius[0].max()), 1e-7)
+    levels = _levels(setup, free, _between(setup, free) if dense else np.array(_DEPLETION))
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
     tables = np.stack([widened(problem.model.light, _VARIANCE * _RATIO**k)
                        for k in range(_SPREADS)], axis=1)
@@ -215,14 +222,30 @@ def _thinned(path, birth, stretch=1.0):
 
 def _scale_count(problem, widest):
     """Return how many growth scales resolve the lobes at the largest radius."""
-    bench = problem.model.setup.apparatus
-    finest = [np.sin(0.5 * detector.angle) / bench.beams[bench.beam_number(detector)].wavelength
-              for detector in bench.detectors] or [0.35 / bench.beam.wavelength]
-    phase = 4.0 * np.pi * 4e-6 * max(finest)
+    phase = _lobe_phase(problem.model.setup.apparatus, 4e-6)
     return int(np.clip(np.ceil(2.0 * widest * 0.5 * phase / _PHASE), 25, 90)) | 1
 
 
-def _levels(setup, free):
+def _lobe_phase(bench, radius):
+    """Return by how much lobes turn from no size to a radius, in the finest channel [rad]."""
+    finest = [np.sin(0.5 * detector.angle) / bench.beams[bench.beam_number(detector)].wavelength
+              for detector in bench.detectors] or [0.35 / bench.beam.wavelength]
+    return 4.0 * np.pi * radius * max(finest)
+
+
+def _between(setup, free):
+    """Return the depletions with so many between them that no lobe of used-up clouds is missed."""
+    found = [_DEPLETION[0]]
+    for low, high in pairwise(_DEPLETION):
+        radius = free * min(1.0 / high, 1.0) ** (1.0 / 3.0)
+        turn = _lobe_phase(setup.apparatus, radius) * np.log(high / low) / 3.0
+        # Clouds that take little vapour keep their radius.
+        turn *= high / (high + _ENOUGH)
+        found += list(np.geomspace(low, high, int(np.ceil(turn / _DENSE_PHASE)) + 1)[1:])
+    return np.array(found)
+
+
+def _levels(setup, free, depletion):
     """Return ln number densities from no depletion to far more droplets than vapour for 1 um."""
     path = setup.path
     saturated = float(setup.substance.saturation_pressure(path.reference_temperature))
@@ -231,7 +254,7 @@ def _levels(setup, free):
     moles = path.reference_pressure / (GAS_CONSTANT * path.reference_temperature)
     # As many droplets of the radius that free growth would reach as use up the share.
     volume = 4.0 / 3.0 * np.pi * free**3 / setup.properties.molar_volume
-    return np.log(np.array(_DEPLETION) * 0.6 * excess * moles / volume)
+    return np.log(depletion * _ENOUGH * excess * moles / volume)
 
 
 def _spread_by_birth(lone, clock):
