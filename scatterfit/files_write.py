@@ -45,7 +45,7 @@ def write_trace(path, time_s, columns, comments=()):
     lines = [f"# {' '.join(comment.split())}" for comment in comments]
     lines.append(",".join(["time_ms", *columns]))
     lines.extend((row % cells).replace("nan", "") for cells in zip(*table, strict=True))
-    _write_text(path, "\n".join(lines) + "\n")
+    write_text(path, "\n".join(lines) + "\n")
 
 
 def write_json(path, mapping):
@@ -68,7 +68,7 @@ def write_json(path, mapping):
     except ValueError as error:
         message = f"{path}: not written: {error}"
         raise InvalidInputError(message) from error
-    _write_text(path, text + "\n")
+    write_text(path, text + "\n")
 
 
 def _plain(value):
@@ -79,8 +79,16 @@ def _plain(value):
     raise TypeError(message)
 
 
-def _write_text(path, text):
-    """Write a file beside its place and move it there."""
+def write_text(path, text):
+    """Write a text file beside its place and move it there.
+
+    Parameters
+    ----------
+    path : str or Path
+        File to write.
+    text : str
+        What to write, as UTF-8.
+    """
     path = Path(path)
     part = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:

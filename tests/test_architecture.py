@@ -11,7 +11,7 @@ import pytest
 
 ROOT = Path(__file__).resolve().parents[1] / "scatterfit"
 FLOW = ["apparatus", "cloud_optics", "droplet_growth", "forward", "inversion",
-        "measured_pulse", "nucleation", "overnight", "report"]
+        "measured_pulse", "measured_series", "nucleation", "overnight", "report"]
 GROUND = {"constants", "errors", "matter", "units"}
 EDGE = {"overnight", "report", "files", "cli", "__main__"}
 EDGE_ONLY = {"typer", "rich", "matplotlib", "csv", "json", "tomllib", "pathlib", "os", "sqlite3",

@@ -486,6 +486,9 @@ def test_every_example_is_allowed(key):
         content["column"] = "monitor_V"
     if key.name == "beam":
         mapping["beam"]["name"] = value
+    if key.table == "correlations":
+        content |= {k.name: tomllib.loads(f"v = {k.example}")["v"] for k in KEYS
+                    if k.table == key.table}
     content[key.name] = value
     apparatus_from_mapping(mapping)
 

@@ -10,6 +10,7 @@ from scatterfit.apparatus.records import (
     Background,
     Beam,
     Chamber,
+    Correlations,
     Detector,
     GasState,
     PressureGauge,
@@ -34,6 +35,7 @@ _RECORDS = {
     "growth": GasState,
     "pulse": Pulse,
     "analysis": Analysis,
+    "correlations": Correlations,
 }
 _FRACTION_TOLERANCE = 1e-6
 

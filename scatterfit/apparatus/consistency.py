@@ -1,5 +1,6 @@
 """What must hold between the values of a bench: each may be possible, together they may not."""
 
+from scatterfit.apparatus.correlations import check_correlations
 from scatterfit.apparatus.keys import HUMIDITY
 from scatterfit.apparatus.saturation import check_saturation
 from scatterfit.apparatus.values import fail, suggestion
@@ -23,8 +24,8 @@ def check_bench(bench, mapping, where):
     ChamberFileError
         If it has no optical channel, two of them in one column, a channel of no known beam, a beam
         of no channel, a cone that takes in the direct beam, no or two statements of the vapour, of
-        the liquid's index or of the growth state, vapour above saturation, or a reference radius
-        that is not considered.
+        the liquid's index or of the growth state, vapour above saturation, a reference radius
+        that is not considered, or correlations that cannot be.
     """
     _check_channels(bench, where)
     _check_beams(bench, where)
@@ -33,6 +34,7 @@ def check_bench(bench, mapping, where):
     _check_vapour_stated_once(mapping["vapour"], where)
     _check_growth_state(bench, mapping, where)
     _check_radii(bench, mapping, where)
+    check_correlations(bench, where)
     check_saturation(bench, bench.chamber.pressure, where)
 
 

@@ -51,7 +51,7 @@ class Key:
     """Suffix of ``units.UNITS``; empty for a pure number or a text."""
     kind: str = "number"
     """One of ``number``, ``text``, ``column``, ``range``, ``polarization``, ``index``,
-    ``carrier``."""
+    ``carrier``, ``key paths``, ``matrix``."""
     bounds: Bounds = Bounds()
     """Values allowed, in the key's unit."""
     required: bool = False
@@ -112,6 +112,7 @@ TABLES = (
     Table("growth", False, "undisturbed gas during growth, where no pressure is measured"),
     Table("pulse", False, "nucleation hold, where no pressure is measured"),
     Table("analysis", False, "choices of the analysis"),
+    Table("correlations", False, "how the errors of values stated with a sigma hang together"),
 )
 """Every table, in the order in which light and gas are described."""
 
@@ -263,6 +264,15 @@ KEYS = (
         doc="radius at which growth rates are quoted"),
     Key("analysis", "max_radius_um", "max_radius", "um", bounds=Bounds(0.1, 100), default=10.0,
         example="10.0", doc="largest radius considered"),
+    Key("analysis", "growth_scale", "growth_scale", bounds=Bounds(0.2, 5), default=1.0,
+        example="1.0", doc="measured growth rate over the computed one, as other pulses have it; "
+                           "without its sigma that of the properties holds"),
+    Key("correlations", "of", "of", kind="key paths", required=True,
+        example='["chamber.temperature_K", "vapour.mole_fraction"]',
+        doc="key paths, detectors as detector.COLUMN.KEY; one without a sigma is passed over"),
+    Key("correlations", "matrix", "matrix", kind="matrix", required=True,
+        example="[[1.0, 0.9], [0.9, 1.0]]",
+        doc="correlation coefficients of their errors, in the same order"),
 )
 """Every key, table by table."""
 

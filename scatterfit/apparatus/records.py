@@ -176,6 +176,18 @@ class Analysis:
     """Where growth rates are quoted [m]."""
     max_radius: float = 10.0e-6
     """Largest radius considered [m]."""
+    growth_scale: float = 1.0
+    """Measured growth rate over the computed one, as other pulses have it [-]."""
+
+
+@dataclass(frozen=True)
+class Correlations:
+    """How the errors of stated values hang together."""
+
+    of: tuple[str, ...]
+    """Key paths."""
+    matrix: tuple[tuple[float, ...], ...]
+    """Correlation coefficients in the same order, symmetric, ones on the diagonal [-]."""
 
 
 @dataclass(frozen=True)
@@ -197,6 +209,7 @@ class Apparatus:
     growth: GasState | None = None
     pulse: Pulse | None = None
     analysis: Analysis = field(default_factory=Analysis)
+    correlations: Correlations | None = None
     sigmas: Mapping[str, float] = field(default_factory=dict)
     """Key path as the contract spells it, without ``_sigma``, to standard uncertainty in SI.
 

@@ -299,6 +299,18 @@ def _read_carrier(_key, value, where, path):
     return value
 
 
+def _read_paths(_key, value, where, path):
+    if not isinstance(value, list) or not all(isinstance(part, str) for part in value):
+        fail(where, path, value, 'must be key paths, such as ["chamber.temperature_K"]')
+    return tuple(value)
+
+
+def _read_matrix(_key, value, where, path):
+    if not isinstance(value, list) or not all(isinstance(row, list) for row in value):
+        fail(where, path, value, "must be rows of numbers, such as [[1.0, 0.9], [0.9, 1.0]]")
+    return tuple(tuple(_number(part, where, path) for part in row) for row in value)
+
+
 _READERS = {
     "number": _read_number,
     "text": _read_text,
@@ -307,4 +319,6 @@ _READERS = {
     "polarization": _read_polarization,
     "index": _read_index,
     "carrier": _read_carrier,
+    "key paths": _read_paths,
+    "matrix": _read_matrix,
 }

@@ -9,6 +9,8 @@ _TEMPERATURE = 0.3
 _FRACTION = 0.01
 _SATURATION = 0.005
 _CLOSURE = 0.015
+# How far pulses of one bench stray from their common growth scale (common practice, no source).
+_BETWEEN_PULSES = 5e-3
 
 
 def growth_scale_sigma(setup, free=()):
@@ -24,7 +26,8 @@ def growth_scale_sigma(setup, free=()):
     setup : GrowthSetup
         Of the pulse.
     free : sequence of str
-        ``"temperature"`` and ``"vapour"`` where the fit varies them itself: not counted here.
+        ``"temperature"``, ``"vapour"`` and ``"diffusivity"`` where they are varied themselves: not
+        counted here.
 
     Returns
     -------
@@ -47,12 +50,35 @@ def growth_scale_sigma(setup, free=()):
     parts.append(_rate(setup, radius, path.reference_temperature,
                        setup.vapour_fraction * (1.0 + wet)) - base)
     diffusion = matter.diffusivity(setup.substance, setup.gas).relative_uncertainty
+    diffusion = 0.0 if "diffusivity" in free else diffusion
     conduction = setup.gas.conductivity.relative_uncertainty
     relative = np.hypot(*(part / (abs(base) + floor) for part in parts))
     share = 0.5
     return float(np.clip(np.sqrt(
         relative**2 + (share * diffusion) ** 2 + (share * conduction) ** 2 + _SATURATION**2
     ), 0.02, 0.5))
+
+
+def growth_scale_prior(setup, free=()):
+    """Return where ln of the growth scale is expected and how surely.
+
+    Parameters
+    ----------
+    setup : GrowthSetup
+        Of the pulse.
+    free : sequence of str
+        As in :func:`growth_scale_sigma`.
+
+    Returns
+    -------
+    mean, sigma : float
+        From the chamber file where it states both, else none and that of the properties [-].
+    """
+    stated = setup.apparatus.analysis.growth_scale
+    sigma = setup.apparatus.sigmas.get("analysis.growth_scale")
+    if sigma is None:
+        return float(np.log(stated)), growth_scale_sigma(setup, free)
+    return float(np.log(stated)), float(np.hypot(sigma / stated, _BETWEEN_PULSES))
 
 
 def _vapour_sigma(sigmas, vapour):

@@ -73,7 +73,8 @@ def posterior(problem, best, inputs):
         The solution.
     inputs : dict
         ``"names"``: further cloud parameters; ``"more"``: further columns as in
-        :func:`evaluate`; ``"priors"``: standard deviations of both, and replacements.
+        :func:`evaluate`; ``"priors"``: standard deviations of both, and replacements;
+        ``"correlations"``, optional: names of priors, and the correlations of their errors.
 
     Returns
     -------
@@ -92,6 +93,7 @@ def posterior(problem, best, inputs):
         replace(problem, names=names, priors=priors), best.cloud, more=inputs["more"],
         linear=linear,
     )
+    wide = _correlated(wide, priors, inputs.get("correlations"))
     all_names = (*names, *(name for name, _ in inputs["more"]))
     data_rows = wide.residual.size - len(priors)
     jacobian = wide.jacobian
@@ -108,6 +110,23 @@ def posterior(problem, best, inputs):
     }
     handles = _handles(wide, all_names, inflation)
     return Posterior(all_names, step, noise, by_prior, inflation, handles, priors, wide.state)
+
+
+def _correlated(wide, priors, correlations):
+    """Return an evaluation whose priors' rows take account of correlated errors.
+
+    The rows are whitened by Cholesky's factor: each then stands for what its input adds to those
+    before it, which is how the budget shares the variance among them.
+    """
+    if correlations is None or len(correlations[0]) == 0:
+        return wide
+    names, matrix = correlations
+    first = wide.residual.size - len(priors)
+    rows = [first + list(priors).index(name) for name in names]
+    whiten = np.linalg.inv(np.linalg.cholesky(np.asarray(matrix)))
+    residual, jacobian = wide.residual.copy(), wide.jacobian.copy()
+    residual[rows], jacobian[rows] = whiten @ residual[rows], whiten @ jacobian[rows]
+    return replace(wide, residual=residual, jacobian=jacobian)
 
 
 def _inverse(jacobian):
@@ -151,6 +170,27 @@ def _inflation(problem, best):
     """Return the largest of the channels' inflations, 1 where they are white."""
     most = max(channel_inflation(problem, best))
     return most if most > _WHITE else 1.0
+
+
+def split_number(wide, names, inflation):
+    """Return how well each handle on its own fixes the number, the rest of the fit shared.
+
+    Parameters
+    ----------
+    wide : Evaluation
+        With its Jacobian by at least the names.
+    names : sequence of str
+        Parameters that are free.
+    inflation : float
+        Of the noise [-].
+
+    Returns
+    -------
+    sigmas : dict of str to float
+        Handle to the standard uncertainty of ln of the number, where it is determined [-].
+    """
+    narrow = replace(wide, jacobian=wide.jacobian[:, : len(names)])
+    return {key: sigma for key, (_, sigma) in _handles(narrow, names, inflation).items()}
 
 
 def _handles(wide, names, inflation):

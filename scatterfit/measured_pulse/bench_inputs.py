@@ -2,12 +2,15 @@
 
 import numpy as np
 
+from scatterfit.apparatus.correlations import correlation_block
+from scatterfit.apparatus.keys import HUMIDITY
 from scatterfit.forward.model import channel_signals
 from scatterfit.inversion.prior import depletion_sigma
 from scatterfit.measured_pulse.prepare import optical_columns
 
 _CREEP = 0.02
 """Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
+_INDEPENDENT = 2e-3
 
 
 def bench_inputs(prepared, problem, best, index_shift=2e-4):
@@ -36,7 +39,27 @@ def bench_inputs(prepared, problem, best, index_shift=2e-4):
     priors["creep"] = (0.0, _CREEP)
     # The fit's own prior holds the path's share as well, which has a column of its own here.
     priors["depletion"] = (0.0, depletion_sigma(prepared.setup))
-    return {"names": ("creep",), "more": columns, "priors": priors}
+    return {"names": ("creep",), "more": columns, "priors": priors,
+            "correlations": _correlations(prepared, {**problem.priors, **priors})}
+
+
+def _correlations(prepared, priors):
+    """Return the names of priors whose errors are stated to be correlated, and how."""
+    apparatus = prepared.setup.apparatus
+    if apparatus.correlations is None:
+        return None
+    known = {f"detector.{d.column}.angle_deg": f"angle:{i}"
+             for i, d in enumerate(apparatus.detectors)}
+    state = "growth" if apparatus.growth is not None else "chamber"
+    known |= {f"{state}.temperature_K": "temperature", "analysis.growth_scale": "scale",
+              "vapour.mass_accommodation": "accommodation"}
+    known |= {f"vapour.{name}": "vapour" for name in HUMIDITY}
+    paths = [path for path in apparatus.correlations.of
+             if path in apparatus.sigmas and known.get(path, path) in priors]
+    matrix = np.array(correlation_block(apparatus, paths)).reshape(len(paths), len(paths))
+    # Rounded coefficients may not be those of any errors: a trace of independence.
+    matrix = (1.0 - _INDEPENDENT) * matrix + _INDEPENDENT * np.eye(len(paths))
+    return [known.get(path, path) for path in paths], matrix
 
 
 def vapour_relative_sigma(apparatus):

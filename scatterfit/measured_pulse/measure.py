@@ -18,6 +18,7 @@ from scatterfit.inversion.verdict import (
 )
 from scatterfit.measured_pulse import conditions
 from scatterfit.measured_pulse import quantities as q
+from scatterfit.measured_pulse.beforehand import dry, flat_columns
 from scatterfit.measured_pulse.bench_inputs import bench_inputs
 from scatterfit.measured_pulse.budget import budget_lines, learnt_inputs, rate_budget
 from scatterfit.measured_pulse.extrema import extrema_findings, matched_extrema
@@ -80,7 +81,7 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
         If too few samples can be used.
     """
     provenance = dict(provenance or {})
-    flat = _flat_columns(apparatus, columns)
+    flat = flat_columns(apparatus, columns)
     if flat:
         return MeasuredPulse(trace, "rejected", flat, provenance=provenance)
     prepared = prepare(apparatus, time, columns, store, exclude)
@@ -103,7 +104,7 @@ def measure(  # noqa: PLR0913  (the one door to the stages: each argument is a s
         if not empty(fit):
             return _puzzle(prepared, fit, gas, warnings)
         return without_cloud(prepared, fit, gas, warnings)
-    prepared, fit = _settle_angles(prepared, fit, base, offsets)
+    prepared, fit = settle_angles(prepared, fit, base, offsets)
     return with_cloud(prepared, fit, gas, warnings)
 
 
@@ -134,39 +135,27 @@ def _indices(apparatus, indices):
     return {beam.name: float(n) for beam, n in zip(apparatus.beams, indices, strict=True)}
 
 
-def _flat_columns(apparatus, columns):
-    """Return a reason for each optical column that never changes."""
-    found = []
-    for name, _, _ in optical_columns(apparatus):
-        values = np.asarray(columns[name], dtype=float)
-        values = values[np.isfinite(values)]
-        if values.size and np.ptp(values) == 0.0:
-            found.append(Reason("flat-channel", (
-                f"column {name} is {values[0]:g} V throughout: is the detector connected and the "
-                "range right?"
-            )))
-    return tuple(found)
-
-
-def dry(setup):
-    """Return whether no droplet could grow at any time.
+def settle_angles(prepared, fit, base, offsets):
+    """Return the pulse and its fit with tables made at the angles that the fit found.
 
     Parameters
     ----------
-    setup : GrowthSetup
-        Of the pulse.
+    prepared : Prepared
+        The pulse.
+    fit : Fit
+        Its fit.
+    base : sequence of float
+        Angle shifts that the tables already hold [rad].
+    offsets : sequence of float
+        Where the angles are stated to be, less the bench's own statement [rad].
 
     Returns
     -------
-    dry : bool
-        Neither the hold nor the growth stage is supersaturated.
+    prepared : Prepared
+        With other tables.
+    fit : Fit
+        Continued with them.
     """
-    held = setup.hold.saturation_ratio if setup.hold is not None else 0.0
-    return max(setup.growth_saturation_ratio, held) <= 1.0
-
-
-def _settle_angles(prepared, fit, base, offsets):
-    """Return the pulse and its fit with tables made at the angles that the fit found."""
     for _ in range(3):
         shifts = fit.best.cloud.angles
         if not any(abs(shift) > _ANGLE_SETTLED for shift in shifts):
@@ -347,9 +336,9 @@ def _rates(setup, fit, after, reference):
 def _findings(prepared, fit, scale, turns, left):
     """Return the reasons of a pulse with a cloud."""
     setup = prepared.setup
-    prior = fit.problem.priors["scale"][1]
+    expected, prior = fit.problem.priors["scale"]
     found = residual_findings(fit) + sample_findings(fit)
-    found += growth_findings(fit, (scale.value, prior), setup)
+    found += growth_findings(fit, (scale.value / np.exp(expected), prior), setup)
     end = float(fit.problem.bins.time[-1]) - fit.best.cloud.delay
     found += heat_findings(setup, end, fit.best.state.growth)
     if left:

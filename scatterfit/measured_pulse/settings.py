@@ -7,7 +7,11 @@ from scatterfit.forward.growth_model import Cloud, grow
 from scatterfit.inversion.data import bin_channels, bin_edges
 from scatterfit.inversion.fit import FitOptions
 from scatterfit.inversion.onset import find_onsets
-from scatterfit.inversion.prior import depletion_sigma, growth_scale_sigma
+from scatterfit.inversion.prior import (
+    depletion_sigma,
+    growth_scale_prior,
+    growth_scale_sigma,
+)
 from scatterfit.measured_pulse.bench_inputs import (
     temperature_relative_sigma,
     vapour_relative_sigma,
@@ -83,7 +87,7 @@ def _free(prepared, angle_base, angle_offsets):
     apparatus = setup.apparatus
     names = ["number", "scale", "delay", "variance", "accommodation", "bend", "depletion"]
     priors = {
-        "accommodation": (0.0, _STICKING), "bend": (0.0, _BEND),
+        "accommodation": (0.0, _sticking_sigma(apparatus)), "bend": (0.0, _BEND),
         "depletion": (0.0, float(np.hypot(depletion_sigma(setup), _path_sigma(apparatus)))),
     }
     limits = {"number": (np.log(_FEWEST), np.log(_most_droplets(setup)))}
@@ -111,12 +115,18 @@ def _free(prepared, angle_base, angle_offsets):
     if stretch > _LEAST_STRETCH:
         names.append("stretch")
         priors["stretch"] = (0.0, stretch)
-    priors["scale"] = (0.0, growth_scale_sigma(setup, free))
+    priors["scale"] = growth_scale_prior(setup, free)
     if setup.threshold is not None:
         names.append("threshold")
         known = apparatus.seed.diameter is not None
         priors["threshold"] = (0.0, _THRESHOLD if known else _UNKNOWN_THRESHOLD)
     return names, priors, limits
+
+
+def _sticking_sigma(apparatus):
+    """Return how well the mass accommodation coefficient is known, relative to itself [-]."""
+    stated = apparatus.sigmas.get("vapour.mass_accommodation")
+    return stated / apparatus.vapour.mass_accommodation if stated else _STICKING
 
 
 def _most_droplets(setup):

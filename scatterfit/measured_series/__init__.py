@@ -1,0 +1,1 @@
+"""What many pulses of one bench say about what they share."""

@@ -1,0 +1,243 @@
+"""From many pulses of one bench to the bench: looks, joint estimate, and what it rests on."""
+
+from dataclasses import replace
+from functools import partial
+
+import numpy as np
+
+from scatterfit.errors import InvalidInputError
+from scatterfit.measured_series.choice import before_of, sigmas_of, unknowns_of
+from scatterfit.measured_series.drift import gain_drift
+from scatterfit.measured_series.informed import informed_by, not_separated
+from scatterfit.measured_series.joint import joint_estimate
+from scatterfit.measured_series.look import first_look, second_look, starting_gain, with_gains
+from scatterfit.measured_series.record import Calibration, Row, Shared, in_unit, unit_of
+from scatterfit.measured_series.unknowns import kind_of
+
+_OUTLYING = 4.0
+_POOR = 0.5
+_UNCLEAR = {"not-described", "ambiguous-lobe"}
+
+
+def calibrate(apparatus, pulses, choice, settings):
+    """Return what the pulses of a series say about what they share.
+
+    Parameters
+    ----------
+    apparatus : Apparatus
+        The bench as stated.
+    pulses : sequence of SeriesPulse
+        Pulses, in order.
+    choice : Choice
+        What is shared.
+    settings : dict
+        As for :func:`joint_estimate`, with ``"places"``: name to place on the axis of the drift,
+        and ``"axis"``: what it counts.
+
+    Returns
+    -------
+    calibration : Calibration
+        Values, covariance, drift, and a row for each pulse.
+    joint : Joint
+        The estimate behind it.
+
+    Raises
+    ------
+    InvalidInputError
+        If no pulse can be used, or none says anything of what is to be learnt.
+    """
+    free = sigmas_of(apparatus, choice)
+    looks = list(settings["map"](partial(first_look, free=free, store=settings["store"]), pulses))
+    warms = [look.warm for look in looks if look.warm is not None]
+    if not warms:
+        raise InvalidInputError(_none_left(looks))
+    gains, notes = _gains(apparatus, choice, warms)
+    unknowns = unknowns_of(apparatus, choice, warms, gains)
+    if all(u.key not in choice.keys for u in unknowns):
+        message = f"nothing can be learnt from these pulses: {'; '.join(notes)}"
+        raise InvalidInputError(message)
+    start = _start(unknowns, warms, gains)
+    warms = [_at_start(w, unknowns, start) for w in warms]
+    before = before_of(apparatus, unknowns)
+    joint = joint_estimate(warms, unknowns, start, before, settings)
+    looks, joint = _once_more((pulses, looks, warms), (unknowns, before, free), joint, settings)
+    return _calibration(joint, unknowns, (looks, choice, notes), settings), joint
+
+
+def _once_more(series, known, joint, settings):
+    """Return looks and joint estimate with pulses that the joint bench makes clear."""
+    pulses, looks, warms = series
+    unknowns, before, free = known
+    again = [pulse for pulse, look in zip(pulses, looks, strict=True) if look.code in _UNCLEAR]
+    if not again:
+        return looks, joint
+    sigma = np.sqrt(np.diag(joint.covariance))
+    ask = partial(second_look, free=free, store=settings["store"],
+                  known=tuple(zip(unknowns, joint.x, sigma, strict=True)))
+    found = {look.name: look for look in settings["map"](ask, again) if look.warm is not None}
+    if not found:
+        return looks, joint
+    clouds = {answer.name: answer.cloud for answer in joint.answers}
+    warms = [replace(warm, cloud=clouds[warm.name]) for warm in warms]
+    warms += [_at_start(look.warm, unknowns, joint.x) for look in found.values()]
+    order = {pulse.name: i for i, pulse in enumerate(pulses)}
+    warms.sort(key=lambda warm: order[warm.name])
+    looks = [found.get(look.name, look) for look in looks]
+    return looks, joint_estimate(warms, unknowns, joint.x, before, settings)
+
+
+def _none_left(looks):
+    """Return the message where no pulse can be used."""
+    if not looks:
+        return "no pulse to learn from"
+    reasons = [f"{look.name}: {look.text}" for look in looks[:3]]
+    more = f" and {len(looks) - 3} more" if len(looks) > 3 else ""
+    return f"none of {len(looks)} pulses can be used: {'; '.join(reasons)}{more}"
+
+
+def _gains(apparatus, choice, warms):
+    """Return where gains start, by key, and notes on those that nothing fixes."""
+    gains, notes = {}, []
+    for detector in apparatus.detectors:
+        key = f"detector.{detector.column}.gain_V_m"
+        if key not in choice.keys:
+            continue
+        gain = starting_gain(warms, detector.column)
+        if gain is None and detector.gain is None:
+            notes.append(
+                f"{key}: no pulse fixes its own number; a transmission with its path, or pulses "
+                "thick enough to deplete the vapour, would give it")
+        elif detector.gain is None:
+            gains[key] = gain
+        else:
+            gains[key] = detector.gain
+    return gains, notes
+
+
+def _start(unknowns, warms, gains):
+    """Return where the joint estimate starts: what most pulses would have on their own."""
+    start = []
+    for unknown in unknowns:
+        own = [w.own[unknown.key] for w in warms if unknown.key in w.own]
+        middle = float(np.median(own)) if own else 0.0
+        if unknown.key in gains:
+            column = unknown.key.split(".")[1]
+            found = starting_gain(warms, column)
+            middle = 0.0 if found is None else float(np.log(found / unknown.value))
+            if unknown.stated:
+                middle = float(np.clip(middle, -2.0 * unknown.sigma, 2.0 * unknown.sigma))
+        start.append(middle)
+    return np.array(start)
+
+
+def _at_start(warm, unknowns, start):
+    """Return a pulse whose number is that of the gains to start from."""
+    there = {u.key.split(".")[1]: u.at(x) for u, x in zip(unknowns, start, strict=True)
+             if u.key.endswith(".gain_V_m")}
+    stated = {u.key.split(".")[1]: u.value for u in unknowns if u.key.endswith(".gain_V_m")}
+    bench = warm.apparatus
+    warm = with_gains(warm, there)
+    # The bench itself stays as stated: coordinates count from there.
+    keep = tuple(
+        replace(d, gain=_own_gain(bench, d.column, stated.get(d.column)))
+        for d in warm.apparatus.detectors
+    )
+    return replace(warm, apparatus=replace(warm.apparatus, detectors=keep))
+
+
+def _own_gain(bench, column, stated):
+    """Return a pulse's own gain, or what the series starts from."""
+    own = next(d.gain for d in bench.detectors if d.column == column)
+    return stated if own is None else own
+
+
+def _calibration(joint, unknowns, inputs, settings):
+    """Return the record of a joint estimate."""
+    looks, choice, notes = inputs
+    sigma = np.sqrt(np.diag(joint.covariance))
+    before = np.sqrt(np.diag(joint.before))
+    informed = informed_by(joint, unknowns)
+    shared = []
+    for k, unknown in enumerate(unknowns):
+        x = float(joint.x[k])
+        shared.append(Shared(
+            unknown.key, unknown.label, unit_of(unknown.key),
+            in_unit(unknown.key, unknown.value),
+            in_unit(unknown.key, unknown.sigma_at(0.0, before[k])), unknown.stated,
+            in_unit(unknown.key, _possible(unknown, x)),
+            in_unit(unknown.key, unknown.sigma_at(x, sigma[k])),
+            x / float(before[k]), float(sigma[k] / before[k]), unknown.written, informed[k],
+        ))
+    written = [k for k, u in enumerate(unknowns) if u.written]
+    sign = np.array([-1.0 if unknowns[k].kind.way == "inverse" else 1.0 for k in written])
+    scaled = sign * sigma[written]
+    correlation = joint.covariance[np.ix_(written, written)] / np.outer(scaled, scaled)
+    np.fill_diagonal(correlation, 1.0)
+    return Calibration(
+        tuple(shared), tuple(unknowns[k].key for k in written), correlation,
+        not_separated(joint, unknowns), _rows(joint, unknowns, looks),
+        gain_drift(joint, unknowns, settings["places"]), choice.held, joint.scatter,
+        joint.rounds, joint.converged, (*notes, *_notes(joint, unknowns)), settings["axis"],
+    )
+
+
+def _possible(unknown, x):
+    """Return the value, an accommodation coefficient at most one."""
+    value = unknown.at(x)
+    return min(value, 1.0) if unknown.kind.way == "inverse" else value
+
+
+def _notes(joint, unknowns):
+    """Return what a user should know of the estimate as a whole."""
+    notes = []
+    if not joint.converged:
+        notes.append("the joint estimate had not settled when it was stopped: give it again with "
+                     "the chamber file it wrote, or hold what is least sure")
+    if len(joint.answers) == 1:
+        notes.append("one pulse alone: nothing tells the bench's errors from the pulse's own")
+    if joint.scatter > 1.5:
+        notes.append(
+            f"pulses scatter {joint.scatter:.1f} times as much about the joint bench as their "
+            "noise would make them; sigmas are widened by that factor. What is held, or is not in "
+            "the model, varies from pulse to pulse")
+    for k, unknown in enumerate(unknowns):
+        if kind_of(unknown.key).way == "inverse" and unknown.at(joint.x[k]) > 1.0:
+            notes.append(f"{unknown.key}: the pulses would have it above one; one is written")
+    return notes
+
+
+def _rows(joint, unknowns, looks):
+    """Return a row for each pulse, in the order of the series."""
+    place = {found.name: i for i, found in enumerate(joint.answers)}
+    rows = []
+    for look in looks:
+        if look.warm is None:
+            rows.append(Row(look.name, False, ((look.code, look.text),)))
+            continue
+        i = place[look.name]
+        rows.append(_row(joint, unknowns, i))
+    return tuple(rows)
+
+
+def _row(joint, unknowns, i):
+    """Return the row of a pulse that took part."""
+    found, excess = joint.answers[i], float(joint.excess[i])
+    at = found.names.index("number")
+    slope = found.follow[at].copy()
+    for k, unknown in enumerate(unknowns):
+        if unknown.key.endswith("temperature_K"):
+            # The same droplets in a warmer gas at the same pressure are fewer per volume.
+            slope[k] -= 1.0 / (unknown.value + joint.x[k])
+    own = found.number_sigma
+    shared = float(slope @ joint.covariance @ slope)
+    value = float(np.exp(found.cloud.number - found.cloud.temperature))
+    reasons = ()
+    if excess > _OUTLYING:
+        reasons = (("disagrees", f"wants another bench by {excess:.1f} sigma; it counts "
+                                 f"{joint.weights[i]:.2f} of a pulse"),)
+    total = float(np.hypot(own, np.sqrt(shared)))
+    return Row(
+        found.name, True, reasons,
+        (value, value * total) if total < _POOR else None, value * own if total < _POOR else None,
+        found.final_radius, found.chi2_reduced, excess, float(joint.weights[i]), found.left,
+    )
