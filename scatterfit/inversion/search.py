@@ -1,29 +1,24 @@
 """The right Mie lobe without a start value: many clouds grown at once, compared with the trace."""
 
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 
-from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.cloud import CloudParameters, solve_cloud
 from scatterfit.droplet_growth.gas_path import GasPath
 from scatterfit.droplet_growth.setup import with_threshold
 from scatterfit.forward.growth_model import Cloud, grow, no_shifts, per_mole
 from scatterfit.forward.light import widened
+from scatterfit.inversion.search_grid import number_levels, scale_count
 
 _NODES = 70
 # Templates are compared to a few percent: half the memory is more than half the time saved.
 _COARSE = np.float32
 _TOLERANCE = 5e-4
 _STICKING = (0.0, -1.2)
-_DEPLETION = (0.003, 0.12, 0.25, 0.42, 0.62, 0.9, 1.4, 2.2, 3.4, 5.0, 7.0, 10.0, 14.0, 20.0, 28.0)
 _VARIANCE = 2e-5
 _RATIO = 4.0
 _SPREADS = 5
-_PHASE = 0.35
-_DENSE_PHASE = 0.7
-_ENOUGH = 0.6
 _GRID_ERROR = 0.05
 _FAINT = 0.01
 _CERTAIN = 4.0
@@ -72,10 +67,9 @@ def search(problem, delays, widest, count=6, *, dense=False):
     axis = _axis(problem)
     if axis == "vapour":
         widest = min(_VAPOUR_SIGMAS * problem.priors["vapour"][1], 0.3)
-    scales = np.linspace(-widest, widest, _scale_count(problem, widest))
+    scales = np.linspace(-widest, widest, scale_count(setup.apparatus, widest))
     lone = grow(setup, Cloud(number=0.0))
-    free = max(float(lone.radius[0].max()), 1e-7)
-    levels = _levels(setup, free, _between(setup, free) if dense else np.array(_DEPLETION))
+    levels = number_levels(setup, max(float(lone.radius[0].max()), 1e-7), dense=dense)
     sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
     tables = np.stack([widened(problem.model.light, _VARIANCE * _RATIO**k)
                        for k in range(_SPREADS)], axis=1)
@@ -218,43 +212,6 @@ def _thinned(path, birth, stretch=1.0):
         np.interp(nodes, path.time, path.temperature),
         path.reference_pressure, path.reference_temperature,
     )
-
-
-def _scale_count(problem, widest):
-    """Return how many growth scales resolve the lobes at the largest radius."""
-    phase = _lobe_phase(problem.model.setup.apparatus, 4e-6)
-    return int(np.clip(np.ceil(2.0 * widest * 0.5 * phase / _PHASE), 25, 90)) | 1
-
-
-def _lobe_phase(bench, radius):
-    """Return by how much lobes turn from no size to a radius, in the finest channel [rad]."""
-    finest = [np.sin(0.5 * detector.angle) / bench.beams[bench.beam_number(detector)].wavelength
-              for detector in bench.detectors] or [0.35 / bench.beam.wavelength]
-    return 4.0 * np.pi * radius * max(finest)
-
-
-def _between(setup, free):
-    """Return the depletions with so many between them that no lobe of used-up clouds is missed."""
-    found = [_DEPLETION[0]]
-    for low, high in pairwise(_DEPLETION):
-        radius = free * min(1.0 / high, 1.0) ** (1.0 / 3.0)
-        turn = _lobe_phase(setup.apparatus, radius) * np.log(high / low) / 3.0
-        # Clouds that take little vapour keep their radius.
-        turn *= high / (high + _ENOUGH)
-        found += list(np.geomspace(low, high, int(np.ceil(turn / _DENSE_PHASE)) + 1)[1:])
-    return np.array(found)
-
-
-def _levels(setup, free, depletion):
-    """Return ln number densities from no depletion to far more droplets than vapour for 1 um."""
-    path = setup.path
-    saturated = float(setup.substance.saturation_pressure(path.reference_temperature))
-    excess = max(setup.vapour_fraction - saturated / path.reference_pressure,
-                 0.1 * setup.vapour_fraction)
-    moles = path.reference_pressure / (GAS_CONSTANT * path.reference_temperature)
-    # As many droplets of the radius that free growth would reach as use up the share.
-    volume = 4.0 / 3.0 * np.pi * free**3 / setup.properties.molar_volume
-    return np.log(depletion * _ENOUGH * excess * moles / volume)
 
 
 def _spread_by_birth(lone, clock):
