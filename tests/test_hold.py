@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from scatterfit.droplet_growth.births import births_from_rate
+from scatterfit.droplet_growth.pressure import smooth
 from scatterfit.droplet_growth.setup import growth_setup
 from scatterfit.errors import TraceError
 from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile
@@ -61,3 +62,13 @@ def test_a_pressure_that_cannot_be_is_one_line(make_bench, factor, chamber, part
         prepare_setup(bench, time, {"pressure_kPa": pressure})
     assert "\n" not in str(error.value)
     assert all(part in str(error.value) for part in ["column pressure_kPa", *parts])
+
+
+def test_a_last_sample_cut_short_is_no_expansion():
+    """A file that ends in the middle of a number: 71.79 kPa becomes 7."""
+    time = np.linspace(-5e-3, 0.03, 400)
+    pressure = pressure_profile(time, (9e4, 5.5e4, 7.18e4), 1e-3)
+    for place in (-1, 0):
+        cut = pressure.copy()
+        cut[place] = 7e3
+        assert smooth(cut)[0] == pytest.approx(smooth(pressure)[0], rel=1e-3)

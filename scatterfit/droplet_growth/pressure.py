@@ -70,7 +70,9 @@ def _without_spikes(values):
     if good.size < 2 * _BESIDE + 1:
         return values
     kept = values[good]
-    padded = np.pad(kept, _BESIDE, mode="edge")
+    # Mirrored, the first and the last sample stand alone as well: a file cut short ends in half a
+    # number.
+    padded = np.pad(kept, _BESIDE, mode="reflect")
     middle = np.median(
         np.lib.stride_tricks.sliding_window_view(padded, 2 * _BESIDE + 1), axis=1
     )

@@ -4,6 +4,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
+from scatterfit.errors import TraceError
 from scatterfit.forward.cloud_state import hermite
 from scatterfit.inversion.data import (
     ChannelData,
@@ -83,6 +84,11 @@ def fit_pulse(model, time, channels, options):
     -------
     fit : Fit
         Best cloud, rivals and residuals.
+
+    Raises
+    ------
+    TraceError
+        If no droplets would be born and seen within the record.
     """
     channels = tuple(channels)
     alone = all(data.kind == "transmission" for data in channels)
@@ -98,7 +104,12 @@ def _one_look(model, time, channels, options, slow):
     problem = Problem(coarse_model(model), coarse, options.names, options.priors,
                       options.limits, tuple(np.empty((0, coarse.time.size)) for _ in channels))
     looking = (problem, options.delays, options.widest, CANDIDATES)
-    found, disturbances = explore(problem, search(*looking), lambda: search(*looking, dense=True))
+    candidates = search(*looking)
+    if not candidates:
+        message = ("no droplets would be born and seen within the record: look at the pressure, "
+                   "its unit and single samples that are far off")
+        raise TraceError(message)
+    found, disturbances = explore(problem, candidates, lambda: search(*looking, dense=True))
     channels, found = _without_hops(problem, found, time, channels, (options.onset, slow))
     problem = replace(problem, model=model)
     fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
