@@ -13,6 +13,7 @@ from scatterfit.matter import substance as substance_of
 from scatterfit.units import to_si
 
 _WATER = "water"
+_MANY_VALUES = 20
 
 
 def rates_output(path, substance, choices, around, how, *, compare, figure, as_json, methods):
@@ -65,6 +66,9 @@ def rates_output(path, substance, choices, around, how, *, compare, figure, as_j
     if found.background and bench is None and around["carrier"] is None:
         print("carrier gas not stated: nitrogen assumed for losses (--carrier NAME)",
               file=sys.stderr)
+    if how["series"] and not found.series:
+        print("no series of holds: no pulses of one temperature and supersaturation differ in "
+              "nucleation_effective_ms", file=sys.stderr)
     if compare is not None:
         other = analyse_rates(_read(compare)[0], settings, **how)
         pairs = compare_nights(found.isotherms, other.isotherms, settings)
@@ -153,8 +157,14 @@ def _check_by(table, column):
     if column is not None and column not in table.texts:
         from scatterfit.apparatus.values import suggestion
 
-        message = f"--by {column}: no such column; {suggestion(column, table.texts)}."
+        message = f"--by {column}: no such column; {suggestion(column, table.texts)}"
         raise typer.BadParameter(message)
+    if column is not None:
+        values = len({table.texts[column][row] for row in range(len(table.names))})
+        if values > max(_MANY_VALUES, len(table.names) // 2):
+            message = (f"--by {column}: {values} different values in {len(table.names)} pulses; "
+                       "choose a column that many pulses share")
+            raise typer.BadParameter(message)
 
 
 def _vapour(table, bench, name):

@@ -106,6 +106,9 @@ def test_rates_as_text(capsys, water):
     assert "2001: 259.86  45     33.3 ± 2.1" in out
     assert "[outliers] row 71" in out
     assert "Kashchiev 1982" in out
+    words = " ".join(out.split())
+    assert "Uncertainties: scatter alone; what all pulses share" in words
+    assert "saturation pressure: Murphy and Koop 2005" in words
     assert err.startswith("vapour not stated: water assumed")
 
 
@@ -262,6 +265,24 @@ def test_a_wrong_option_is_one_line_and_exit_2(capsys, water, words, expected):
     assert (code, out) == (2, "")
     assert err.count("\n") == 1
     assert expected in err
+
+
+def test_a_column_that_no_two_pulses_share_is_refused(capsys, tmp_path):
+    cells = {T: [240.0] * 30, S: np.linspace(11, 13, 30), J: np.geomspace(1e7, 1e9, 30)}
+    path = write(tmp_path / "t.csv", cells)
+    code, out, err = run(capsys, "rates", path, "--by", S)
+    assert (code, out, err.count("\n")) == (2, "", 1)
+    assert "30 different values in 30 pulses" in err
+
+
+def test_what_is_empty_and_what_is_not_found_is_said(capsys, tmp_path):
+    cells = {T: [240.0] * 4, S: [11.0, 11.5, 12.0, 12.5], J: [1e7, 4e7, 1.6e8, 6e8],
+             "gas": ["", "", "argon", "argon"], "nucleation_effective_ms": [1.0] * 4}
+    path = write(tmp_path / "t.csv", cells)
+    _, out, err = run(capsys, "rates", path, "--by", "gas", "--hold-series")
+    assert "(empty): 240.00" in out
+    assert "argon: 240.00" in out
+    assert "no series of holds" in err
 
 
 HEAD = f"{T},{S},{J}"

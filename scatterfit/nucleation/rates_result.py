@@ -46,6 +46,8 @@ def rates_to_dict(rates):
         "theories": {theory.name: {"source": theory.source,
                                    "temperature_range_K": [_plain(end) for end in theory.range]}
                      for theory in theories(settings.substance)},
+        "properties": {name: getattr(settings.substance, name).source
+                       for name in ("saturation_pressure", "surface_tension", "density")},
         "theory_trend": {name: None if trend is None else
                          {"constant": quantity(trend.constant),
                           "per_inverse_K": quantity(trend.per_inverse_kelvin)}
@@ -59,6 +61,10 @@ def rates_to_dict(rates):
             "to_isotherm": settings.to_isotherm,
             "critical_cluster_convention": f"slope = n* + {settings.convention}",
             "saturation_ratio": "over the liquid, as given in the table",
+            "uncertainties": "stated and scatter" if any(
+                isotherm.pulses.errors for isotherm in rates.isotherms) else
+            "scatter alone; what all pulses share, such as an error of the start temperature or "
+            "of the gain, is not in it",
         },
     }
 
@@ -238,8 +244,9 @@ def _about_the_fit(isotherm, count):
                "robust slope hardly feels them")
     if line.overstated:
         yield ("overstated-sigmas", "pulses scatter less than their sigmas say (reduced "
-               f"chi-square {line.chi2_reduced:.2g}): the rest counts as shared by all; "
-               "_sigma_systematic columns would say it")
+               f"chi-square {line.chi2_reduced:.2g}): the rest counts as shared by all, as "
+               "errors of the start temperature and of the gain are; _sigma_systematic columns "
+               "would say it")
     elif line.chi2_reduced > chi_square_limit(line, count):
         yield ("extra-scatter", f"pulses scatter more than their sigmas say (reduced chi-square "
                f"{line.chi2_reduced:.2g}): {line.scatter:.2g} of ln J was added")

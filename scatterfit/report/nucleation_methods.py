@@ -32,8 +32,9 @@ def _rates(result):
     tolerance = settings["tolerance_K"]
     grouped = ("the classification likelihood of a normal mixture" if tolerance is None else
                f"a largest distance of {tolerance:g} K from the middle")
-    yield (f"Pulses were grouped into {len(isotherms)} isotherms by {grouped}, and ln J was "
-           "fitted linearly to ln S.")
+    count = len(isotherms)
+    yield (f"Pulses were grouped into {count} isotherm{'s' * (count != 1)} by {grouped}, and ln J "
+           "was fitted linearly to ln S.")
     if settings["to_isotherm"]:
         yield "Each rate was first brought to the temperature of its isotherm by theory."
     if any(isotherm["chi2_reduced"] is not None for isotherm in isotherms):
@@ -41,7 +42,8 @@ def _rates(result):
                "scatter beyond them added to ln J (Paule and Mandel 1982); errors shared by all "
                "pulses were propagated apart.")
     else:
-        yield "The fit is ordinary least squares; uncertainties follow from the scatter."
+        yield ("The fit is ordinary least squares; uncertainties follow from the scatter and hold "
+               "no error that all pulses share.")
     if any(isotherm["censored"] for isotherm in isotherms):
         yield ("Pulses without a cloud entered by the likelihood of their 95 percent upper "
                "limits.")
@@ -53,6 +55,17 @@ def _rates(result):
            "(Kashchiev 1982). S is the saturation ratio over the (supercooled) liquid.")
     sources = [theory["source"] for theory in result["theories"].values()]
     yield f"Rates were compared with: {'; '.join(sources)}."
+    properties = {}
+    for name, source in result["properties"].items():
+        properties.setdefault(source, []).append(name.replace("_", " "))
+    yield ("Properties of the liquid: " + "; ".join(
+        f"{' and '.join(names)}: {source}" for source, names in properties.items()) + ".")
+    lost = [isotherm["losses"] for isotherm in isotherms if isotherm["losses"]]
+    if lost and lost[0]["corrected"]:
+        most = max(one["lost_percent"]["value"] for one in lost)
+        yield (f"Rates were corrected for a background of larger particles, by up to {most:.2g} "
+               "percent of J: droplets swept up (Kerminen and Kulmala 2002, coagulation after "
+               "Dahneke 1983) and vapour taken by the growing particles during the hold.")
 
 
 def _activation(result):

@@ -27,7 +27,8 @@ def rates_text(result):
     isotherms = result["isotherms"]
     parts = [_rates_head(result)]
     if isotherms:
-        parts += [_slopes(isotherms), _ratios(isotherms), _trends(result["theory_trend"])]
+        parts += [_slopes(isotherms, result["settings"]["uncertainties"]), _ratios(isotherms),
+                  _trends(result["theory_trend"])]
     parts += [
         _lines("Series of holds", map(_series, result["hold_series"])),
         _lines("Compared with the other table", map(_night, result["comparison"])),
@@ -49,7 +50,7 @@ def _rates_head(result):
     return f"NUCLEATION RATES  {result['source']}\n  {text}"
 
 
-def _slopes(isotherms):
+def _slopes(isotherms, uncertainties):
     rate = isotherms[0]["saturation_ratio_at"]
     asked = rate[0]["rate_per_cm3_s"] if rate else None
     head = ["T/K", "n", "d ln J/d ln S", "robust", "n*"]
@@ -65,7 +66,13 @@ def _slopes(isotherms):
     convention = isotherms[0]["critical_cluster_convention"]
     others = [_at_rates(isotherm) for isotherm in isotherms
               if len(isotherm["saturation_ratio_at"]) > 1]
-    return "\n".join([f"Isotherms ({convention}; J in cm⁻³ s⁻¹)", *_table(rows), *others])
+    return "\n".join([f"Isotherms ({convention}; J in cm⁻³ s⁻¹)", *_table(rows), *others,
+                      *_from_what(uncertainties)])
+
+
+def _from_what(uncertainties):
+    """Return what to keep in mind of uncertainties that no column states."""
+    return [] if uncertainties.startswith("stated") else _wrapped(f"Uncertainties: {uncertainties}")
 
 
 def _at_rates(isotherm):
@@ -157,7 +164,8 @@ def activation_text(result):
     pulses = sum(run["pulses"] for run in runs)
     head = (f"ACTIVATION OF SEEDS  {result['source']}\n  {pulses} pulse{'s' * (pulses != 1)} of "
             f"{result['substance']} "
-            f"in {len(runs)} run{'s' * (len(runs) != 1)}\n  {result['density']}")
+            f"in {len(runs)} run{'s' * (len(runs) != 1)}")
+    head = "\n".join([head, *_wrapped(result["density"])])
     parts = [head, *map(_run, runs),
              _lines("Compared", map(_onsets, result["comparison"])),
              _cautions(runs), _left_out(result["left_out"])]
@@ -203,7 +211,7 @@ def _onsets(found):
 def _named(isotherm):
     """Return an isotherm's temperature, with the value that its pulses share."""
     text = f"{isotherm['temperature_K']:.2f}"
-    return text if isotherm["by"] is None else f"{isotherm['by']}: {text}"
+    return text if isotherm["by"] is None else f"{isotherm['by'] or '(empty)'}: {text}"
 
 
 def _pm(quantity):
