@@ -180,9 +180,13 @@ def test_joined_tables_are_those_of_each_colour_alone(colours, optics, store):
         for ours, curve in ((joined.collected[row], table.collected[0]),
                             (joined.extinction[number], table.extinction)):
             expected = CubicSpline(grid, curve / np.exp(4 * grid))(inner) * np.exp(4 * inner)
-            assert ours == pytest.approx(expected, rel=1e-12 if number == 0 else 2e-5)
+            # Square metres: all of them are below pytest's own absolute tolerance.
+            close = {"rel": 1e-12 if number == 0 else 2e-5, "abs": 0.0}
+            assert ours == pytest.approx(expected, **close)
     lost = table.extinction - table.forward
-    assert joined.lost == pytest.approx(CubicSpline(grid, lost)(inner), rel=1e-4)
+    large = inner > np.log(2e-7)
+    found = joined.lost[large]
+    assert found == pytest.approx(CubicSpline(grid, lost)(inner[large]), rel=2e-5, abs=0.0)
     assert joined.radius[-1] >= 1.6e-6
 
 
@@ -252,8 +256,8 @@ def test_two_beams_alike_give_what_one_gives(store):
     for table, name in zip(twice["detector"], ("green", "too"), strict=True):
         table["beam"] = name
     plain, twice = apparatus_from_mapping(plain), apparatus_from_mapping(twice)
-    pulse = simulate(plain, store=store, rate=5e3, seed=4)[0]
-    again = simulate(twice, store=store, rate=5e3, seed=4)[0]
+    pulse = simulate(plain, store=store, rate=10e3, seed=4)[0]
+    again = simulate(twice, store=store, rate=10e3, seed=4)[0]
     for name, values in pulse.columns.items():
         assert again.columns[name] == pytest.approx(values, rel=1e-9, abs=1e-12)
     one, two = (measure(bench, pulse.time, pulse.columns, store=store).to_dict()
@@ -289,7 +293,7 @@ def test_simulated_pulses_come_back(store, name):
     if through is not None:
         mapping["transmission"] = through
     bench = apparatus_from_mapping(mapping)
-    pulse = simulate(bench, store=store, rate=5e3, seed=5)[0]
+    pulse = simulate(bench, store=store, rate=10e3, seed=5)[0]
     result = measure(bench, pulse.time, pulse.columns, store=store).to_dict()
     assert result["verdict"] == "accepted"
     for key, truth in (("final_radius_um", pulse.truth["final_radius_um"]),
@@ -299,6 +303,30 @@ def test_simulated_pulses_come_back(store, name):
     assert result["final_radius_um"]["sigma"] < 1e-3
 
 
+def test_a_second_colour_resolves_what_one_leaves_open(store):
+    """Red light near the forward direction, 30 ms and 15 percent noise: several radii do.
+
+    tests/studies/add_measurement.py has more draws, and other things that one may add.
+    """
+    blue = {**GREEN, "name": "blue", "wavelength_nm": 405.0}
+    both = {**copy.deepcopy(BENCH), "beam": [RED, blue],
+            "detector": [detector("red", angle_deg=15.0), detector("blue", angle_deg=15.0)],
+            "vapour": {"substance": "water", "mole_fraction": 0.0085, "mole_fraction_sigma": 3e-4},
+            "analysis": {"max_radius_um": 1.2}}
+    del both["transmission"]
+    both["chamber"]["temperature_K_sigma"] = 0.5
+    alone = {**both, "beam": RED, "detector": both["detector"][:1]}
+    bench = apparatus_from_mapping(both)
+    pulse = simulate(bench, store=store, rate=10e3, seed=1, noise=0.15, duration=0.03)[0]
+    one = measure(apparatus_from_mapping(alone), pulse.time, pulse.columns, store=store)
+    two = measure(bench, pulse.time, pulse.columns, store=store)
+    assert (one.verdict, two.verdict) == ("ambiguous", "accepted")
+    assert "ambiguous-lobe" in {reason.code for reason in one.reasons}
+    truth = pulse.truth["final_radius_um"] * 1e-6
+    assert abs(two.final_radius.value - truth) < 3 * two.final_radius.sigma
+    assert two.final_radius.sigma < 0.2 * one.final_radius.sigma
+
+
 def test_a_monitor_of_one_beam_leaves_the_other_alone(store):
     mapping = {**copy.deepcopy(BENCH), "beam": [GREEN, {**TURNED, "name": "red"}],
                "detector": [detector("green"), detector("red")],
@@ -306,7 +334,7 @@ def test_a_monitor_of_one_beam_leaves_the_other_alone(store):
                "reference": {"column": "monitor_V", "beam": "red"}}
     del mapping["transmission"]
     bench = apparatus_from_mapping(mapping)
-    pulse = simulate(bench, store=store, rate=5e3, seed=5)[0]
+    pulse = simulate(bench, store=store, rate=10e3, seed=5)[0]
     columns = {**pulse.columns, "monitor_V": 2.0 * (1 + 0.05 * np.sin(300 * pulse.time))}
     green, red = prepare(bench, pulse.time, columns, store).channels
     assert green.signal == pytest.approx(pulse.columns["green_V"])

@@ -16,6 +16,7 @@ from scatterfit.forward.model import channel_signals
 from scatterfit.forward.simulate import pressure_profile
 from scatterfit.inversion.data import bin_channels, bin_edges, channel_data, without
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
+from scatterfit.inversion.explore import best_of
 from scatterfit.inversion.extrema import Turn, find_turns, match_turns
 from scatterfit.inversion.fit import coarse_model, fit_pulse, full_residual, whiteness
 from scatterfit.inversion.hops import find_hops
@@ -479,6 +480,29 @@ def test_disturbances_are_found_when_planted_and_only_then(plain, name):
         first, second = find_disturbances(problem, solution.best)
         assert set(first) == expected
         assert second == ()
+
+
+def test_a_hum_of_two_periods_is_not_told_from_lobes(plain):
+    """40 ms of mains at 50 Hz: taken for hum, it would take lobes away from the cloud."""
+    hum = 0.05 * np.sin(2 * np.pi * 50 * TIME + 0.4)
+    problem = plain.problem(plain.channels(0, more=hum))
+    for end, expected in ((0.055, False), (0.08, True)):
+        inside = (problem.bins.time > 0.015) & (problem.bins.time < end)
+        weights = np.where(inside, problem.bins.weights, 0.0)
+        short = replace(problem, bins=replace(problem.bins, weights=weights))
+        solution = descend(short, TRUE, iterations=10, tolerance=0.01)
+        assert ("hum 50 Hz" in find_disturbances(short, solution.best)[0]) == expected
+
+
+def test_two_descents_may_end_in_one_cloud(settled):
+    """Solutions are told apart by what they are, not by comparing their arrays."""
+    problem, solution = settled
+    again = descend(problem, TRUE, iterations=20, tolerance=1e-4)
+    assert again.best.cloud == solution.best.cloud
+    assert again.best.residual is not solution.best.residual
+    best, rivals = best_of(problem, [solution, again])
+    assert final_radius(best) == pytest.approx(final_radius(solution), rel=1e-5)
+    assert rivals == ()
 
 
 def test_a_slow_drift_too_small_to_be_found_is_taken_up_within_its_prior(plain):

@@ -7,6 +7,8 @@ _HARMONICS = (1, 2, 3)
 _WORTH = 40.0
 _WORTH_DRIFT = 16.0
 _MEDIAN_SQUARE = 0.455
+# Below so many periods of the mains a hum cannot be told from lobes (common practice, no source).
+_PERIODS = 2.5
 _GLITCH = 6.0
 _NEIGHBOURS = 4
 
@@ -91,12 +93,21 @@ def _stacked_groups(problem, evaluation, chosen):
         for name, group in candidate_columns(time).items():
             if name in chosen[i] or _needs_fundamental(name, chosen[i]):
                 continue
+            if name.startswith("hum") and _periods(name, time[weight > 0.0]) < _PERIODS:
+                continue
             own = (group * full * weight).T
             columns = np.zeros((evaluation.residual.size, own.shape[1]))
             columns[start:start + weight.size] = own - basis @ (basis.T @ own)
             groups[i, name] = columns
         start += weight.size
     return groups
+
+
+def _periods(name, time):
+    """Return how many periods of a hum's mains the used times span [-]."""
+    frequency = float(name.split()[1])
+    mains = next(m for m in MAINS if frequency / m in _HARMONICS)
+    return mains * np.ptp(time) if time.size else 0.0
 
 
 def _worth(name):

@@ -85,7 +85,7 @@ def best_of(problem, found):
     ]
     rivals += [
         Rival(s.best.cloud, final_radius(s), float(s.best.chi2 - found[0].best.chi2))
-        for s in found if s not in close[:3]
+        for s in found if all(s is not other for other in close[:3])
     ]
     kept = []
     for rival in sorted(rivals, key=lambda r: r.delta_chi2):
@@ -314,7 +314,8 @@ def settle(problem, rough):
     if len(close) > 1 and factors.max() > SOFT:
         soft = soften(problem, factors)
         again = [descend(soft, s.best.cloud, iterations=8, tolerance=0.1) for s in close]
-        found = [*sorted(again, key=lambda s: s.best.chi2), *(s for s in found if s not in close)]
+        far = [s for s in found if all(s is not other for other in close)]
+        found = [*sorted(again, key=lambda s: s.best.chi2), *far]
     return _distinct([*found, *rough])
 
 
