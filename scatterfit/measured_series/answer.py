@@ -60,7 +60,7 @@ class Answer:
     """Column to the root mean square of what is not explained, over the light [-]."""
 
 
-def answer(warm, unknowns, x, store):
+def answer(warm, unknowns, x, store, loose=1.0):
     """Return what a pulse says about the shared coordinates at a given bench.
 
     The pulse's own parameters are fitted at the bench; its information about the shared ones is
@@ -76,6 +76,8 @@ def answer(warm, unknowns, x, store):
         Coordinates [SI].
     store : object
         Where kernel tables are kept.
+    loose : float
+        By what factor a pulse may stray further than usual from the common error of the model [-].
 
     Returns
     -------
@@ -89,7 +91,7 @@ def answer(warm, unknowns, x, store):
     """
     place = dict(zip((u.key for u in unknowns), x, strict=True))
     model, setup, remake = _modelled(warm, unknowns, x, store)
-    problem = _problem(warm, model, place)
+    problem = _problem(warm, model, place, loose)
     best = descend(problem, replace(warm.cloud, **_gas(warm, unknowns, x))).best
     cloud = best.cloud
     acting = _acting(warm, unknowns, x)
@@ -137,13 +139,13 @@ def _modelled(warm, unknowns, x, store):
     return (*remake(x), remake)
 
 
-def _problem(warm, model, place):
+def _problem(warm, model, place, loose):
     """Return what is fitted: the pulse's own parameters at the bench."""
     priors = dict(warm.priors)
     for key, name in _LINKED.items():
         if name in priors and key in place:
             stated = warm.apparatus.analysis.growth_scale if key == SCALE else 1.0
-            priors[name] = (float(place[key] + np.log(stated)), OWN_PARTS[name])
+            priors[name] = (float(place[key] + np.log(stated)), loose * OWN_PARTS[name])
     dark = place.get("transmission.dark_V", 0.0)
     bins = warm.bins
     if dark:

@@ -62,7 +62,8 @@ def joint_estimate(warms, unknowns, start, before, settings):
         Covariance of the coordinates beforehand; their mean is zero [SI].
     settings : dict
         ``"store"``: of kernel tables; ``"map"``: like the built-in ``map``, of a function over
-        pulses; ``"progress"``: called with the round and its largest step over sigma.
+        pulses; ``"progress"``: called with the round and its largest step over sigma. Optional:
+        ``"rounds"``, at the most, and ``"loose"`` as for :func:`answer`.
 
     Returns
     -------
@@ -81,7 +82,7 @@ def joint_estimate(warms, unknowns, start, before, settings):
     warms, raw = list(warms), _asked(warms, unknowns, x, settings)
     weights = np.ones(len(warms))
     size, turn, settled = 1.0, 0, False
-    for turn in range(1, _ROUNDS + 1):
+    for turn in range(1, settings.get("rounds", _ROUNDS) + 1):
         answers = weighed(raw, raw)
         weights, excess, scatter = _judged(answers, x, precision)
         covariance, step = _solved(answers, weights, scatter, x, precision)
@@ -104,7 +105,8 @@ def joint_estimate(warms, unknowns, start, before, settings):
 
 def _asked(warms, unknowns, x, settings):
     """Return every pulse's answer at a bench."""
-    ask = partial(answer, unknowns=unknowns, x=x, store=settings["store"])
+    ask = partial(answer, unknowns=unknowns, x=x, store=settings["store"],
+                  loose=settings.get("loose", 1.0))
     return list(settings["map"](ask, warms))
 
 

@@ -224,6 +224,8 @@ def _own_shifts(bench, fit):
     """Return where the pulse on its own would have what is shared, as coordinates."""
     cloud, problem = fit.best.cloud, fit.problem
     own = {SCALE: cloud.scale - float(np.log(bench.analysis.growth_scale))}
+    sticking = bench.vapour.mass_accommodation
+    own["vapour.mass_accommodation"] = float(np.exp(-cloud.accommodation) - 1.0) / sticking
     for i, detector in enumerate(bench.detectors):
         if f"angle:{i}" in problem.names:
             own[f"detector.{detector.column}.angle_deg"] = (
