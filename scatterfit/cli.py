@@ -13,7 +13,7 @@ from typing import Annotated
 
 import typer
 
-from scatterfit import cli_night, cli_nucleation, cli_series
+from scatterfit import cli_night, cli_nucleation, cli_plan, cli_series
 from scatterfit.errors import ChamberFileError, ScatterfitError
 
 app = typer.Typer(
@@ -274,3 +274,4 @@ def fit(
 app.registered_commands += cli_night.app.registered_commands
 app.registered_commands += cli_nucleation.app.registered_commands
 app.registered_commands += cli_series.app.registered_commands
+app.registered_commands += cli_plan.app.registered_commands

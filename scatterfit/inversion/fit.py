@@ -31,10 +31,12 @@ from scatterfit.inversion.search import search
 from scatterfit.inversion.solve import descend, polish
 from scatterfit.inversion.uncertainty import channel_inflation
 
-_FINE = 800
+FINE_BINS = 800
+"""Bins at the most, roughly."""
+SLOW_MISFITS = (0.01, 0.004, 0.025)
+"""What slow misfit is let pass at first, one look after the other [-]."""
 _FOLLOWED = 5
 _SOFTENINGS = 3
-_SLOW_MISFITS = (0.01, 0.004, 0.025)
 _HOP_ROUNDS = 5
 _HOPS_SETTLED = 1e-3
 
@@ -93,7 +95,7 @@ def fit_pulse(model, time, channels, options):
     channels = tuple(channels)
     alone = all(data.kind == "transmission" for data in channels)
     # Shoulders of transmitted light alone are faint: several ways of looking, the best is kept.
-    looks = _SLOW_MISFITS if alone else _SLOW_MISFITS[:1]
+    looks = SLOW_MISFITS if alone else SLOW_MISFITS[:1]
     fits = [_one_look(model, time, channels, options, slow) for slow in looks]
     return min(fits, key=lambda fit: fit.chi2_reduced)
 
@@ -112,7 +114,7 @@ def _one_look(model, time, channels, options, slow):
     found, disturbances = explore(problem, candidates, lambda: search(*looking, dense=True))
     channels, found = _without_hops(problem, found, time, channels, (options.onset, slow))
     problem = replace(problem, model=model)
-    fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
+    fine = bin_channels(time, channels, bin_edges(time, options.onset, FINE_BINS))
     kinds = [data.kind for data in channels]
     start = fine if "scatter" in kinds else blunted(fine, kinds, slow)
     best, others = best_of(_with(problem, start, disturbances), found)
@@ -127,7 +129,7 @@ def _one_look(model, time, channels, options, slow):
     count = int(sum(g.sum() for g in glitchy))
     if count:
         channels = tuple(without(d, g) for d, g in zip(channels, glitchy, strict=True))
-        fine = bin_channels(time, channels, bin_edges(time, options.onset, _FINE))
+        fine = bin_channels(time, channels, bin_edges(time, options.onset, FINE_BINS))
         problem = _with(problem, fine, disturbances)
         best = _again(problem, best)
         problem, best, disturbances = _undisturbed(problem, fine, best, disturbances)
