@@ -136,15 +136,23 @@ def _pulse_value(paper, key, value):
 def _check_path(paper, key, value):
     """Refuse a key that is neither the chamber file's nor the pulse's."""
     if split_path(key) is None:
-        columns = [d.get("column") for d in paper.mapping.get("detector", [])
-                   if isinstance(d, dict)]
-        paths = [*PULSE_KEYS, *known_paths(columns or ["COLUMN"]),
+        columns, beams = (_names(paper.mapping, *where) for where in (
+            ("detector", "column"), ("beam", "name")))
+        paths = [*PULSE_KEYS, *known_paths(columns or ["COLUMN"], beams),
                  f"{ADDED}.angle_deg", f"{ADDED}.half_angle_deg"]
         close = suggestion(key, paths)
         known = close if close.startswith("did") else (
             f"a key path such as beam.wavelength_nm, {ADDED}.angle_deg, or one of "
             + ", ".join(PULSE_KEYS))
         fail(paper.where, key, value, f"unknown key; {known}")
+
+
+def _names(mapping, table, key):
+    """Return what the members of an array of tables are called, as far as it is sound."""
+    members = mapping.get(table, [])
+    found = [one.get(key) for one in members if isinstance(one, dict)] if isinstance(
+        members, list) else []
+    return [name for name in found if isinstance(name, str)]
 
 
 def _with_added(mapping, added, where):
@@ -246,8 +254,10 @@ def default_sweeps(paper):
                 sweeps[f"{path}.volume_mm3"] = steps_between(0.01 * held, held, 3)
     sweeps["added.angle_deg"] = steps_between(15.0, 135.0, 7)
     if apparatus.detectors:
-        sweeps["beam.wavelength_nm"] = [405.0, 532.0, 632.8]
-        sweeps["beam.polarization"] = [0.0, 45.0, 90.0]
+        for name in _names(paper.mapping, "beam", "name") or [""]:
+            path = f"beam.{name}" if name else "beam"
+            sweeps[f"{path}.wavelength_nm"] = [405.0, 532.0, 632.8]
+            sweeps[f"{path}.polarization"] = [0.0, 45.0, 90.0]
         sweeps["noise"] = [_round(scenario.noise * f) for f in (0.3, 1.0, 3.0)]
     if apparatus.transmission is not None:
         sweeps["transmission_noise"] = [_round(scenario.transmission_noise * f)
