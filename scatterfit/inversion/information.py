@@ -73,7 +73,7 @@ def fisher_information(problem, cloud):
     information : ndarray, shape (p, p)
         ``J^T J`` of the weighted residuals in the order of ``problem.names``; free amplitudes and
         offsets are projected out, which leaves of their joint information with the parameters what
-        remains when they are estimated too (the Schur complement).
+        remains when they are estimated too (the Schur complement) [one over the parameters' units].
 
     References
     ----------
