@@ -43,7 +43,7 @@ def merit(found, wanted):
     -------
     merit : tuple of float
         How far its verdict is from ``accepted``, then the mean of ln(sigma/value) over what is
-        wanted; what is not determined counts as a sigma of ten times the value.
+        wanted; what is not determined counts as a sigma of ten times the value [-].
 
     Notes
     -----

@@ -201,7 +201,7 @@ def steps_between(low, high, count):
     Returns
     -------
     values : list of float
-        Rounded to four digits.
+        Rounded to four digits [any].
 
     Examples
     --------
