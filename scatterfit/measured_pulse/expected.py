@@ -93,11 +93,11 @@ def expect(apparatus, scenario, store=None, rivals=True):
         kernel, relative, _ = pulse_kernel(setup, store)
         return pulse_model(setup, kernel, relative, straight)
 
-    # The generator draws noise that is not used.
+    # Of the noise that is drawn only the gauge's is used, for what it does to the duration.
     pulse = simulate_pulse(apparatus, scenario, make_model, np.random.default_rng(0))
     apparatus = replace(apparatus, analysis=analysis)
     noiseless = {name: one.value for name, one in pulse.expected.items()}
-    setup = prepare_setup(apparatus, pulse.time, noiseless)
+    setup = _with_gauge_noise(prepare_setup(apparatus, pulse.time, noiseless), pulse)
     gas = {"trace": "", **gas_records(setup)}
     warnings = tuple(Reason(*w) for w in setup.warnings)
     if dry(setup) or pulse.truth["final_radius_um"] < _LEAST_FINAL:
@@ -128,6 +128,14 @@ def expect(apparatus, scenario, store=None, rivals=True):
               if one.step > float(np.median(one.sigma))),
         fit.best.chi2 / max(np.count_nonzero(problem.bins.weights), 1),
     )
+
+
+def _with_gauge_noise(setup, pulse):
+    """Return the setup with the hold's duration as uncertain as it is from a noisy record."""
+    if setup.hold is None or not setup.clock_known:
+        return setup
+    noisy = prepare_setup(setup.apparatus, pulse.time, pulse.columns).hold
+    return replace(setup, hold=replace(setup.hold, effective_sigma=noisy.effective_sigma))
 
 
 def _channel(expected, column, kind, record, window):
