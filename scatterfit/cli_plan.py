@@ -146,11 +146,15 @@ def plan_output(path, pulse, settings, choices, *, figure=None, as_json=False):
     from scatterfit.report.plan import plan_text, plan_to_dict
 
     if figure is not None:
-        from scatterfit.report.nucleation_figures import check_suffix
+        from scatterfit.report.nucleation_figures import SUFFIXES
 
-        check_suffix(figure)
+        if figure.suffix.lower() not in SUFFIXES:
+            message = f"{figure}: a figure ends in {', '.join(SUFFIXES)}."
+            raise typer.BadParameter(message)
     paper = _paper(path, pulse, settings)
-    _check_ranges(paper, {**choices["vary"], **choices["within"]})
+    held = pulse["hold_ms"]
+    stated = {} if held is None else {"hold_ms": (held, held, 1)}
+    _check_ranges(paper, {**stated, **choices["vary"], **choices["within"]})
     tell = _Progress()
     base = on_paper.outcome(paper, {})
     if base.expectation is None:

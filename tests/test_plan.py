@@ -295,6 +295,7 @@ def test_the_command_prints_tables_json_and_a_figure(chamber, tmp_path, capsys):
     (["--vary", "detector.scatter1_V.angle_deg=20:400"], "400"),
     (["--vary", "vapour.substance=1:2"], "vapour.substance"),
     (["--vary", "noise=0.01:7"], "can be planned"),
+    (["--figure", "plan.gif"], "a figure ends in"),
     (["--for", "beauty"], "known are radius, growth, number, rate"),
     (["--set", "vapour.mole_fraction=0.0005"], "no hold pressure gives"),
     (["--rate-khz", "0.1", "--duration-ms", "10"], "samples"),
