@@ -19,6 +19,7 @@ from scatterfit.measured_series.answer import Answer, answer, followed
 from scatterfit.measured_series.calibrate import calibrate
 from scatterfit.measured_series.choice import before_of, chosen, sigmas_of, unknowns_of
 from scatterfit.measured_series.drift import gain_drift
+from scatterfit.measured_series.informed import accommodation_notes, not_separated
 from scatterfit.measured_series.joint import Joint, _judged
 from scatterfit.measured_series.look import SeriesPulse, first_look
 from scatterfit.measured_series.placing import value_in, with_value
@@ -145,6 +146,27 @@ def test_drift_is_the_weighted_straight_line():
     assert found.chi2 == pytest.approx(np.sum(((relative - mean) / sigma) ** 2))
     assert found.probability < 1e-3
     assert 2.0 < found.change / found.change_sigma < 20.0
+
+
+def test_what_is_not_told_apart_is_said_with_what_is_known():
+    """The known combination against the eigenvector of the covariance with the least variance."""
+    keys = ("vapour.mass_accommodation", "vapour.thermal_accommodation")
+    unknowns = [Unknown(key, kind_of(key), 0.5, 3.0, False, True) for key in keys]
+    sigma, rho = np.array([0.4, 0.8]), -0.999
+    covariance = np.array([[1.0, rho], [rho, 1.0]]) * np.outer(sigma, sigma)
+    joint = Joint(np.zeros(2), covariance, 9.0 * np.eye(2), (), np.ones(0), np.zeros(0), 1.0, 1,
+                  True)
+    (pair,) = not_separated(joint, unknowns)
+    least = np.linalg.eigh(covariance)[1][:, 0]
+    # Coordinates are of 1/alpha: at 0.5 each a quarter of it, and against it.
+    assert (pair.first, pair.second) == keys[::-1]
+    assert pair.correlation == pytest.approx(rho)
+    assert pair.slope == pytest.approx(-least[0] / least[1], rel=0.01)
+    assert pair.sigma == pytest.approx(0.25 * sigma[1] * np.sqrt(1.0 - rho**2))
+    assert "cannot separate" in accommodation_notes(joint, unknowns)[0]
+    apart = replace(joint, covariance=np.diag(sigma**2))
+    assert not_separated(apart, unknowns) == ()
+    assert "tell them apart" in accommodation_notes(apart, unknowns)[0]
 
 
 def test_correlated_priors_enter_as_their_covariance():

@@ -8,7 +8,11 @@ import numpy as np
 from scatterfit.errors import InvalidInputError
 from scatterfit.measured_series.choice import before_of, sigmas_of, unknowns_of
 from scatterfit.measured_series.drift import gain_drift
-from scatterfit.measured_series.informed import informed_by, not_separated
+from scatterfit.measured_series.informed import (
+    accommodation_notes,
+    informed_by,
+    not_separated,
+)
 from scatterfit.measured_series.joint import joint_estimate
 from scatterfit.measured_series.look import first_look, second_look, starting_gain, with_gains
 from scatterfit.measured_series.record import Calibration, Row, Shared, in_unit, unit_of
@@ -200,7 +204,7 @@ def _possible(unknown, x):
 
 def _notes(joint, unknowns):
     """Return what a user should know of the estimate as a whole."""
-    notes = []
+    notes = accommodation_notes(joint, unknowns)
     if not joint.converged:
         notes.append("the joint estimate had not settled when it was stopped: give it again with "
                      "the chamber file it wrote, or hold what is least sure")

@@ -102,3 +102,33 @@ def not_separated(joint, unknowns):
                     float(width * np.sqrt(max(1.0 - rho**2, 0.0))), unit_of(first.key),
                 ))
     return tuple(sorted(found, key=lambda pair: -abs(pair.correlation)))
+
+
+def accommodation_notes(joint, unknowns):
+    """Return whether a series tells mass and thermal accommodation apart, where it seeks both.
+
+    Parameters
+    ----------
+    joint : Joint
+        The estimate.
+    unknowns : sequence of Unknown
+        What is shared.
+
+    Returns
+    -------
+    notes : list of str
+        One, or none.
+    """
+    keys = [u.key for u in unknowns]
+    pair = ("vapour.mass_accommodation", "vapour.thermal_accommodation")
+    if not all(key in keys and unknowns[keys.index(key)].written for key in pair):
+        return []
+    i, j = (keys.index(key) for key in pair)
+    sigma = np.sqrt(np.diag(joint.covariance))
+    rho = float(joint.covariance[i, j] / (sigma[i] * sigma[j]))
+    ratio = max(sigma[k] / np.sqrt(joint.before[k, k]) for k in (i, j))
+    apart = abs(rho) < _ENTANGLED and ratio < _UNTOLD
+    text = f"mass and thermal accommodation: errors correlate by {rho:.2f}; "
+    return [text + ("these pulses tell them apart" if apart else (
+        "these pulses cannot separate them: hold one (--hold), or add pulses at a lower pressure "
+        "or in a gas that conducts heat otherwise"))]

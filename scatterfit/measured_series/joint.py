@@ -8,7 +8,7 @@ import numpy as np
 from scatterfit.measured_series.answer import answer, followed
 from scatterfit.measured_series.unknowns import LEAST_INVERSE
 
-_ROUNDS = 14
+_ROUNDS = 24
 _SETTLED = 0.05
 _LEAST_GAIN = 0.15
 _HALVINGS = 4

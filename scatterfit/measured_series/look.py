@@ -25,7 +25,7 @@ from scatterfit.measured_series.placing import (
 from scatterfit.measured_series.unknowns import LABELS, SCALE, kind_of, moved_value
 
 _KNOWN = 0.5
-_LEFT_OVER = 0.15
+_LEFT_OVER = 0.2
 _WIDER = 2.0
 _SHARED = ("angle", "temperature", "vapour", "accommodation")
 

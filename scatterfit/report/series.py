@@ -102,7 +102,7 @@ def _notes(result):
 
 def _traces(traces):
     """Return one row for each pulse."""
-    width = max(len(row["trace"]) for row in traces)
+    width = max(len("trace"), *(len(row["trace"]) for row in traces))
     lines = [f"  {'trace':<{width}}  {'number':<22}  {'radius':>8}  {'chi2':>6}  {'apart':>6}  "
              "unexplained"]
     for row in traces:

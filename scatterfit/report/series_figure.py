@@ -11,6 +11,7 @@ _GREY = "#BBBBBB"
 _SMALL, _TEXT = 6.5, 7.5
 _ROW_INCH = 0.19
 _FARTHEST = 6.0
+_HALF, _POOR = 1.01, 4.0
 
 
 def series_figure(result):
@@ -71,8 +72,11 @@ def _draw_gains(axis, result):
         place = np.array([p["place"] for p in one["pulses"]])
         value = np.array([p["relative_percent"]["value"] for p in one["pulses"]])
         sigma = np.array([p["relative_percent"]["sigma"] for p in one["pulses"]])
-        axis.errorbar(place, value, yerr=sigma, fmt=marker, ms=2.8, lw=0.6, color=colour,
-                      mfc="white", label=one["key"].split(".")[1])
+        poor = sigma > _POOR * np.median(sigma)
+        axis.errorbar(place[poor], value[poor], yerr=sigma[poor], fmt=marker, ms=2.8, lw=0.5,
+                      color=_GREY, mfc="white", zorder=1)
+        axis.errorbar(place[~poor], value[~poor], yerr=sigma[~poor], fmt=marker, ms=2.8, lw=0.6,
+                      color=colour, mfc="white", label=one["key"].split(".")[1])
         weight = sigma**-2.0
         centre, mean = weight @ place / weight.sum(), weight @ value / weight.sum()
         span = np.ptp(place)
@@ -80,12 +84,25 @@ def _draw_gains(axis, result):
             ends = np.array([place.min(), place.max()])
             slope = one["change_percent"]["value"] / span
             axis.plot(ends, mean + slope * (ends - centre), color=colour, lw=0.9)
+    axis.set_ylim(*_shown(result["gain_drift"]))
     axis.axhline(0.0, color="#777777", lw=0.6)
     axis.set_xlabel("hours" if result["drift_axis"] == "hours" else "pulse, by name",
                     fontsize=_TEXT)
     axis.set_ylabel("gain over the common one (%)", fontsize=_TEXT)
     if len(result["gain_drift"]) > 1:
         axis.legend(fontsize=_SMALL, frameon=False)
+
+
+def _shown(drifts):
+    """Return the limits that hold the better known half of the pulses and their bars."""
+    ends = []
+    for one in drifts:
+        value = np.array([p["relative_percent"]["value"] for p in one["pulses"]])
+        sigma = np.array([p["relative_percent"]["sigma"] for p in one["pulses"]])
+        known = sigma <= _HALF * np.median(sigma)
+        ends += [*(value - sigma)[known], *(value + sigma)[known], 0.0]
+    room = 0.08 * (max(ends) - min(ends))
+    return min(ends) - room, max(ends) + room
 
 
 def _draw_apart(axis, result):
