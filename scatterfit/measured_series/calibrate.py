@@ -6,6 +6,7 @@ from functools import partial
 import numpy as np
 
 from scatterfit.errors import InvalidInputError
+from scatterfit.measured_series.answer import answer
 from scatterfit.measured_series.choice import before_of, sigmas_of, unknowns_of
 from scatterfit.measured_series.drift import gain_drift
 from scatterfit.measured_series.informed import (
@@ -13,7 +14,7 @@ from scatterfit.measured_series.informed import (
     informed_by,
     not_separated,
 )
-from scatterfit.measured_series.joint import joint_estimate
+from scatterfit.measured_series.joint import joint_estimate, weighed
 from scatterfit.measured_series.look import first_look, second_look, starting_gain, with_gains
 from scatterfit.measured_series.record import Calibration, Row, Shared, in_unit, unit_of
 from scatterfit.measured_series.unknowns import kind_of
@@ -90,14 +91,15 @@ def _once_more(series, known, joint, settings):
     sigma = np.sqrt(np.diag(joint.covariance))
     ask = partial(second_look, free=free, store=settings["store"],
                   known=tuple(zip(unknowns, joint.x, sigma, strict=True)))
-    found = {look.name: look for look in settings["map"](ask, again) if look.warm is not None}
+    found = {look.name: look for look in settings["map"](ask, again)}
+    looks = [found.get(look.name, look) for look in looks]
+    found = {name: look for name, look in found.items() if look.warm is not None}
     if not found:
         return looks, joint
     warms = _from_there(warms, joint)
     warms += [_at_start(look.warm, unknowns, joint.x) for look in found.values()]
     order = {pulse.name: i for i, pulse in enumerate(pulses)}
     warms.sort(key=lambda warm: order[warm.name])
-    looks = [found.get(look.name, look) for look in looks]
     return looks, joint_estimate(warms, unknowns, joint.x, before, settings)
 
 
@@ -190,7 +192,7 @@ def _calibration(joint, unknowns, inputs, settings):
     np.fill_diagonal(correlation, 1.0)
     return Calibration(
         tuple(shared), tuple(unknowns[k].key for k in written), correlation,
-        not_separated(joint, unknowns), _rows(joint, unknowns, looks),
+        not_separated(joint, unknowns), _rows(joint, unknowns, looks, settings),
         gain_drift(joint, unknowns, settings["places"]), choice.held, joint.scatter,
         joint.rounds, joint.converged, (*notes, *_notes(joint, unknowns)), settings["axis"],
     )
@@ -221,22 +223,35 @@ def _notes(joint, unknowns):
     return notes
 
 
-def _rows(joint, unknowns, looks):
+def _rows(joint, unknowns, looks, settings):
     """Return a row for each pulse, in the order of the series."""
     place = {found.name: i for i, found in enumerate(joint.answers)}
+    aside = [_at_start(look.aside, unknowns, joint.x) for look in looks if look.aside is not None]
+    ask = partial(answer, unknowns=unknowns, x=joint.x, store=settings["store"])
+    beside = {found.name: found for found in settings["map"](ask, aside)}
     rows = []
     for look in looks:
         if look.warm is None:
-            rows.append(Row(look.name, False, ((look.code, look.text),)))
+            row = Row(look.name, False, ((look.code, look.text),))
+            if look.name in beside:
+                one = [beside[look.name]]
+                row = replace(_row(joint, unknowns, weighed(one, one)[0]), used=False,
+                              reasons=row.reasons)
+            rows.append(row)
             continue
         i = place[look.name]
-        rows.append(_row(joint, unknowns, i))
+        excess, weight = float(joint.excess[i]), float(joint.weights[i])
+        reasons = ()
+        if excess > _OUTLYING:
+            reasons = (("disagrees", f"wants another bench by {excess:.1f} sigma; it counts "
+                                     f"{weight:.2f} of a pulse"),)
+        rows.append(replace(_row(joint, unknowns, joint.answers[i]), excess=excess, weight=weight,
+                            reasons=reasons))
     return tuple(rows)
 
 
-def _row(joint, unknowns, i):
-    """Return the row of a pulse that took part."""
-    found, excess = joint.answers[i], float(joint.excess[i])
+def _row(joint, unknowns, found):
+    """Return the row of a pulse at the joint bench."""
     at = found.names.index("number")
     slope = found.follow[at].copy()
     for k, unknown in enumerate(unknowns):
@@ -246,13 +261,9 @@ def _row(joint, unknowns, i):
     own = found.number_sigma
     shared = float(slope @ joint.covariance @ slope)
     value = float(np.exp(found.cloud.number - found.cloud.temperature))
-    reasons = ()
-    if excess > _OUTLYING:
-        reasons = (("disagrees", f"wants another bench by {excess:.1f} sigma; it counts "
-                                 f"{joint.weights[i]:.2f} of a pulse"),)
     total = float(np.hypot(own, np.sqrt(shared)))
     return Row(
-        found.name, True, reasons,
+        found.name, True, (),
         (value, value * total) if total < _POOR else None, value * own if total < _POOR else None,
-        found.final_radius, found.chi2_reduced, excess, float(joint.weights[i]), found.left,
+        found.final_radius, found.chi2_reduced, left=found.left,
     )

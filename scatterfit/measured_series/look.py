@@ -78,7 +78,9 @@ class Look:
     warm: Warm | None
     code: str = ""
     text: str = ""
-    """Why the pulse does not take part, or what is odd about it."""
+    """Why the pulse does not take part."""
+    aside: Warm | None = None
+    """Of a pulse that does not take part: where its number at the joint bench is sought."""
 
 
 def first_look(pulse, free, store):
@@ -138,9 +140,11 @@ def second_look(pulse, free, known, store):
     gains = {key for key in free if key.endswith(".gain_V_m")}
     rest = {key: sigma for key, sigma in free.items() if key not in gains}
     look = first_look(replace(pulse, apparatus=bench), rest, store)
-    if look.warm is None:
-        return look
-    return replace(look, warm=replace(look.warm, apparatus=_opened(pulse.apparatus, free)))
+    stated = _opened(pulse.apparatus, free)
+    return replace(look, **{
+        field: replace(warm, apparatus=stated)
+        for field, warm in (("warm", look.warm), ("aside", look.aside)) if warm is not None
+    })
 
 
 def _looked(pulse, free, store):
@@ -169,7 +173,8 @@ def _looked(pulse, free, store):
     radius = max(float(fit.best.state.radius[:, -1].mean()), 1e-9)
     if rivals_left(fit, after.inflation * fit.softening, radius):
         return Look(pulse.name, None, "ambiguous-lobe",
-                    "another radius describes it as well; it would pull the bench with it")
+                    "another radius describes it as well; it would pull the bench with it",
+                    _warm(pulse, bench, prepared, fit, after, free))
     return Look(pulse.name, _warm(pulse, bench, prepared, fit, after, free))
 
 

@@ -106,19 +106,21 @@ def _traces(traces):
     lines = [f"  {'trace':<{width}}  {'number':<22}  {'radius':>8}  {'chi2':>6}  {'apart':>6}  "
              "unexplained"]
     for row in traces:
-        if row["used"]:
+        if row["final_radius_um"] is None:
+            lines.append(f"  {row['trace']:<{width}}  left out")
+        else:
             number = row["concentration_per_cm3"]
             text = NOT_DETERMINED if number is None else format_quantity(
                 number["value"], number["sigma"], "1/cm3")
             left = ", ".join(f"{100 * value:.2g} %" for value in row["unexplained_rms"].values())
+            apart = f"{row['disagrees_by_sigmas']:+.1f}" if row["used"] else "beside"
             lines.append(
                 f"  {row['trace']:<{width}}  {text:<22}  {row['final_radius_um']:>8.4f}  "
-                f"{row['chi2_reduced']:>6.2f}  {row['disagrees_by_sigmas']:>+6.1f}  {left}")
-        else:
-            lines.append(f"  {row['trace']:<{width}}  left out")
+                f"{row['chi2_reduced']:>6.2f}  {apart:>6}  {left}")
         lines += [_wrapped(f"[{reason['code']}] {reason['text']}", 6) for reason in row["reasons"]]
-    note = ("  radius: final, in um; apart: by how many sigmas the pulse wants another bench; "
-            "unexplained:\n  root mean square over the largest light, by column")
+    note = ("  radius: final, in um; apart: by how many sigmas the pulse wants another bench "
+            "(beside: it\n  does not take part); unexplained: root mean square over the largest "
+            "light, by column")
     return "\n".join(["Pulses", *lines, note])
 
 
