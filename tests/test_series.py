@@ -10,6 +10,7 @@ import pytest
 from scatterfit import files
 from scatterfit.apparatus.check import apparatus_from_mapping
 from scatterfit.cli import main
+from scatterfit.cli_demo import BENCH
 from scatterfit.errors import ChamberFileError, InvalidInputError
 from scatterfit.files_chamber import revised_chamber
 from scatterfit.files_simulate import simulate
@@ -80,6 +81,22 @@ def test_a_bench_that_is_off_is_brought_back(stated, pulses, store):
     assert any({p.first, p.second} == {WARMTH, "vapour.mole_fraction"} for p in found.pairs)
     assert np.all(np.linalg.eigvalsh(joint.covariance) > 0.0)
     assert json.dumps(found.to_dict(), allow_nan=False)
+
+
+@pytest.mark.slow
+def test_pulses_of_two_benches_are_not_averaged(store):
+    """Between two pulses a gain was trebled: no chamber file would be right for both."""
+    bench = apparatus_from_mapping(tomllib.loads(BENCH))
+    forward, side = bench.detectors
+    pair = []
+    for i, (number, gain) in enumerate(((5e9, 1e5), (2.5e10, 3e5))):
+        real = replace(bench, detectors=(forward, replace(side, gain=gain)))
+        one = simulate(real, count=1, number=number, seed=i, rate=10e3, duration=0.08,
+                       store=store)[0]
+        pair.append(SeriesPulse(f"p{i}.csv", bench, one.time, one.columns))
+    choice = chosen(bench, ("detector.side_V.gain_V_m",), ())
+    with pytest.raises(InvalidInputError, match=r"do not share one bench.*times theirs"):
+        calibrate(bench, pair, choice, settings(store, 2))
 
 
 @pytest.mark.slow

@@ -15,7 +15,13 @@ from scatterfit.measured_series.informed import (
     not_separated,
 )
 from scatterfit.measured_series.joint import joint_estimate, weighed
-from scatterfit.measured_series.look import first_look, second_look, starting_gain, with_gains
+from scatterfit.measured_series.look import (
+    Look,
+    first_look,
+    second_look,
+    starting_gain,
+    with_gains,
+)
 from scatterfit.measured_series.record import Calibration, Row, Shared, in_unit, unit_of
 from scatterfit.measured_series.unknowns import kind_of
 
@@ -23,6 +29,9 @@ _OUTLYING = 4.0
 _LOOSE = 8.0
 _LOOSE_ROUNDS = 5
 _POOR = 0.5
+_FOREIGN = 0.1
+_GAIN_APART = 4.0
+_STRANGER_ROUNDS = 3
 _UNCLEAR = {"not-described", "ambiguous-lobe"}
 
 
@@ -51,7 +60,8 @@ def calibrate(apparatus, pulses, choice, settings):
     Raises
     ------
     InvalidInputError
-        If no pulse can be used, or none says anything of what is to be learnt.
+        If no pulse can be used, none says anything of what is to be learnt, or half of them are
+        not described by any one bench.
     """
     free = sigmas_of(apparatus, choice)
     looks = list(settings["map"](partial(first_look, free=free, store=settings["store"]), pulses))
@@ -72,6 +82,7 @@ def calibrate(apparatus, pulses, choice, settings):
     warms = _from_there(warms, joint)
     joint = joint_estimate(warms, unknowns, joint.x, before, settings)
     looks, joint = _once_more((pulses, looks, warms), (unknowns, before, free), joint, settings)
+    looks, joint = _without_strangers(looks, joint, (unknowns, before), settings)
     return _calibration(joint, unknowns, (looks, choice, notes), settings), joint
 
 
@@ -101,6 +112,56 @@ def _once_more(series, known, joint, settings):
     order = {pulse.name: i for i, pulse in enumerate(pulses)}
     warms.sort(key=lambda warm: order[warm.name])
     return looks, joint_estimate(warms, unknowns, joint.x, before, settings)
+
+
+def _without_strangers(looks, joint, known, settings):
+    """Return looks and joint estimate without pulses whose light no common bench describes.
+
+    Such a pulse was described on its own: at the common bench it has been pulled to where its
+    numbers mean nothing, and has pulled the bench along.
+    """
+    unknowns, before = known
+    for _ in range(_STRANGER_ROUNDS):
+        strange = {a.name: a for a in joint.answers if max(a.left.values()) > _FOREIGN}
+        if not strange:
+            break
+        if 2 * len(strange) >= len(joint.answers) and len(joint.answers) > 1:
+            raise InvalidInputError(_no_common_bench(strange, joint, unknowns, looks))
+        warms = [_at_start(look.warm, unknowns, joint.x) for look in looks
+                 if look.warm is not None and look.name not in strange]
+        if not warms:
+            break
+        looks = [Look(look.name, None, "another-bench", _foreign(strange[look.name], look, (
+            unknowns, joint))) if look.name in strange else look for look in looks]
+        joint = joint_estimate(_from_there(warms, joint), unknowns, joint.x, before, settings)
+    return looks, joint
+
+
+def _foreign(answer, look, known):
+    """Return what is odd about a pulse that the common bench does not describe."""
+    column = max(answer.left, key=answer.left.get)
+    text = (f"described on its own, but at the bench of the others {answer.left[column]:.0%} of "
+            f"{column} stay unexplained")
+    unknowns, joint = known
+    for unknown, x in zip(unknowns, joint.x, strict=True):
+        own = look.warm.gains.get(unknown.key.split(".")[1]) if (
+            unknown.key.endswith(".gain_V_m")) else None
+        if own is None:
+            continue
+        apart = own[0] - float(np.log(unknown.at(x)))
+        if abs(apart) > _GAIN_APART * own[1]:
+            text += (f"; its own {unknown.key} would be {np.exp(apart):.3g} times theirs: state it "
+                     "for this pulse, or --hold it")
+    return text
+
+
+def _no_common_bench(strange, joint, unknowns, looks):
+    """Return the message where most pulses do not share a bench."""
+    named = [f"{look.name}: {_foreign(strange[look.name], look, (unknowns, joint))}"
+             for look in looks if look.name in strange]
+    more = f"; and {len(named) - 2} more" if len(named) > 2 else ""
+    return (f"{len(strange)} of {len(joint.answers)} pulses do not share one bench, nothing is "
+            f"written: {'; '.join(named[:2])}{more}")
 
 
 def _none_left(looks):
