@@ -28,6 +28,9 @@ class Births:
     """Standard deviation of the time of birth [s]."""
     finer: tuple["FinerClasses", ...] = ()
     """More classes, for light that varies faster than growth; the finest first."""
+    lengthening: float = 0.0
+    """ln of the effective duration over that of the classes: a hold goes on past its last sample,
+    nobody knows how far [-]."""
 
     @property
     def last(self):
@@ -61,8 +64,10 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
     time : ndarray, shape (n,)
         Increasing [s].
     log_rate : ndarray, shape (n,)
-        ln of the nucleation rate at those times [-]; the rate itself is straight in between, so
-        that its integral holds on average where few samples fall into the hold.
+        ln of the nucleation rate at those times [-]; straight in between for when droplets are
+        born, so that none is born where the gas path knows no supersaturation. For the effective
+        duration the rate itself is straight, so that its integral holds on average where few
+        samples fall into the hold.
     classes : int
         Number of classes.
     finer : sequence of tuple
@@ -96,12 +101,13 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
     first, last = max(kept[0] - 1, 0), min(kept[-1] + 1, time.size - 1)
     dense = np.linspace(time[first], time[last], _POINTS)
     low = np.maximum(log_rate, top - 60.0)
-    rate = np.interp(dense, time, np.exp(low - top))
-    step = dense[1] - dense[0]
-    share = step * rate
+    rate = np.exp(np.interp(dense, time, low) - top)
+    share = rate.copy()
     share[[0, -1]] *= 0.5
-    total = float(share.sum())
-    share = share / total
+    whole, step = float(share.sum()), dense[1] - dense[0]
+    share = share / whole
+    part = slice(first, last + 1)
+    total = float(np.trapezoid(np.exp(low[part] - top), time[part]))
     nodes, weights = _gauss_rule(dense, share, classes)
     more = []
     for count, spread in finer:
@@ -113,7 +119,7 @@ def births_from_rate(time, log_rate, classes=6, finer=FINER):
         times=nodes, weights=weights, median=float(np.interp(0.5, cumulative, dense)),
         effective=total, peak=float(dense[np.argmax(rate)]),
         spread=float(np.sqrt(share @ (dense - centre) ** 2)),
-        finer=tuple(more),
+        finer=tuple(more), lengthening=float(np.log(total / (step * whole))),
     )
 
 

@@ -9,6 +9,8 @@ source) [-]."""
 _DEPTH = 0.3
 _SIGNIFICANT = 3.5
 _FEWEST = 4
+_BRIDGE = 5
+_LOOKS = 3
 _RIMS = (0.07, 0.15, 0.3)
 """Lengths over which the ends of a hold settle, in halves of the hold [-]."""
 _PEAK = 1.2
@@ -21,7 +23,7 @@ def settle_hold(time, recorded, smoothed, log_rate, noise):
 
     The classical rate changes by several percent for one part in a thousand of pressure, so its
     peak picks the lowest of the noisy samples of a hold. Where the rate is within a factor
-    exp(-0.3) of its peak the recorded pressure is replaced by the plainest curve that the samples
+    exp(-0.3) of its level the recorded pressure is replaced by the plainest curve that the samples
     do not contradict: level, straight, a parabola, or level or straight with rims that decay.
 
     Parameters
@@ -50,8 +52,13 @@ def settle_hold(time, recorded, smoothed, log_rate, noise):
     array([5., 5., 5., 5., 5.])
     """
     peak = int(np.argmax(log_rate))
-    near = log_rate > log_rate[peak] - _DEPTH
-    first, last = _run(near, peak)
+    top = log_rate[peak]
+    for _ in range(_LOOKS):
+        # A few noisy samples do not end a hold, nor does one low excursion say how deep it is.
+        near = np.convolve(log_rate > top - _DEPTH, np.ones(_BRIDGE), mode="same") > 0.5 * _BRIDGE
+        near[peak] = True
+        first, last = _run(near, peak)
+        top = float(np.median(log_rate[first:last + 1]))
     part = slice(first, last + 1)
     good = np.isfinite(recorded[part])
     if good.sum() < _FEWEST or not noise > 0.0:

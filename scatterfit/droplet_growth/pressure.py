@@ -3,6 +3,7 @@
 import numpy as np
 
 _CONFIDENCE = 2.5
+_SHY = 3.0
 _WIDEST_FRACTION = 8
 _BESIDE = 2
 _SPIKE = 30.0
@@ -14,7 +15,8 @@ def smooth(values):
 
     Each sample becomes the mean over the widest symmetric window, of widths 1, 3, 5, 9, 17, ...
     samples, whose mean agrees within the noise with those of all narrower windows: wide where
-    the record is straight, narrow at corners.
+    the record is straight, narrow at corners. Where it bends evenly, the mean is moved to the
+    curve.
 
     Parameters
     ----------
@@ -46,6 +48,7 @@ def smooth(values):
     widest = max(count // _WIDEST_FRACTION, 1)
     padded = np.pad(values, widest, mode="reflect", reflect_type="odd")
     total = np.concatenate([[0.0], np.cumsum(padded - values[0])])
+    bend = np.zeros(count)
     centre = np.arange(count) + widest
     low = np.full(count, -np.inf)
     high = np.full(count, np.inf)
@@ -60,8 +63,25 @@ def smooth(values):
         high = np.minimum(high, mean + margin)
         growing &= low <= high
         best = np.where(growing, mean, best)
+        if half > 1:
+            bend = np.where(growing, _bend(total, centre, half, (mean - values[0], noise)), bend)
         half = half + 1 if half < 2 else half * 2
-    return best, noise
+    return best + bend, noise
+
+
+def _bend(total, centre, half, about):
+    """Return by how much means over a window miss a curve, where the noise lets it be seen.
+
+    A mean lies off by the curvature times the window's second moment: that over half the window
+    tells how much. The more the difference looks like noise, the less of it is believed.
+    """
+    mean, noise = about
+    inner = half // 2
+    ratio = inner * (inner + 1) / (half * (half + 1))
+    narrow = (total[centre + inner + 1] - total[centre - inner]) / (2 * inner + 1)
+    change = (narrow - mean) / (1.0 - ratio)
+    variance = noise**2 * (1.0 / (2 * inner + 1) - 1.0 / (2 * half + 1)) / (1.0 - ratio) ** 2
+    return change * np.maximum(0.0, 1.0 - _SHY * variance / np.maximum(change**2, 1e-300))
 
 
 def _without_spikes(values):

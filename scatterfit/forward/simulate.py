@@ -1,5 +1,6 @@
 """Synthetic pulses with their truth."""
 
+import math
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -13,6 +14,7 @@ from scatterfit.forward.growth_model import Cloud
 from scatterfit.forward.light import spread_table
 from scatterfit.forward.model import channel_signals
 
+_FINE = 1e-5
 _CLASSES = 16
 _FLOOR = 0.0013
 _SPREAD_VARIANCE = 7e-6
@@ -172,13 +174,14 @@ def simulate_pulse(apparatus, scenario, make_model, generator):
     """
     count = round((scenario.duration + 5e-3) * scenario.rate) + 1
     time = np.round(-5e-3 + np.arange(count) / scenario.rate, 12)
-    expected, pressure = {}, None
+    expected, pressure, real = {}, None, None
+    # Nature does not wait for samples: what is true follows from a finer record.
+    steps = math.ceil(1.0 / (scenario.rate * _FINE))
+    fine = np.linspace(time[0], time[-1], (count - 1) * steps + 1)
     if apparatus.pressure is not None:
         pressure = _pressure(apparatus, scenario, time)
-    setup = growth_setup(
-        apparatus, time, None if pressure is None else pressure - apparatus.pressure.offset,
-        duration=scenario.duration, classes=_CLASSES,
-    )
+        real = _pressure(apparatus, scenario, fine) - apparatus.pressure.offset
+    setup = growth_setup(apparatus, fine, real, duration=scenario.duration, classes=_CLASSES)
     model = make_model(setup)
     delay = 0.0 if setup.clock_known else 8.5e-3
     cloud = Cloud(**{

@@ -254,7 +254,7 @@ def _misfits(problem, spread, radius, density):
             depth *= _COARSE(channel.path)
         if channel.kind == "scatter":
             # Of order one, so that squares and sums keep their digits.
-            unit = np.max(density) * np.max(tables[channel.row])
+            unit = float(np.max(density) * np.max(tables[channel.row])) or 1.0
             shape = (tables[channel.row].ravel() / unit).astype(_COARSE).take(index)
             shape *= density
             if channel.path > 0.0:

@@ -19,8 +19,8 @@ _DAMPING = 1e-4
 _RELATIVE = 1e-5
 # How far first order serves: what is left out is of the square of these.
 _NEAR = {
-    "number": 0.02, "scale": 0.004, "accommodation": 0.015, "temperature": 5e-4, "vapour": 4e-3,
-    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3, "stretch": 0.01,
+    "number": 0.02, "scale": 0.004, "accommodation": 0.007, "temperature": 5e-4, "vapour": 4e-3,
+    "threshold": 4e-3, "bend": 6e-3, "creep": 6e-3, "stretch": 0.006,
 }
 # How far a descent may go before growth is solved again.
 _REACH = {

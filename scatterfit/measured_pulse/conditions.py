@@ -132,10 +132,13 @@ def nucleation_conditions(setup, concentration, stretch=None):
     covariance = float(hold.temperature * hold.saturation_ratio * (warm @ wet[:3]))
     effective, rate = None, None
     if hold.effective and setup.threshold is None:
-        longer = Quantity(1.0, 0.0) if stretch is None else stretch
-        duration = hold.effective * longer.value
-        spread = float(np.linalg.norm([
-            sigmas["effective"], longer.sigma / longer.value, _SAMPLING / max(hold.samples, 1.0)]))
+        # A duration that the fit was free to change knows what the samples leave open.
+        unseen = _SAMPLING / max(hold.samples, 1.0)
+        duration = hold.effective
+        if stretch is not None:
+            unseen = stretch.sigma / stretch.value
+            duration *= stretch.value * np.exp(-setup.births.lengthening)
+        spread = float(np.hypot(sigmas["effective"], unseen))
         effective = Quantity(duration, duration * spread)
         if concentration is not None:
             path = setup.path

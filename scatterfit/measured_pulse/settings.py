@@ -114,7 +114,7 @@ def _free(prepared, angle_base, angle_offsets):
     stretch = _stretch_sigma(prepared)
     if stretch > _LEAST_STRETCH:
         names.append("stretch")
-        priors["stretch"] = (0.0, stretch)
+        priors["stretch"] = (setup.births.lengthening, stretch)
     priors["scale"] = growth_scale_prior(setup, free)
     if setup.threshold is not None:
         names.append("threshold")
