@@ -211,12 +211,19 @@ def explore(problem, candidates, closer):
         if turn == _CLEARED_AFTER and not _good(rough[0]):
             problem, rough, disturbances = _cleared(problem, rough)
             if _hopeless(rough[0]):
-                candidates, start = closer(), 0
+                # Neither list alone: what one misses stands in the other.
+                candidates, start = _in_turn(closer(), candidates[start:]), 0
         if (len(rough) > 1 and _good(rough[0])) or start >= len(candidates):
             break
     # What a cloud in the wrong lobe seemed to need is forgotten.
     known = rough and _good(rough[0])
     return settle(problem, rough), disturbances if known else ((),) * len(disturbances)
+
+
+def _in_turn(first, second):
+    """Return two lists as one that takes from each in turn, as long as both last."""
+    both = [candidate for pair in zip(first, second, strict=False) for candidate in pair]
+    return [*both, *first[len(second):], *second[len(first):]]
 
 
 def _sorted(solutions):

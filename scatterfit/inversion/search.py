@@ -16,6 +16,7 @@ _NODES = 70
 _COARSE = np.float32
 _TOLERANCE = 5e-4
 _STICKING = (0.0, -1.2)
+_MORE_STICKING = (0.0, -0.6, -1.2, -1.9)
 _VARIANCE = 2e-5
 _RATIO = 4.0
 _SPREADS = 5
@@ -56,7 +57,8 @@ def search(problem, delays, widest, count=6, *, dense=False):
         Candidates to return at the most.
     dense : bool
         Whether numbers stand so close that the radius at which the vapour is used up moves by a
-        part of a lobe from one to the next, at several times the cost.
+        part of a lobe from one to the next, and more sticking coefficients are tried, at several
+        times the cost.
 
     Returns
     -------
@@ -70,7 +72,9 @@ def search(problem, delays, widest, count=6, *, dense=False):
     scales = np.linspace(-widest, widest, scale_count(setup.apparatus, widest))
     lone = grow(setup, Cloud(number=0.0))
     levels = number_levels(setup, max(float(lone.radius[0].max()), 1e-7), dense=dense)
-    sticking, level = (v.ravel() for v in np.meshgrid(_STICKING, levels, indexing="ij"))
+    # With a gauge there is time for more of both.
+    some = _MORE_STICKING if dense and len(delays) == 1 else _STICKING
+    sticking, level = (v.ravel() for v in np.meshgrid(some, levels, indexing="ij"))
     tables = np.stack([widened(problem.model.light, _VARIANCE * _RATIO**k)
                        for k in range(_SPREADS)], axis=1)
     width = problem.priors.get(axis, (0.0, 0.15))[1]
