@@ -365,6 +365,15 @@ def test_check_passes_sound_nodes_and_stops_wrong_ones(small):
         check_node(recipe, moved, m)
 
 
+def test_check_is_not_fooled_by_narrow_ripple(make_bench):
+    """Backward light of a large index: three droplets would miss the average by 6e-4 here."""
+    bench = make_bench(
+        beam={"wavelength_nm": 450.0}, detector={"angle_deg": 135.03, "half_angle_deg": 1.61},
+        analysis={"max_radius_um": 1.01})
+    kernel = build_kernel(bench, 1.0002, 1.406, angle_reach=np.radians(0.6))
+    assert len(kernel.nodes) >= 4
+
+
 def test_check_stops_a_wrong_series(small, monkeypatch):
     def swapped(recipe, index, sizes):
         turned = replace(recipe, polarization=0.0)
