@@ -120,6 +120,8 @@ def _next(folder, chamber):
         "      one pulse: all that its fit says",
         f"  scatterfit check {chamber} {trace}",
         "      what the bench implies, how the trace was understood",
+        f"  scatterfit calibrate {chamber} {folder}",
+        "      what its pulses say together about gains, angles, temperature",
         "  scatterfit new bench.toml",
         "      a chamber file for your own bench",
         "",

@@ -7,8 +7,11 @@ _HARMONICS = (1, 2, 3)
 _WORTH = 40.0
 _WORTH_DRIFT = 16.0
 _MEDIAN_SQUARE = 0.455
-# Below so many periods of the mains a hum cannot be told from lobes (common practice, no source).
+# Below so many periods of the mains a hum cannot be told from lobes (common practice, no source);
+# half as many do where a gauge says when droplets come and some of the hum is seen before them.
 _PERIODS = 2.5
+_PERIODS_SEEN = 1.25
+_BEFORE = 0.25
 _GLITCH = 6.0
 _NEIGHBOURS = 4
 
@@ -93,7 +96,7 @@ def _stacked_groups(problem, evaluation, chosen):
         for name, group in candidate_columns(time).items():
             if name in chosen[i] or _needs_fundamental(name, chosen[i]):
                 continue
-            if name.startswith("hum") and _periods(name, time[weight > 0.0]) < _PERIODS:
+            if name.startswith("hum") and not _told(problem, name, time[weight > 0.0]):
                 continue
             own = (group * full * weight).T
             columns = np.zeros((evaluation.residual.size, own.shape[1]))
@@ -103,11 +106,15 @@ def _stacked_groups(problem, evaluation, chosen):
     return groups
 
 
-def _periods(name, time):
-    """Return how many periods of a hum's mains the used times span [-]."""
+def _told(problem, name, time):
+    """Return whether the used times are enough to tell a hum from lobes."""
+    if not time.size:
+        return False
     frequency = float(name.split()[1])
     mains = next(m for m in MAINS if frequency / m in _HARMONICS)
-    return mains * np.ptp(time) if time.size else 0.0
+    setup = problem.model.setup
+    before = mains * (setup.births.times[0] - time[0]) if setup.clock_known else 0.0
+    return mains * np.ptp(time) >= (_PERIODS_SEEN if before >= _BEFORE else _PERIODS)
 
 
 def _worth(name):
