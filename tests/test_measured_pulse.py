@@ -433,6 +433,18 @@ def test_depletion_without_extrema_is_not_trusted_alone(small, store):
     assert result["verdict"] == "ambiguous"
 
 
+def test_hum_without_extrema_is_not_trusted(small, store):
+    """Two periods of hum pass for a rise without peaks and troughs: 7 percent of radius."""
+    def hum(time, columns):
+        light = columns["scatter1_V"]
+        light += 0.03 * np.ptp(light) * np.sin(2 * np.pi * 60 * time + 0.3)
+
+    faint = small(detector={"angle_deg": 20.0, "half_angle_deg": 4.0})
+    result, _ = changed(faint, store, hum, number=8e9, duration=0.03)
+    assert {"few-extrema", "hum"} <= codes(result)
+    assert result["verdict"] == "ambiguous"
+
+
 def test_a_radius_at_the_end_of_the_tables_says_so(small, store):
     """Droplets end at 1.463 um: just within tables to 1.48 um, beyond those to 1.35 um."""
     near = small(analysis={"max_radius_um": 1.48})

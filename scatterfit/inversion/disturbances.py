@@ -8,7 +8,7 @@ _WORTH = 40.0
 _WORTH_DRIFT = 16.0
 _MEDIAN_SQUARE = 0.455
 # Below so many periods of the mains a hum cannot be told from lobes (common practice, no source);
-# half as many do where a gauge says when droplets come and some of the hum is seen before them.
+# half as many do where some of the hum is seen before the droplets.
 _PERIODS = 2.5
 _PERIODS_SEEN = 1.25
 _BEFORE = 0.25
@@ -90,13 +90,15 @@ def _stacked_groups(problem, evaluation, chosen):
     """Return every group not chosen yet as weighted columns over all channels' residuals."""
     time = problem.bins.time
     groups, start = {}, 0
+    first = problem.model.setup.births.times[0]
     for i, channel in enumerate(problem.model.channels):
         weight, basis = problem.bins.weights[i], evaluation.bases[i]
         full = evaluation.fits[i] if channel.kind == "transmission" else np.ones_like(weight)
         for name, group in candidate_columns(time).items():
             if name in chosen[i] or _needs_fundamental(name, chosen[i]):
                 continue
-            if name.startswith("hum") and not _told(problem, name, time[weight > 0.0]):
+            if name.startswith("hum") and not _told(
+                    name, time[weight > 0.0], evaluation.cloud.delay + first):
                 continue
             own = (group * full * weight).T
             columns = np.zeros((evaluation.residual.size, own.shape[1]))
@@ -106,14 +108,13 @@ def _stacked_groups(problem, evaluation, chosen):
     return groups
 
 
-def _told(problem, name, time):
+def _told(name, time, birth):
     """Return whether the used times are enough to tell a hum from lobes."""
     if not time.size:
         return False
     frequency = float(name.split()[1])
     mains = next(m for m in MAINS if frequency / m in _HARMONICS)
-    setup = problem.model.setup
-    before = mains * (setup.births.times[0] - time[0]) if setup.clock_known else 0.0
+    before = mains * (birth - time[0])
     return mains * np.ptp(time) >= (_PERIODS_SEEN if before >= _BEFORE else _PERIODS)
 
 

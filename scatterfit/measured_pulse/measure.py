@@ -303,6 +303,8 @@ def _verdict(fit, reasons, left):
     unsure = unsure or {"few-extrema", "growth-scale-off"} <= codes
     # Nor can growth that slows be told from vapour that depletes, which alone gives the number.
     unsure = unsure or {"few-extrema", "number-from-depletion"} <= codes
+    # Nor a slow rise of the light from hum.
+    unsure = unsure or {"few-extrema", "hum"} <= codes
     return "ambiguous" if left or unsure or "extrema-disagree" in codes else "accepted"
 
 
