@@ -8,7 +8,7 @@ inputs there; nothing is known of the droplets but the light.
 
 import numpy as np
 import pytest
-from shared_data import REAL, needs_real
+from shared_data import REAL, TUBE, needs_real
 
 from scatterfit import files
 from scatterfit.files_fit import fit_loaded
@@ -16,27 +16,6 @@ from scatterfit.files_fit import fit_loaded
 # Two quiet ones, one whose laser hops throughout, one that hops in the middle of the growth: the
 # others take as long and are in docs/studies.md.
 TRIED = ("by-mixture-5.csv", "by-pressure-9.csv", "by-pressure-11.csv", "by-pressure-15.csv")
-BENCH = """
-[beam]
-wavelength_nm = 635
-polarization = "unpolarized"
-[transmission]
-column = "transmitted_V"
-path_mm = 900
-path_mm_sigma = 200
-[pressure]
-column = "pressure_kPa"
-[vapour]
-substance = "water"
-saturation_ratio = 0.97
-saturation_ratio_sigma = 0.04
-[gas]
-carrier = "air"
-[seed]
-[chamber]
-temperature_K = 295
-temperature_K_sigma = 2
-"""
 # Where the laser neither hops nor drifts by more than a percent in the first half second.
 QUIET = {"by-mixture-5.csv", "by-pressure-9.csv"}
 # Extinction of a growing cloud of water droplets at 635 nm stands nearly still at these radii
@@ -47,7 +26,7 @@ SHOULDERS = np.array([0.94, 1.9, 2.9])
 @pytest.fixture(scope="module")
 def bench(tmp_path_factory):
     path = tmp_path_factory.mktemp("bench") / "tube.toml"
-    path.write_text(BENCH, encoding="utf-8")
+    path.write_text(TUBE, encoding="utf-8")
     return path
 
 

@@ -12,13 +12,16 @@ a series at four pressures, and at one. ``real``: the open recordings. Not part 
 
 import argparse
 import os
+import sys
 import tempfile
 import time as clock
 from pathlib import Path
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
 import numpy as np
+from shared_data import TUBE
 
 from scatterfit import cli_calibrate, files
 from scatterfit.files_fit import fit_loaded
@@ -64,29 +67,7 @@ TRUTH = {"detector.scatter1_V.gain_V_m": 6.9e4, "detector.scatter1_V.angle_deg":
          "chamber.temperature_K": 297.4}
 SCALE = 1.015
 THIN = 500.0
-TUBE = """
-[beam]
-wavelength_nm = 635
-polarization = "unpolarized"
-[transmission]
-column = "transmitted_V"
-path_mm = 900
-path_mm_sigma = 200
-[pressure]
-column = "pressure_kPa"
-[vapour]
-substance = "water"
-saturation_ratio = 0.97
-saturation_ratio_sigma = 0.04
-[gas]
-carrier = "air"
-[seed]
-[chamber]
-temperature_K = 295
-temperature_K_sigma = 2
-[analysis]
-window_ms = [-300.0, 500.0]
-"""
+_WINDOW = "[analysis]\nwindow_ms = [-300.0, 500.0]\n"
 
 
 def chamber(text):
@@ -208,7 +189,7 @@ def study_accommodation(mass, thermal, pressures, seed, rough=False):
 
 def study_real(folder):
     """Return what the open recordings say together about their tube."""
-    path = chamber(TUBE)
+    path = chamber(TUBE + _WINDOW)
     bench = files.read_chamber(path)
     listed = cli_calibrate.traces_of(Path(folder), recursive=False, limit=None)
     pulses, failed = cli_calibrate.read_pulses(path, Path(folder), listed, {})
