@@ -90,17 +90,19 @@ def _draw_gains(axis, result):
                     fontsize=_TEXT)
     axis.set_ylabel("gain over the common one (%)", fontsize=_TEXT)
     if len(result["gain_drift"]) > 1:
-        axis.legend(fontsize=_SMALL, frameon=False)
+        axis.legend(fontsize=_SMALL, frameon=False, loc="lower right", bbox_to_anchor=(1.0, 1.0),
+                    ncols=2)
 
 
 def _shown(drifts):
-    """Return the limits that hold the better known half of the pulses and their bars."""
+    """Return the limits that hold the better known half with bars, and all but the worst known."""
     ends = []
     for one in drifts:
         value = np.array([p["relative_percent"]["value"] for p in one["pulses"]])
         sigma = np.array([p["relative_percent"]["sigma"] for p in one["pulses"]])
         known = sigma <= _HALF * np.median(sigma)
         ends += [*(value - sigma)[known], *(value + sigma)[known], 0.0]
+        ends += list(value[sigma <= _POOR * np.median(sigma)])
     room = 0.08 * (max(ends) - min(ends))
     return min(ends) - room, max(ends) + room
 
