@@ -15,7 +15,7 @@ from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.setup import growth_setup
 from scatterfit.errors import InvalidInputError
 from scatterfit.files_simulate import simulate
-from scatterfit.forward.cloud_state import cloud_state, hermite
+from scatterfit.forward.cloud_state import CloudState, hermite
 from scatterfit.forward.growth_model import Cloud, linear_growth, per_mole
 from scatterfit.forward.light import cloud_light, look_up, spread_table
 from scatterfit.forward.low_pass import low_pass
@@ -344,9 +344,9 @@ def test_growth_followed_to_first_order(model, name):
              "vapour": 0.02, "bend": 0.04, "creep": 0.04}
     for size in (steps[name], 0.5 * steps[name]):
         cloud = replace(start, **{name: getattr(start, name) + size})
-        there = cloud_state(linear, cloud, TIME)
-        exact = cloud_state(linear_growth(model.setup, cloud), cloud, TIME)
-        plain = cloud_state(linear, start, TIME)
+        there = CloudState(linear, cloud, TIME)
+        exact = CloudState(linear_growth(model.setup, cloud), cloud, TIME)
+        plain = CloudState(linear, start, TIME)
         change = np.log(there.radius[:, late] / exact.radius[:, late])
         whole = np.abs(np.log(exact.radius[:, late] / plain.radius[:, late])).max()
         left.append(np.abs(change).max())
@@ -380,7 +380,7 @@ def test_a_stretched_hold_is_a_longer_hold(make_bench):
     radii = []
     for setup, cloud in ((short, replace(CLOUD, stretch=np.log(1.1))),
                          (long, replace(CLOUD, delay=-0.05e-3))):
-        state = cloud_state(linear_growth(setup, cloud), cloud, time)
+        state = CloudState(linear_growth(setup, cloud), cloud, time)
         assert state.growth.converged
         radii.append(state.growth.weights @ state.radius)
     # The recompression after it is a tenth longer too.
@@ -396,7 +396,7 @@ def test_growth_after_a_stated_hold_does_not_depend_on_the_nodes(make_bench, cha
     mean = []
     for options in ({"duration": 0.1}, {"duration": 0.1, **change}):
         linear = linear_growth(growth_setup(bench, **options), CLOUD)
-        mean.append(linear.growth.weights @ cloud_state(linear, CLOUD, time).radius)
+        mean.append(linear.growth.weights @ CloudState(linear, CLOUD, time).radius)
     assert mean[0] == pytest.approx(mean[1], rel=2e-4)
 
 

@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from scatterfit.compiled import compiled
 from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.properties import horner, mean_speed
 from scatterfit.droplet_growth.single_droplet import growth_rate
@@ -153,7 +154,24 @@ def solve_cloud(  # noqa: PLR0913  (each argument is a source of its own)
         temperature, share = cloud.gas.state(condensed, temperature)
     droplet_temperature = temperature[:, None, :] + warmth
     steps = 3 if start is None else 1
-    for _ in range(_ROUNDS):
+    rounds = _compiled_rounds if compiled() else _rounds
+    solved = rounds(cloud, square, (condensed, temperature, share, droplet_temperature),
+                    (_ROUNDS, steps, tolerance))
+    square, rate, (condensed, temperature, share, droplet_temperature), moved = solved
+    return CloudGrowth(
+        time=path.time, square=square, square_rate=rate,
+        length=cloud.length[:, 0, 0], start_radius=start_radius, birth_times=cloud.times,
+        weights=weights, condensed=condensed, temperature=temperature, vapour_fraction=share,
+        droplet_temperature=droplet_temperature, pressure=path.pressure,
+        droplets_per_mole=cloud.number, converged=bool(moved < _SERVES),
+    )
+
+
+def _rounds(cloud, square, state, limits):
+    """Return (r + l)^2, its rate, the state and the last change after the rounds."""
+    condensed, temperature, share, droplet_temperature = state
+    most, steps, tolerance = limits
+    for _ in range(most):
         radius = np.sqrt(square) - cloud.length
         rate, droplet_temperature, slope = cloud.rate(
             radius, (temperature, share), droplet_temperature, steps
@@ -169,13 +187,34 @@ def solve_cloud(  # noqa: PLR0913  (each argument is a source of its own)
         temperature, share = cloud.gas.state(condensed, temperature)
         if moved < tolerance:
             break
-    return CloudGrowth(
-        time=path.time, square=np.where(alive, square, cloud.floor + since), square_rate=rate,
-        length=cloud.length[:, 0, 0], start_radius=start_radius, birth_times=cloud.times,
-        weights=weights, condensed=condensed, temperature=temperature, vapour_fraction=share,
-        droplet_temperature=droplet_temperature, pressure=path.pressure,
-        droplets_per_mole=cloud.number, converged=bool(moved < _SERVES),
+    square = np.where(alive, square, cloud.floor + since)
+    return square, rate, (condensed, temperature, share, droplet_temperature), moved
+
+
+def _compiled_rounds(cloud, square, state, limits):
+    """Return what ``_rounds`` does."""
+    from scatterfit.droplet_growth.rounds_compiled import rounds  # noqa: PLC0415  (loads numba)
+
+    def fresh(values, shape=None):
+        values = values if shape is None else np.broadcast_to(values, shape)
+        return np.array(values, dtype=float, order="C")
+
+    p, path = cloud.properties, cloud.path
+    one = fresh(cloud.fraction[:, 0]).shape
+    many = (*one, path.time.size)
+    condensed, temperature, share, droplet_temperature = (fresh(values) for values in state)
+    square = fresh(square, droplet_temperature.shape)
+    rate, moved = rounds(
+        (p.film.interleaved, p.liquid.interleaved, float(p.molar_volume), float(p.heat_capacity)),
+        (fresh(path.time), fresh(path.pressure), fresh(cloud.gas.undisturbed, many),
+         fresh(cloud.fraction[:, 0]), fresh(cloud.creep, (one[0], 1, many[1]))[:, 0]),
+        (float(cloud.start_radius), fresh(cloud.length[:, 0, 0]), fresh(cloud.moles[:, 0]),
+         fresh(cloud.scale[:, 0, 0]), fresh(cloud.bend[:, 0, 0]),
+         *(fresh(a[:, 0, 0]) for a in cloud.accommodation), *(np.array(x) for x in cloud.place),
+         fresh(cloud.weights)),
+        (square, condensed, temperature, share, droplet_temperature), limits,
     )
+    return square, rate, (condensed, temperature, share, droplet_temperature), moved
 
 
 class _Cloud:

@@ -112,6 +112,16 @@ class _Table:
         self.values, self.rises = values[..., :-1], np.diff(values)
         self.last = self.values.shape[-1] - 1e-9
 
+    @cached_property
+    def interleaved(self):
+        """Return the table as compiled loops read it.
+
+        Its first temperature [K], cells per kelvin [1/K], and value and rise of each property side
+        by side, shape (cells, 2 rows).
+        """
+        pairs = np.stack([self.values, self.rises], axis=1).reshape(-1, self.values.shape[-1])
+        return float(self.start), float(self.cells_per_kelvin), np.ascontiguousarray(pairs.T)
+
     def row(self, index):
         """Return a table of one property alone."""
         return _Table(self.start, self.cells_per_kelvin,

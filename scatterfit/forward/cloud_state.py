@@ -1,12 +1,16 @@
 """The cloud at the samples: radii of its classes, and how many droplets there are."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
-from scatterfit.forward.growth_model import LinearGrowth
+from scatterfit.droplet_growth.births import Births
+from scatterfit.forward.growth_model import Cloud, LinearGrowth
+from scatterfit.forward.light import SpreadTable
 
-_LARGEST_MOVE = 10.0
+LARGEST_MOVE = 10.0
+"""Of ln r by first order, either way [-]."""
 
 
 @dataclass(frozen=True)
@@ -23,77 +27,119 @@ class Segment:
 
 @dataclass(frozen=True)
 class CloudState:
-    """The cloud at the sample times."""
+    """The cloud at the sample times; what nobody asks for is not worked out."""
 
-    radius: np.ndarray
-    """Of the solved classes, shape (c, n) [m]; zero before birth."""
-    number_density: np.ndarray
-    """Shape (n,) [1/m^3]."""
-    log_radius_by: dict
-    """Derivatives of ln r of the solved classes by each parameter, shape (c, n)."""
-    log_density_by: dict
-    """Derivatives of ln of the number density, shape (n,)."""
     linear: LinearGrowth
     """The solved cloud behind it."""
-    segments: tuple[Segment, ...] = ()
-    """The same, in order of time, with more classes where births still spread the radii."""
-    table: object = None
-    """The cross sections it was seen with (SpreadTable)."""
+    cloud: Cloud
+    """Where it is evaluated."""
+    time: np.ndarray
+    """Samples, shape (n,) [s]."""
+    names: tuple[str, ...] = ()
+    """Parameters to differentiate by."""
+    births: Births | None = None
+    """With finer classes."""
+    table: SpreadTable | None = None
+    """The cross sections it was seen with."""
 
     @property
     def growth(self):
         """Return the solved cloud (CloudGrowth)."""
         return self.linear.growth
 
+    @property
+    def clock(self):
+        """Return the samples on the clock of the pressure, shape (n,) [s]."""
+        return self.time - self.cloud.delay
 
-def cloud_state(linear, cloud, time, names=(), births=None):
-    """Return radius and number density at the sample times, with their derivatives.
+    @property
+    def radius(self):
+        """Return radii of the solved classes, zero before birth, shape (c, n) [m]."""
+        return self._whole.radius
+
+    @property
+    def log_radius_by(self):
+        """Return derivatives of ln r of the solved classes by each parameter, shape (c, n)."""
+        return self._whole.log_radius_by
+
+    @cached_property
+    def log_density_by(self):
+        """Return derivatives of ln of the number density, shape (n,)."""
+        index, t, _ = self._place
+        return {name: _straight(row, index, t) for name, row in self.linear.log_density_by.items()}
+
+    @cached_property
+    def number_density(self):
+        """Return droplets per volume, shape (n,) [1/m^3]."""
+        index, t, _ = self._place
+        lone = self.growth.number_density[0] * np.exp(-self.linear.cloud.depletion)
+        thinner = _thinner(self.linear, self.cloud, self.log_density_by)
+        return _straight(lone, index, t) * np.exp(thinner)
+
+    @cached_property
+    def stretches(self):
+        """Return samples and classes to see them with, in order of time.
+
+        Each is the first sample, the sample after the last, and finer classes or ``None`` where
+        the solved ones do.
+        """
+        found, start, clock = [], 0, self.clock
+        for finer in self.births.finer if self.births is not None else ():
+            last = self.linear.resolved_from(finer.spread)
+            end = max(int(np.searchsorted(clock, last, side="right")), start)
+            if end > start:
+                found.append((start, end, finer))
+            start = end
+        if start < clock.size:
+            found.append((start, clock.size, None))
+        return tuple(found)
+
+    @cached_property
+    def segments(self):
+        """Return the stretches with more classes where births still spread the radii."""
+        whole, segments = self._whole, []
+        for start, end, finer in self.stretches:
+            part = slice(start, end)
+            if finer is None:
+                segments.append(Segment(
+                    whole.radius[:, part], whole.weights,
+                    {name: rows[:, part] for name, rows in whole.log_radius_by.items()},
+                ))
+            else:
+                here = tuple(values[part] for values in self._place)
+                segments.append(_classes(self.linear, self.cloud, self.clock[part], here,
+                                         self.names, (self.births, finer)))
+        return tuple(segments)
+
+    @cached_property
+    def _place(self):
+        return _places(self.growth.time, self.clock)
+
+    @cached_property
+    def _whole(self):
+        return _classes(self.linear, self.cloud, self.clock, self._place, self.names)
+
+
+def finer_times(linear, births, finer):
+    """Return when finer classes are born once births last longer or shorter.
 
     Parameters
     ----------
     linear : LinearGrowth
-        A solution at or near the cloud.
-    cloud : Cloud
-        Where to evaluate.
-    time : ndarray, shape (n,)
-        Samples, increasing [s].
-    names : sequence of str
-        Parameters to differentiate by.
-    births : Births, optional
-        With finer classes, used while births spread the radii; the solved classes serve where it
-        is missing.
+        With the births as they were solved.
+    births : Births
+        As the setup has them.
+    finer : FinerClasses
+        Of those births.
 
     Returns
     -------
-    state : CloudState
-        Per class and sample.
+    times : ndarray, shape (f,)
+        Births [s].
     """
-    growth = linear.growth
-    clock = time - cloud.delay
-    place = _places(growth.time, clock)
-    index, t, _ = place
-    density = _straight(growth.number_density[0] * np.exp(-linear.cloud.depletion), index, t)
-    density_by = {
-        name: _straight(row, index, t) for name, row in linear.log_density_by.items()
-    }
-    density = density * np.exp(_thinner(linear, cloud, density_by))
-    whole = _classes(linear, cloud, clock, place, names)
-    segments, start = [], 0
-    for finer in births.finer if births is not None else ():
-        end = max(_unresolved(growth, finer.spread, clock), start)
-        if end > start:
-            part = slice(start, end)
-            here = tuple(values[part] for values in place)
-            segments.append(_classes(linear, cloud, clock[part], here, names, (births, finer)))
-        start = end
-    if start < clock.size:
-        segments.append(Segment(
-            whole.radius[:, start:], whole.weights,
-            {name: rows[:, start:] for name, rows in whole.log_radius_by.items()},
-        ))
-    return CloudState(
-        whole.radius, density, whole.log_radius_by, density_by, linear, tuple(segments)
-    )
+    times = linear.growth.birth_times[0]
+    longer = (times[-1] - times[0]) / (births.times[-1] - births.times[0])
+    return times[0] + longer * (finer.times - births.times[0])
 
 
 def _classes(linear, cloud, clock, place, names, births=None):
@@ -108,8 +154,7 @@ def _classes(linear, cloud, clock, place, names, births=None):
     rows = _straight(np.array(rows), index, t) if rows else np.empty((0, *square.shape))
     if births is not None:
         plain, finer = births
-        longer = (times[-1] - times[0]) / (plain.times[-1] - plain.times[0])
-        times = times[0] + longer * (finer.times - plain.times[0])
+        times = finer_times(linear, plain, finer)
         weights, square, rows = finer.weights, finer.carry @ square, finer.carry @ rows
     length = growth.length[0]
     born = clock > times[:, None]
@@ -119,24 +164,10 @@ def _classes(linear, cloud, clock, place, names, births=None):
     move = _log_move(linear, cloud, by)
     if move is not None:
         # Far from where growth was solved first order is no guide, but must stay a number.
-        safe = safe * np.exp(np.clip(move, -_LARGEST_MOVE, _LARGEST_MOVE))
+        safe = safe * np.exp(np.clip(move, -LARGEST_MOVE, LARGEST_MOVE))
     if "delay" in names:
         by["delay"] = np.where(born, rows[-1] / (-2.0 * (safe + length) * safe), 0.0)
     return Segment(np.where(born, safe, 0.0), weights, by)
-
-
-def _unresolved(growth, resolved, clock):
-    """Return how many of the first samples have radii spread by birth by more than a limit.
-
-    Droplets born early grew in the supersaturation of the hold: their radii differ by more than
-    their ages say, so the spread is that of the solved classes.
-    """
-    log_radius = np.log(growth.radius[0])
-    mean = growth.weights @ log_radius
-    spread = np.sqrt(np.maximum(growth.weights @ (log_radius - mean) ** 2, 0.0))
-    wide = (spread > resolved) | (growth.time < growth.birth_times[0].max())
-    last = growth.time[np.flatnonzero(wide)[-1]] if wide.any() else -np.inf
-    return int(np.searchsorted(clock, last, side="right"))
 
 
 def _thinner(linear, cloud, density_by):

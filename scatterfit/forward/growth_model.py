@@ -1,6 +1,7 @@
 """A cloud's parameters, its growth, and how growth answers to them."""
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -69,6 +70,41 @@ class LinearGrowth:
     """Derivatives of ln r at the nodes by parameter, shape (c, m)."""
     log_density_by: dict
     """Derivatives of ln of the number density at the nodes, shape (m,)."""
+
+    def resolved_from(self, spread):
+        """Return from when on [s] the classes' ln r is spread by births by less than a limit [-].
+
+        Droplets born early grew in the supersaturation of the hold: their radii differ by more
+        than their ages say, so the spread is that of the solved classes.
+        """
+        growth = self.growth
+        wide = (self._spread > spread) | (growth.time < growth.birth_times[0].max())
+        return growth.time[np.flatnonzero(wide)[-1]] if wide.any() else -np.inf
+
+    @cached_property
+    def _spread(self):
+        """Return the standard deviation of ln r over the classes, shape (m,) [-]."""
+        log_radius, weights = np.log(self.growth.radius[0]), self.growth.weights
+        mean = weights @ log_radius
+        return np.sqrt(np.maximum(weights @ (log_radius - mean) ** 2, 0.0))
+
+    @cached_property
+    def stacked(self):
+        """Return the solution's arrays as compiled loops read them.
+
+        Nodes, shape (m,) [s]; (r + l)^2 and its rate, shape (c, m); derivatives of ln r, shape
+        (p, c, m); droplets that shine per volume, shape (m,) [1/m^3]; derivatives of its ln,
+        shape (p, m).
+        """
+        growth = self.growth
+        shape = growth.square[0].shape
+        by, thinner = [*self.log_radius_by.values()], [*self.log_density_by.values()]
+        return (
+            np.array(growth.time), np.array(growth.square[0]), np.array(growth.square_rate[0]),
+            np.array(by).reshape(-1, *shape),
+            growth.number_density[0] * np.exp(-self.cloud.depletion),
+            np.array(thinner).reshape(-1, shape[1]),
+        )
 
 
 def no_shifts(model):

@@ -1,6 +1,7 @@
 """The kernel of one droplet widened to the spread of a cloud, ready for lookups."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -33,9 +34,10 @@ class SpreadTable:
 
     values: np.ndarray
     """Shape (rows, n) [m^2]."""
-    cells: np.ndarray
-    """Of each cell between two radii: the four coefficients of the cubic in the place within it,
-    lowest first, then the derivative by the variance and its rise, shape (6 rows, n - 1) [m^2]."""
+    slopes: np.ndarray
+    """Their change over one step at the rate there, shape (rows, n) [m^2]."""
+    bends: np.ndarray
+    """Their derivatives by the variance of ln r, shape (rows, n) [m^2]."""
     start: float
     """ln of the first radius in metres [-]."""
     step: float
@@ -47,6 +49,30 @@ class SpreadTable:
     def log_radius(self):
         """Return ln of the radii in metres, shape (n,) [-]."""
         return self.start + self.step * np.arange(self.values.shape[1])
+
+    @cached_property
+    def interleaved(self):
+        """Return all that is known at one radius side by side, as compiled loops read it.
+
+        Shape (n, rows, 3) [m^2].
+        """
+        return np.ascontiguousarray(
+            np.stack([self.values, self.slopes, self.bends]).transpose(2, 1, 0))
+
+    @cached_property
+    def cells(self):
+        """Return what each cell between two radii needs, shape (6 rows, n - 1) [m^2].
+
+        The four coefficients of the cubic in the place within it, lowest first, then the
+        derivative by the variance and its rise.
+        """
+        rise, first, last = np.diff(self.values), self.slopes[:, :-1], self.slopes[:, 1:]
+        # Cubic Hermite: low + t (first + t (b + t c)).
+        c = first + last - 2.0 * rise
+        return np.concatenate([
+            self.values[:, :-1], first, rise - first - c, c, self.bends[:, :-1],
+            np.diff(self.bends),
+        ])
 
 
 def cloud_light(rows, start, step):
@@ -130,13 +156,7 @@ def spread_table(light, variance, near=None):
     curvature = damped * (-0.5 * light.wavenumber**2)
     both = np.fft.irfft(np.concatenate([damped, slope, curvature]), light.size, axis=1)
     values, slopes, bends = both[:, : light.count].reshape(3, -1, light.count)
-    rise, first, last = np.diff(values), slopes[:, :-1], slopes[:, 1:]
-    # Cubic Hermite: low + t (first + t (b + t c)).
-    c = first + last - 2.0 * rise
-    cells = np.concatenate([
-        values[:, :-1], first, rise - first - c, c, bends[:, :-1], np.diff(bends),
-    ])
-    return SpreadTable(values, cells, light.start, light.step, variance)
+    return SpreadTable(values, slopes, bends, light.start, light.step, variance)
 
 
 def look_up(table, log_radius, variance, derivatives=True):
@@ -163,7 +183,7 @@ def look_up(table, log_radius, variance, derivatives=True):
         Their derivatives by the variance of ln r [m^2].
     """
     place = (log_radius - table.start) * (1.0 / table.step)
-    np.minimum(np.maximum(place, 0.0, out=place), table.cells.shape[1] - 1e-9, out=place)
+    np.minimum(np.maximum(place, 0.0, out=place), table.values.shape[1] - 1 - 1e-9, out=place)
     index = place.astype(np.intp)
     t = place
     t -= index

@@ -1,11 +1,12 @@
 """What each channel would show: the light of a cloud, attenuated, and its derivatives."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
+from scatterfit.compiled import compiled
 from scatterfit.droplet_growth.setup import GrowthSetup
-from scatterfit.forward.cloud_state import cloud_state
+from scatterfit.forward.cloud_state import CloudState
 from scatterfit.forward.growth_model import linear_growth
 from scatterfit.forward.light import CloudLight, look_up, spread_table
 from scatterfit.forward.low_pass import low_pass
@@ -85,8 +86,10 @@ def channel_signals(model, cloud, time, names=(), linear=None, near=None):
     """
     if linear is None:
         linear = linear_growth(model.setup, cloud, names)
-    state = cloud_state(linear, cloud, time, names, model.setup.births)
     table = spread_table(model.light, cloud.variance, near)
+    state = CloudState(linear, cloud, time, tuple(names), model.setup.births, table)
+    if compiled():
+        return _compiled_signals(model, state), state
     parts = [_cross_sections(model, cloud, table, segment, names) for segment in state.segments]
     mean = np.concatenate([part[0] for part in parts], axis=1)
     mean_by = {
@@ -96,7 +99,14 @@ def channel_signals(model, cloud, time, names=(), linear=None, near=None):
         _one_channel(model, i, (state, mean, mean_by), time, names)
         for i in range(len(model.channels))
     ]
-    return signals, replace(state, table=table)
+    return signals, state
+
+
+def _compiled_signals(model, state):
+    """Return what the array code would, one signal a channel."""
+    from scatterfit.forward.light_compiled import signals  # noqa: PLC0415  (loads numba)
+
+    return [ChannelSignal(*found) for found in signals(model, state)]
 
 
 def _cross_sections(model, cloud, table, segment, names):

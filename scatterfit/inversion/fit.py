@@ -35,6 +35,8 @@ FINE_BINS = 800
 """Bins at the most, roughly."""
 SLOW_MISFITS = (0.01, 0.004, 0.025)
 """What slow misfit is let pass at first, one look after the other [-]."""
+ANGLE_SETTLED = 2e-5
+"""Shift of a detector's angle from that of its tables that first order follows [rad]."""
 _FOLLOWED = 5
 _SOFTENINGS = 3
 _HOP_ROUNDS = 5
@@ -85,7 +87,7 @@ def fit_pulse(model, time, channels, options):
     Returns
     -------
     fit : Fit
-        Best cloud, rivals and residuals.
+        Best cloud, rivals and residuals; to be refined where an angle has not settled.
 
     Raises
     ------
@@ -135,10 +137,16 @@ def _one_look(model, time, channels, options, slow):
         problem, best, disturbances = _undisturbed(problem, fine, best, disturbances)
     sharp = problem
     problem, best = _softened(problem, best)
-    best = polish(problem, best)
+    if not _away(best):
+        best = polish(problem, best)
     softening = float(np.max(sharp.bins.weights / np.maximum(problem.bins.weights, 1e-300)) ** 2)
     return _finished(problem, best, time, (channels, others, disturbances,
                                            count + sum(d.spikes for d in channels), softening))
+
+
+def _away(solution):
+    """Return whether tables at other angles are to follow, so that the last word waits for them."""
+    return any(abs(shift) > ANGLE_SETTLED for shift in solution.best.cloud.angles)
 
 
 def _again(problem, best):

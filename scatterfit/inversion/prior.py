@@ -37,18 +37,17 @@ def growth_scale_sigma(setup, free=()):
     sigmas = setup.apparatus.sigmas
     path, vapour = setup.path, setup.apparatus.vapour
     radius = setup.apparatus.analysis.reference_radius
-    base = _rate(setup, radius, path.reference_temperature, setup.vapour_fraction)
-    floor = 0.05 * abs(base) + 1e-12
     stated = [sigmas[key] for key in ("chamber.temperature_K", "growth.temperature_K")
               if key in sigmas]
     warm = 0.0 if "temperature" in free else stated[0] if stated else _TEMPERATURE
-    parts = [
-        _rate(setup, radius, path.reference_temperature + warm, setup.vapour_fraction
-              * (1.0 + setup.vapour_by_temperature * warm / path.reference_temperature)) - base,
-    ]
     wet = 0.0 if "vapour" in free else _vapour_sigma(sigmas, vapour)
-    parts.append(_rate(setup, radius, path.reference_temperature,
-                       setup.vapour_fraction * (1.0 + wet)) - base)
+    base, warmer, wetter = _rates(
+        setup, radius, path.reference_temperature + np.array([0.0, warm, 0.0]),
+        setup.vapour_fraction * np.array([
+            1.0, 1.0 + setup.vapour_by_temperature * warm / path.reference_temperature, 1.0 + wet]),
+    )
+    floor = 0.05 * abs(base) + 1e-12
+    parts = (warmer - base, wetter - base)
     diffusion = matter.diffusivity(setup.substance, setup.gas).relative_uncertainty
     diffusion = 0.0 if "diffusivity" in free else diffusion
     conduction = setup.gas.conductivity.relative_uncertainty
@@ -93,16 +92,15 @@ def _vapour_sigma(sigmas, vapour):
     return _FRACTION
 
 
-def _rate(setup, radius, temperature, fraction):
-    """Return dr/dt of one droplet in the growth stage [m/s]."""
+def _rates(setup, radius, temperature, fraction):
+    """Return dr/dt of one droplet in several states of the gas in the growth stage [m/s]."""
     vapour = setup.apparatus.vapour
     rate, *_ = growth_rate(
-        setup.properties, np.array([radius]),
-        (np.array([temperature]), setup.path.reference_pressure, np.array([fraction])),
-        (vapour.mass_accommodation, vapour.thermal_accommodation),
-        np.array([temperature + 2.0]), steps=6,
+        setup.properties, np.full(temperature.size, radius),
+        (temperature, setup.path.reference_pressure, fraction),
+        (vapour.mass_accommodation, vapour.thermal_accommodation), temperature + 2.0, steps=6,
     )
-    return float(rate[0])
+    return rate
 
 
 def depletion_sigma(setup):

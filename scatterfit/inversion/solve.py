@@ -193,6 +193,6 @@ def polish(problem, solution):
 
     with np.errstate(all="ignore"):
         fitter = lmfit.Minimizer(residual, parameters, scale_covar=False, calc_covar=False)
-        fitter.leastsq(Dfun=jacobian, col_deriv=0, max_nfev=12, ftol=1e-7, xtol=1e-6)
+        fitter.leastsq(Dfun=jacobian, col_deriv=0, max_nfev=12, ftol=1e-6, xtol=1e-6)
     best = min([solution.best, *seen.values()], key=lambda found: found.chi2)
     return Solution(best, solution.iterations + len(seen), solution.converged)

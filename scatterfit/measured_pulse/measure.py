@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from scatterfit.inversion.fit import fit_pulse, refine
+from scatterfit.inversion.fit import ANGLE_SETTLED, fit_pulse, refine
 from scatterfit.inversion.uncertainty import posterior
 from scatterfit.inversion.verdict import (
     Finding,
@@ -38,7 +38,6 @@ from scatterfit.measured_pulse.settings import fit_options
 _RADIUS_FLOOR = 1.5e-4
 _RATE_FLOOR = 2e-3
 _SCALE_FLOOR = 5e-3
-_ANGLE_SETTLED = 2e-5
 _BASE_SPREAD = 0.003
 _LARGEST = 0.98
 _UNSURE = 1.5
@@ -158,7 +157,7 @@ def settle_angles(prepared, fit, base, offsets):
     """
     for _ in range(3):
         shifts = fit.best.cloud.angles
-        if not any(abs(shift) > _ANGLE_SETTLED for shift in shifts):
+        if not any(abs(shift) > ANGLE_SETTLED for shift in shifts):
             break
         base = tuple(b + s for b, s in zip(base, shifts, strict=True))
         prepared = reangled(prepared, base)
