@@ -1,6 +1,7 @@
 """Misfit of one pulse: residuals with the linear parameters projected out, and derivatives."""
 
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -39,6 +40,18 @@ class Problem:
     """Parameter to its least and largest value, where they are not those of ``LIMITS``."""
     extras: tuple[np.ndarray, ...] = ()
     """Per channel: more linear columns (drift, hum), each shape (k, m) [-]."""
+
+    @cached_property
+    def drifts(self):
+        """Return, per channel, the slow drifts among the parameters, in volts per unit."""
+        place = 2.0 * (self.bins.time - self.bins.time[0]) / np.ptp(self.bins.time) - 1.0
+        shapes = {"tilt": place, "bow": place**2}
+        return tuple(
+            {f"{kind}:{i}": shape * float(np.ptp(values[weight > 0.0]))
+             for kind, shape in shapes.items() if f"{kind}:{i}" in self.names}
+            for i, (values, weight) in enumerate(
+                zip(self.bins.values, self.bins.weights, strict=True))
+        )
 
 
 @dataclass(frozen=True)
@@ -210,11 +223,11 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         weight = problem.bins.weights[i]
         extra = problem.extras[i] if problem.extras else np.empty((0, weight.size))
         columns, fixed = linear_columns(channel, signal.shape, extra)
-        weighted = (columns * weight).T
+        weighted = columns * weight
         # Columns differ by many powers of ten; of one size, none is taken for nothing.
-        norms = np.maximum(np.sqrt(np.sum(weighted**2, axis=0)), 1e-300)
-        basis, triangle = np.linalg.qr(weighted / norms)
-        drifts = _drifts(problem, i)
+        norms = np.maximum(np.sqrt(np.einsum("qm,qm->q", weighted, weighted)), 1e-300)
+        basis, triangle = np.linalg.qr((weighted / norms[:, None]).T)
+        drifts = problem.drifts[i]
         slow = sum((value_of(cloud, name) * shape for name, shape in drifts.items()), 0.0)
         fixed = fixed + slow
         target = (problem.bins.values[i] - fixed) * weight
@@ -230,10 +243,10 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
         none = np.zeros_like(weight)
         by = [signal.by.get(name, none) for name in names] + [parts[i] for _, parts in more]
         by += [signal.by.get(name, none) for name in splits]
-        both = -(np.array(by) * (amplitude * weight)).T
+        both = (np.array(by) * (-amplitude * weight)).T
         for name, shape in drifts.items():
             both[:, names.index(name)] = -shape * weight
-        both = both - basis @ (basis.T @ both)
+        both -= basis @ (basis.T @ both)
         jacobians.append(both[:, : len(names) + len(more)])
         for k, key in enumerate(splits):
             splits[key].append(both[:, len(names) + len(more) + k])
@@ -247,23 +260,14 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
     )
 
 
-def _drifts(problem, position):
-    """Return the slow drifts of a channel that are among the parameters, in volts per unit."""
-    found = {name: None for name in (f"tilt:{position}", f"bow:{position}")
-             if name in problem.names}
-    if not found:
-        return {}
-    bins = problem.bins
-    place = 2.0 * (bins.time - bins.time[0]) / (bins.time[-1] - bins.time[0]) - 1.0
-    size = float(np.ptp(bins.values[position][bins.weights[position] > 0.0]))
-    return {name: size * (place if name.startswith("tilt") else place**2) for name in found}
-
-
 def _solve(triangle, shadow):
     """Return the solution of an upper triangular system that may be singular."""
     size = np.abs(np.diag(triangle))
     if size.size and size.min() > 1e-12 * max(size.max(), 1e-300):
-        return np.linalg.solve(triangle, shadow)
+        found = np.zeros_like(shadow)
+        for k in reversed(range(shadow.size)):
+            found[k] = (shadow[k] - triangle[k, k + 1:] @ found[k + 1:]) / triangle[k, k]
+        return found
     return np.linalg.lstsq(triangle, shadow, rcond=1e-12)[0]
 
 

@@ -239,19 +239,15 @@ def growth_scale(setup, cloud, radius):
     """
     vapour, path = setup.apparatus.vapour, setup.path
 
-    def rate(accommodation):
-        value, *_ = growth_rate(
-            setup.properties, np.array([radius]),
-            (np.array([path.reference_temperature]), path.reference_pressure,
-             np.array([setup.vapour_fraction])),
-            (vapour.mass_accommodation * np.exp(accommodation), vapour.thermal_accommodation),
-            np.array([setup.droplet_temperature]), steps=6,
-        )
-        return float(value[0])
-
-    base, step = rate(0.0), 0.02
-    here = rate(cloud.accommodation)
-    slope = (rate(cloud.accommodation + step) - here) / step
+    step = 0.02
+    sticking = np.exp(np.array([0.0, cloud.accommodation, cloud.accommodation + step]))
+    (base, here, beside), *_ = growth_rate(
+        setup.properties, np.full(3, radius),
+        (path.reference_temperature, path.reference_pressure, setup.vapour_fraction),
+        (vapour.mass_accommodation * sticking, vapour.thermal_accommodation),
+        np.full(3, setup.droplet_temperature), steps=6,
+    )
+    slope = (beside - here) / step
     bend = np.log(radius / 1e-6)
     log = np.log(max(here / base, 1e-9)) + cloud.scale + cloud.bend * bend
     return Derived(float(log), {
