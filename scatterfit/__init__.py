@@ -10,6 +10,7 @@ _PUBLIC = {
     "load_pulse": ("scatterfit.files", "load_pulse"),
     "fit": ("scatterfit.files_fit", "fit_loaded"),
     "fit_file": ("scatterfit.files_fit", "fit_file"),
+    "load_compiled": ("scatterfit.files_compiled", "load_compiled"),
     "simulate": ("scatterfit.files_simulate", "simulate"),
     "open_results": ("scatterfit.overnight.results", "open_results"),
     "MeasuredPulse": ("scatterfit.measured_pulse.record", "MeasuredPulse"),

@@ -14,22 +14,15 @@ def use_compiled(wanted=True):
     Parameters
     ----------
     wanted : bool
-        Whether they should.
+        Whether they should; numba must be there if so.
 
     Returns
     -------
-    used : bool
-        Whether they do; ``False`` where numba is missing.
+    wanted : bool
+        The same.
     """
-    found = False
-    if wanted:
-        try:
-            import numba  # noqa: F401, PLC0415  (half a second, which only a night pays back)
-            found = True
-        except ImportError:
-            pass
-    _choice["on"] = found
-    return found
+    _choice["on"] = bool(wanted)
+    return _choice["on"]
 
 
 def compiled():
@@ -39,5 +32,10 @@ def compiled():
     -------
     used : bool
         ``True`` after :func:`use_compiled`.
+
+    Examples
+    --------
+    >>> compiled()
+    False
     """
     return _choice["on"]

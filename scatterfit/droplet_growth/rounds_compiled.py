@@ -16,6 +16,20 @@ _SMALLEST_FRACTION = 1e-9
 _MICROMETRE = 1e-6
 _BENT_FROM = 5e-8
 _LARGEST_EXPONENT = 40.0
+# What is not a number stays so.
+_FAST = {"contract", "arcp", "nsz"}
+
+
+def load_rounds():
+    """Compile the loop, or load it from where compiled code is kept."""
+    def some(*shape):
+        return np.ones(shape)
+
+    table = (1.0, 1.0, some(2, 8))
+    time = np.arange(2.0)
+    rounds((table, table, 1.0, 1.0), (time, some(2), some(1, 2), some(1), some(1, 2)),
+           (1.0, *(some(1) for _ in range(6)), np.zeros((1, 1), np.intp), some(1, 1), some(1)),
+           (some(1, 1, 2), some(1, 2), some(1, 2), some(1, 2), some(1, 1, 2)), (1, 1, 1.0))
 
 
 @njit(cache=True, error_model="numpy")
@@ -74,12 +88,43 @@ def rounds(tables, gas, droplets, start, limits):
 def _cell(table, temperature):
     """Return the cell of a temperature and the place in it."""
     place = (temperature - table[0]) * table[1]
-    place = min(max(place, 0.0), table[2].shape[0] - 1e-9)
+    # What is not a number must not become an index.
+    place = min(place, table[2].shape[0] - 1e-9) if place > 0.0 else 0.0
     cell = int(place)
     return cell, place - cell
 
 
-@njit(cache=True, error_model="numpy", fastmath={"contract","arcp","nsz"})
+@njit(cache=True, error_model="numpy", fastmath=_FAST, inline="always")
+def _fluxes(tables, gas, droplet, resistances):
+    """Return flow, conduction, vapour flux, latent heat and d(y_s)/dT of one droplet.
+
+    See :func:`scatterfit.droplet_growth.single_droplet.growth_rate`.
+    """
+    film, liquid = tables
+    own, warm, far, log_pressure = gas
+    radius, thinness = droplet
+    vapour_resistance, heat_resistance = resistances
+    cell, t = _cell(film, 0.5 * (own + warm))
+    row = film[2][cell]
+    kn = (row[4] + t * row[5]) * thinness
+    flow = (row[0] + t * row[1]) * (1.0 + kn) / (
+        1.0 + kn * (vapour_resistance + 0.377 + vapour_resistance * kn))
+    kn = (row[6] + t * row[7]) * (thinness * warm)
+    conduction = (row[2] + t * row[3]) * (1.0 + kn) / (
+        1.0 + kn * (heat_resistance + 0.377 + heat_resistance * kn))
+    cell, t = _cell(liquid, own)
+    row = liquid[2][cell]
+    latent = row[2] + t * row[3]
+    inverse = 1.0 / own
+    surface = math.exp(
+        row[0] + t * row[1] + (row[4] + t * row[5]) * inverse / radius - log_pressure)
+    surface = min(surface, _LARGEST_SURFACE_FRACTION)
+    flux = flow * (math.log(1.0 - surface) - far)
+    slope = surface / (1.0 - surface) * latent * inverse * (inverse / GAS_CONSTANT)
+    return flow, conduction, flux, latent, slope
+
+
+@njit(cache=True, error_model="numpy", fastmath=_FAST)
 def _rates(tables, gas, droplets, here, out):
     """Fill d(r + l)^2/dt and d(rate)/dq; improve the droplets' temperatures."""
     film, liquid, molar_volume, heat_capacity = tables
@@ -95,7 +140,7 @@ def _rates(tables, gas, droplets, here, out):
         heat_resistance = (4.0 / 3.0) / thermal[v]
         for j in range(nodes):
             warm = temperature[v, j]
-            far = math.log1p(-share[v, j])
+            far = math.log(1.0 - share[v, j])
             cell, t = _cell(liquid, warm)
             warming = (liquid[2][cell, 2] + t * liquid[2][cell, 3]) / heat_capacity
             for c in range(classes):
@@ -104,24 +149,9 @@ def _rates(tables, gas, droplets, here, out):
                 own = droplet_temperature[v, c, j]
                 thinness = 1.0 / (pressure[j] * radius)
                 for _ in range(steps):
-                    cell, t = _cell(film, 0.5 * (own + warm))
-                    row = film[2][cell]
-                    kn = (row[4] + t * row[5]) * thinness
-                    flow = (row[0] + t * row[1]) * (1.0 + kn) / (
-                        1.0 + kn * (vapour_resistance + 0.377 + vapour_resistance * kn))
-                    kn = (row[6] + t * row[7]) * (thinness * warm)
-                    conduction = (row[2] + t * row[3]) * (1.0 + kn) / (
-                        1.0 + kn * (heat_resistance + 0.377 + heat_resistance * kn))
-                    cell, t = _cell(liquid, own)
-                    row = liquid[2][cell]
-                    latent = row[2] + t * row[3]
-                    inverse = 1.0 / own
-                    surface = math.exp(row[0] + t * row[1]
-                                       + (row[4] + t * row[5]) * inverse / radius - log_pressure[j])
-                    surface = min(surface, _LARGEST_SURFACE_FRACTION)
-                    flux = flow * (math.log(1.0 - surface) - far)
-                    surface_slope = surface / (1.0 - surface) * latent * inverse * (
-                        inverse / GAS_CONSTANT)
+                    flow, conduction, flux, latent, surface_slope = _fluxes(
+                        (film, liquid), (own, warm, far, log_pressure[j]), (radius, thinness),
+                        (vapour_resistance, heat_resistance))
                     loss = latent * flow * surface_slope
                     change = (latent * flux - conduction * (own - warm)) / (conduction + loss)
                     own += change
@@ -232,8 +262,7 @@ def _moved(droplets, since, inner, square):
                 if since[v, c, j] > 0.0:
                     new += inner[v, j]
                 # What is not a number stays so, and is never called solved.
-                if new < floor:
-                    new = floor
+                new = floor if new < floor else new
                 change = abs(new - square[v, c, j]) / new
                 if change > largest or math.isnan(change):
                     largest = change

@@ -15,6 +15,20 @@ from scatterfit.forward.cloud_state import LARGEST_MOVE, finer_times
 _FAST = {"reassoc", "contract", "arcp", "nsz"}
 
 
+def load_light():
+    """Compile the loops, or load them from where compiled code is kept."""
+    def some(*shape):
+        return np.ones(shape)
+
+    nodes = (np.arange(2.0), some(1, 2), some(1, 2), some(1, 1, 2))
+    mean, mean_by = some(1, 1), some(3, 1, 1)
+    _cross_sections(nodes, (some(1), 0, 1), (some(1), some(1), some(1, 1)),
+                    (1.0, 1.0, some(1), True), (some(2, 1, 3), 1.0, 1.0, 1.0), (mean, mean_by))
+    density, thin = _density((nodes[0], some(2), some(1, 2)), some(1), (some(1), 0, 1.0))
+    _channel((mean, mean_by, density, thin), some(1), (0, 0, 0, 1.0, 1.0, 1.0, True, 0, 1.0),
+             some(7, 1))
+
+
 def signals(model, state):
     """Return the shape of every channel and its derivatives.
 
@@ -63,7 +77,7 @@ def _moves(linear, cloud):
 
 
 def _classes(state, finer):
-    """Return births [s], weights, and what carries from the solved classes to these, shape (c, f)."""
+    """Return births [s], weights, and the matrix from the solved classes, shape (c, f)."""
     growth = state.linear.growth
     if finer is None:
         count = growth.weights.size
@@ -110,51 +124,64 @@ def _cross_sections(nodes, samples, classes, growing, seen, out):
     """
     clock, start, end = samples
     mean, mean_by = out
-    births, weights, carry = classes
-    length, start_radius, moves, moved = growing
-    values, log_start, per_step = seen[0], seen[1], seen[2]
-    rows, solved, growth_names = values.shape[1], nodes[1].shape[0], moves.size
+    births, _, carry = classes
+    moves, moved = growing[2], growing[3]
+    solved = nodes[1].shape[0]
     derivatives = mean_by.shape[0] > 0
-    followed = growth_names if derivatives or moved else 0
-    smallest, least = (start_radius + length) ** 2, math.exp(log_start)
-    last = values.shape[0] - 1 - 1e-9
+    followed = moves.size if derivatives or moved else 0
     square, rate, move = np.empty(solved), np.empty(solved), np.zeros(solved)
-    tracks = np.zeros((growth_names, solved))
+    tracks = np.zeros((moves.size, solved))
     cells, seen_by = np.empty(births.size, np.intp), np.empty((5, births.size))
     by_radius, by_delay = np.empty(solved), np.empty(solved)
     i = 0
     for j in range(start, end):
         i = _at_nodes(nodes, clock[j], i, followed, (square, rate, tracks))
         if moved:
-            move[:] = 0.0
-            for k in range(growth_names):
-                for c in range(solved):
-                    move[c] += moves[k] * tracks[k, c]
-        born = 0
-        for f in range(births.size):
-            cells[f], seen_by[:3, f] = 0, 0.0
-            if not clock[j] > births[f]:
-                continue
-            inner, farther = 0.0, 0.0
             for c in range(solved):
-                inner += carry[c, f] * square[c]
-                farther += carry[c, f] * move[c]
-            radius = math.sqrt(max(inner, smallest)) - length
-            if moved:
-                radius *= math.exp(min(max(farther, -LARGEST_MOVE), LARGEST_MOVE))
-            if not radius > 0.0:
-                continue
-            place = (math.log(max(radius, least)) - log_start) * per_step
-            place = min(max(place, 0.0), last)
-            cells[f] = int(place)
-            seen_by[0, f], seen_by[1, f] = place - cells[f], weights[f]
-            seen_by[2, f] = 1.0 / (-2.0 * (radius + length) * radius)
-            born = f + 1
-        for row in range(rows):
+                move[c] = 0.0
+                for k in range(moves.size):
+                    move[c] += moves[k] * tracks[k, c]
+        born = _radii(clock[j], classes, growing, (square, move), seen, (cells, seen_by))
+        for row in range(seen[0].shape[1]):
             mean[row, j], bent = _one_row(seen, row, cells[:born], seen_by)
             if derivatives:
                 _by_solved(carry, seen_by, born, (by_radius, by_delay))
                 _gathered((tracks, rate), (by_radius, by_delay, bent), mean_by[:, row, j])
+
+
+@njit(cache=True, error_model="numpy")
+def _radii(clock, classes, growing, solved, seen, out):
+    """Fill each class's cell of the table, and its place there, weight and answer to the delay.
+
+    Return how many classes, in order of birth, may be born.
+    """
+    births, weights, carry = classes
+    length, start_radius, _, moved = growing
+    square, move = solved
+    table, log_start, per_step, _ = seen
+    cells, seen_by = out
+    smallest, least = (start_radius + length) ** 2, math.exp(log_start)
+    born = 0
+    for f in range(births.size):
+        cells[f], seen_by[:3, f] = 0, 0.0
+        if not clock > births[f]:
+            continue
+        inner, farther = 0.0, 0.0
+        for c in range(square.size):
+            inner += carry[c, f] * square[c]
+            farther += carry[c, f] * move[c]
+        radius = math.sqrt(max(inner, smallest)) - length
+        if moved:
+            radius *= math.exp(min(max(farther, -LARGEST_MOVE), LARGEST_MOVE))
+        if not radius > 0.0:
+            continue
+        place = (math.log(max(radius, least)) - log_start) * per_step
+        place = min(max(place, 0.0), table.shape[0] - 1 - 1e-9)
+        cells[f] = int(place)
+        seen_by[0, f], seen_by[1, f] = place - cells[f], weights[f]
+        seen_by[2, f] = 1.0 / (-2.0 * (radius + length) * radius)
+        born = f + 1
+    return born
 
 
 @njit(cache=True, error_model="numpy", fastmath=_FAST)

@@ -3,7 +3,7 @@
 import time
 from collections import Counter
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import partial
 from itertools import chain
 from pathlib import Path
@@ -160,6 +160,8 @@ def run_batch(plan, ledger_path, choice=None, *, crew=None, listener=None):
         listener.begin(catalogue, count)
         if not count:
             return BatchReport(catalogue)
+        if plan.compiled is None:
+            plan = replace(plan, compiled=catalogue.found >= MANY)
         begun = time.monotonic()
         with Stopper(partial(listener.remark, _STOPPING)) as stop, crew(plan, count) as at_work:
             verdicts = _work_off(ledger, at_work, count, stop, listener)
@@ -167,6 +169,8 @@ def run_batch(plan, ledger_path, choice=None, *, crew=None, listener=None):
         return BatchReport(catalogue, verdicts, seconds, stop.asked)
 
 
+MANY = 200
+"""Traces in a folder from which on compiled loops pay, their first compilation included."""
 _STOPPING = "stopping after the pulses at work; Ctrl-C again stops at once"
 
 

@@ -31,6 +31,8 @@ class Plan:
     """Time after the limit at which a worker process that does not react is ended [s]."""
     fit: Callable | None = None
     """In place of ``scatterfit.fit_file``, with the same arguments."""
+    compiled: bool | None = None
+    """Whether workers load compiled loops; by default a batch of many traces does."""
 
 
 @dataclass(frozen=True)

