@@ -44,7 +44,9 @@ def _load(folder):
     try:
         from scatterfit.droplet_growth.rounds_compiled import load_rounds  # noqa: PLC0415
         from scatterfit.forward.light_compiled import load_light  # noqa: PLC0415
+        from scatterfit.inversion.projection_compiled import load_projection  # noqa: PLC0415
     finally:
         config.CACHE_DIR = before
     load_rounds()
     load_light()
+    load_projection()

@@ -8,6 +8,7 @@ import numpy as np
 from scatterfit.forward.growth_model import Cloud
 from scatterfit.forward.model import PulseModel, channel_signals
 from scatterfit.inversion.data import Bins
+from scatterfit.inversion.projection import project
 
 # A change of each parameter that matters a little, so that all are of order one to the solver.
 SCALES = {
@@ -17,6 +18,7 @@ SCALES = {
     "bend": 5e-3, "depletion": 1e-2, "creep": 5e-3,
     "stretch": 0.02,
 }
+_SPLITS = ("number_gain", "number_extinction", "number_depletion")
 LIMITS = {
     "number": (np.log(1e3), np.log(1e15)), "scale": (-1.6, 1.6), "variance": (0.0, 0.04),
     "accommodation": (-4.6, 0.4), "temperature": (-0.02, 0.02), "vapour": (-0.4, 0.4),
@@ -217,65 +219,47 @@ def evaluate(problem, cloud, derivatives=True, more=(), linear=None, near=None):
     """
     names = problem.names if derivatives else ()
     signals, state = channel_signals(problem.model, cloud, problem.bins.time, names, linear, near)
-    residuals, jacobians, coefficients, fits, bases = [], [], [], [], []
-    splits = {key: [] for key in ("number_gain", "number_extinction", "number_depletion")}
+    wanted = (*names, *_SPLITS) if derivatives else ()
+    more = more if derivatives else ()
+    parts = []
     for i, (channel, signal) in enumerate(zip(problem.model.channels, signals, strict=True)):
         weight = problem.bins.weights[i]
         extra = problem.extras[i] if problem.extras else np.empty((0, weight.size))
         columns, fixed = linear_columns(channel, signal.shape, extra)
-        weighted = columns * weight
-        # Columns differ by many powers of ten; of one size, none is taken for nothing.
-        norms = np.maximum(np.sqrt(np.einsum("qm,qm->q", weighted, weighted)), 1e-300)
-        basis, triangle = np.linalg.qr((weighted / norms[:, None]).T)
         drifts = problem.drifts[i]
-        slow = sum((value_of(cloud, name) * shape for name, shape in drifts.items()), 0.0)
-        fixed = fixed + slow
-        target = (problem.bins.values[i] - fixed) * weight
-        shadow = basis.T @ target
-        factors = _solve(triangle, shadow) / norms
-        coefficients.append(factors)
-        fits.append(fixed + factors @ columns)
-        residuals.append(target - basis @ shadow)
-        bases.append(basis)
-        if not derivatives:
-            continue
-        amplitude = _amplitude(channel, factors, extra)
-        none = np.zeros_like(weight)
-        by = [signal.by.get(name, none) for name in names] + [parts[i] for _, parts in more]
-        by += [signal.by.get(name, none) for name in splits]
-        both = (np.array(by) * (-amplitude * weight)).T
         for name, shape in drifts.items():
-            both[:, names.index(name)] = -shape * weight
-        both -= basis @ (basis.T @ both)
-        jacobians.append(both[:, : len(names) + len(more)])
-        for k, key in enumerate(splits):
-            splits[key].append(both[:, len(names) + len(more) + k])
+            fixed = fixed + value_of(cloud, name) * shape
+        by = np.zeros((len(wanted) + len(more), weight.size))
+        volts = np.zeros(len(by), dtype=bool)
+        for k, name in enumerate(wanted):
+            volts[k] = name in drifts
+            by[k] = drifts[name] if volts[k] else signal.by.get(name, 0.0)
+        for k, (_, shapes) in enumerate(more):
+            by[len(wanted) + k] = shapes[i]
+        parts.append(project((problem.bins.values[i], weight), (columns, fixed), (by, volts),
+                             _amplitude(channel, extra)))
     rows, own = _prior_rows(problem, cloud, tuple(name for name, _ in more))
-    residual = np.concatenate([*residuals, own])
-    jacobian = np.concatenate([*jacobians, rows]) if derivatives else None
+    residual = np.concatenate([*(part.residual for part in parts), own])
+    by = np.concatenate([part.by for part in parts], axis=1)
+    jacobian, splits = None, {}
+    if derivatives:
+        first = len(names)
+        splits = dict(zip(_SPLITS, by[first:], strict=False))
+        data = np.concatenate([by[:first], by[first + len(_SPLITS):]])
+        jacobian = np.concatenate([data, rows.T], axis=1).T
     return Evaluation(
-        cloud, residual, float(residual @ residual), jacobian, tuple(coefficients),
-        np.array(fits), state, tuple(bases),
-        {key: np.concatenate(parts) for key, parts in splits.items()} if derivatives else {},
+        cloud, residual, float(residual @ residual), jacobian,
+        tuple(part.factors for part in parts), np.array([part.fit for part in parts]), state,
+        tuple(part.basis for part in parts), splits,
     )
 
 
-def _solve(triangle, shadow):
-    """Return the solution of an upper triangular system that may be singular."""
-    size = np.abs(np.diag(triangle))
-    if size.size and size.min() > 1e-12 * max(size.max(), 1e-300):
-        found = np.zeros_like(shadow)
-        for k in reversed(range(shadow.size)):
-            found[k] = (shadow[k] - triangle[k, k + 1:] @ found[k + 1:]) / triangle[k, k]
-        return found
-    return np.linalg.lstsq(triangle, shadow, rcond=1e-12)[0]
-
-
-def _amplitude(channel, factors, extra):
-    """Return what multiplies the channel's shape: a factor, or a factor that drifts."""
+def _amplitude(channel, extra):
+    """Return what the first factors multiply to make a channel's amplitude, shape (e, m) [-]."""
+    ones = np.ones((1, extra.shape[1]))
     if channel.kind == "transmission":
-        return factors[0] + (factors[1:] @ extra if extra.size else 0.0)
-    return factors[0] if channel.gain is None else 1.0
+        return np.concatenate([ones, extra])
+    return ones[:0] if channel.gain is not None else ones
 
 
 def _prior_rows(problem, cloud, more):
