@@ -137,7 +137,7 @@ def solve_cloud(  # noqa: PLR0913  (each argument is a source of its own)
     start_radius : float
         Radius at birth [m].
     start : CloudGrowth, optional
-        A solution nearby on the same nodes, to start from.
+        A guess on the same nodes, for one variant or all, to start from.
     tolerance : float
         Change of (r + l)^2 in a round that ends the rounds [-].
 
@@ -280,9 +280,8 @@ def _first_guess(path, times, floor, length, start):
         square = floor + _TYPICAL_RATE * np.maximum(path.time - times[:, :, None], 0.0)
         return square, np.zeros((shape[0], shape[2])), np.zeros(shape)
     warmth = start.droplet_temperature[0] - start.temperature[0]
-    radius = start.radius[0]
-    square = np.maximum((radius + length) ** 2, floor)
-    condensed = np.broadcast_to(start.condensed[0], (shape[0], shape[2])).copy()
+    square = np.maximum((start.radius + length) ** 2, floor)
+    condensed = np.broadcast_to(start.condensed, (shape[0], shape[2])).copy()
     return square, condensed, np.broadcast_to(warmth, shape)
 
 

@@ -17,6 +17,8 @@ STEPS = {
     "creep": 2e-3, "stretch": 0.01,
 }
 
+_FARTHEST = 0.3
+
 
 @dataclass(frozen=True)
 class Cloud:
@@ -183,7 +185,7 @@ def grow(setup, cloud, names=(), start=None):
         Where to solve.
     names : sequence of str
         Parameters to vary, in order.
-    start : CloudGrowth, optional
+    start : LinearGrowth, optional
         A solution nearby to start from.
 
     Returns
@@ -193,9 +195,27 @@ def grow(setup, cloud, names=(), start=None):
     """
     return solve_cloud(
         setup.properties, setup.path, (_birth_times(setup, cloud, names), setup.births.weights),
-        _parameters(setup, cloud, names), setup.start_radius, start=start,
-        tolerance=setup.tolerance,
+        _parameters(setup, cloud, names), setup.start_radius,
+        start=None if start is None else _moved(start, cloud, names), tolerance=setup.tolerance,
     )
+
+
+def _moved(start, cloud, names):
+    """Return a solution with its radii moved to first order to a cloud and its neighbours."""
+    growth, move = start.growth, 0.0
+    for name, by in start.log_radius_by.items():
+        move = move + (getattr(cloud, name) - getattr(start.cloud, name)) * by
+    moves = [move + (STEPS[name] * start.log_radius_by[name] if name in start.log_radius_by
+                     else 0.0) for name in names]
+    before, shape = growth.radius, (len(names) + 1, *growth.square.shape[1:])
+    moves = np.array([np.broadcast_to(row, shape[1:]) for row in (move, *moves)])
+    radius = before * np.exp(np.clip(moves, -_FARTHEST, _FARTHEST))
+    grown = [np.einsum("c,vcm->vm", growth.weights, r**3) for r in (radius, before)]
+    more = cloud.number + cloud.depletion - start.cloud.number - start.cloud.depletion
+    more = np.array([more, *(more + STEPS[name] * (name == "number") for name in names)])
+    return replace(growth, square=(radius + growth.length[0]) ** 2,
+                   length=np.full(shape[0], growth.length[0]),
+                   condensed=growth.condensed * (grown[0] / grown[1]) * np.exp(more)[:, None])
 
 
 def linear_growth(setup, cloud, names=(), start=None):
@@ -221,7 +241,7 @@ def linear_growth(setup, cloud, names=(), start=None):
         Solution and derivatives.
     """
     moving = [name for name in names if name in STEPS]
-    both = grow(setup, cloud, moving, start.growth if start is not None else None)
+    both = grow(setup, cloud, moving, start)
     growth = both.variant(0)
     born = both.time > growth.birth_times[0][:, None]
     log_radius, density = np.log(both.radius), np.log(both.number_density)

@@ -56,8 +56,10 @@ class SpreadTable:
 
         Shape (n, rows, 3) [m^2].
         """
-        return np.ascontiguousarray(
-            np.stack([self.values, self.slopes, self.bends]).transpose(2, 1, 0))
+        table = np.empty((self.values.shape[1], self.values.shape[0], 3))
+        for k, part in enumerate((self.values, self.slopes, self.bends)):
+            table[:, :, k] = part.T
+        return table
 
     @cached_property
     def cells(self):
@@ -151,11 +153,12 @@ def spread_table(light, variance, near=None):
     """
     if near is not None and abs(variance - near.variance) < _SMALL_VARIANCE:
         return near
-    damped = light.spectrum * np.exp(-0.5 * variance * light.wavenumber**2)
-    slope = damped * (1j * light.wavenumber * light.step)
-    curvature = damped * (-0.5 * light.wavenumber**2)
-    both = np.fft.irfft(np.concatenate([damped, slope, curvature]), light.size, axis=1)
-    values, slopes, bends = both[:, : light.count].reshape(3, -1, light.count)
+    square = -0.5 * light.wavenumber**2
+    parts = np.empty((3, *light.spectrum.shape), dtype=complex)
+    np.multiply(light.spectrum, np.exp(variance * square), out=parts[0])
+    np.multiply(parts[0], 1j * light.step * light.wavenumber, out=parts[1])
+    np.multiply(parts[0], square, out=parts[2])
+    values, slopes, bends = np.fft.irfft(parts, light.size)[..., : light.count]
     return SpreadTable(values, slopes, bends, light.start, light.step, variance)
 
 

@@ -89,12 +89,13 @@ def find_disturbances(problem, evaluation, known=None):
 def _stacked_groups(problem, evaluation, chosen):
     """Return every group not chosen yet as weighted columns over all channels' residuals."""
     time = problem.bins.time
+    candidates = candidate_columns(time)
     groups, start = {}, 0
     first = problem.model.setup.births.times[0]
     for i, channel in enumerate(problem.model.channels):
         weight, basis = problem.bins.weights[i], evaluation.bases[i]
         full = evaluation.fits[i] if channel.kind == "transmission" else np.ones_like(weight)
-        for name, group in candidate_columns(time).items():
+        for name, group in candidates.items():
             if name in chosen[i] or _needs_fundamental(name, chosen[i]):
                 continue
             if name.startswith("hum") and not _told(

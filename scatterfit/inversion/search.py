@@ -1,6 +1,7 @@
 """The right Mie lobe without a start value: many clouds grown at once, compared with the trace."""
 
 from dataclasses import dataclass
+from math import log
 
 import numpy as np
 
@@ -354,7 +355,7 @@ def _distinct(candidates, count, apart=0.02):
     chosen = []
     for candidate in candidates:
         same = any(
-            abs(np.log(max(candidate.final_radius, 1e-10) / max(other.final_radius, 1e-10))) < apart
+            abs(log(max(candidate.final_radius, 1e-10) / max(other.final_radius, 1e-10))) < apart
             and abs(candidate.cloud.delay - other.cloud.delay) < 1e-9
             and candidate.cloud.accommodation == other.cloud.accommodation
             for other in chosen
