@@ -6,7 +6,7 @@ from functools import cached_property
 import numpy as np
 
 from scatterfit.droplet_growth.births import Births
-from scatterfit.forward.growth_model import Cloud, LinearGrowth
+from scatterfit.forward.growth_model import Cloud, LinearGrowth, setting
 from scatterfit.forward.light import SpreadTable
 
 LARGEST_MOVE = 10.0
@@ -174,7 +174,7 @@ def _thinner(linear, cloud, density_by):
     """Return the first-order change of ln n from where growth was solved."""
     change = 0.0
     for name, rows in density_by.items():
-        step = getattr(cloud, name) - getattr(linear.cloud, name)
+        step = setting(cloud, name) - setting(linear.cloud, name)
         if name == "number":
             taken = step + cloud.depletion - linear.cloud.depletion
             change = change + step + taken * (rows - 1.0)
@@ -187,7 +187,7 @@ def _log_move(linear, cloud, by):
     """Return the first-order change of ln r from where growth was solved, or ``None``."""
     move = None
     for name, rows in by.items():
-        step = getattr(cloud, name) - getattr(linear.cloud, name)
+        step = setting(cloud, name) - setting(linear.cloud, name)
         if name == "number":
             step += cloud.depletion - linear.cloud.depletion
         if step:

@@ -204,7 +204,7 @@ def _moved(start, cloud, names):
     """Return a solution with its radii moved to first order to a cloud and its neighbours."""
     growth, move = start.growth, 0.0
     for name, by in start.log_radius_by.items():
-        move = move + (getattr(cloud, name) - getattr(start.cloud, name)) * by
+        move = move + (setting(cloud, name) - setting(start.cloud, name)) * by
     moves = [move + (STEPS[name] * start.log_radius_by[name] if name in start.log_radius_by
                      else 0.0) for name in names]
     before, shape = growth.radius, (len(names) + 1, *growth.square.shape[1:])
@@ -251,6 +251,49 @@ def linear_growth(setup, cloud, names=(), start=None):
         radius_by[name] = np.where(born, change, 0.0)
         density_by[name] = (density[i + 1] - density[0]) / STEPS[name]
     return LinearGrowth(cloud, growth, radius_by, density_by)
+
+
+def with_changes(linear, changes):
+    """Return a solution that also knows what errors of the bench do to growth.
+
+    Parameters
+    ----------
+    linear : LinearGrowth
+        The solution.
+    changes : dict
+        Name to the changes of ln r at the nodes, shape (c, m), and of ln of the number density,
+        shape (m,), per unit of the error.
+
+    Returns
+    -------
+    linear : LinearGrowth
+        With more derivatives.
+    """
+    if not changes:
+        return linear
+    return replace(
+        linear,
+        log_radius_by=linear.log_radius_by | {name: one[0] for name, one in changes.items()},
+        log_density_by=linear.log_density_by | {name: one[1] for name, one in changes.items()},
+    )
+
+
+def setting(cloud, name):
+    """Return a growth parameter of a cloud; an error of the bench is none, and zero.
+
+    Parameters
+    ----------
+    cloud : Cloud
+        A cloud.
+    name : str
+        Parameter, or key path of the chamber file.
+
+    Returns
+    -------
+    value : float
+        Its value [any].
+    """
+    return getattr(cloud, name, 0.0)
 
 
 def _birth_times(setup, cloud, names):

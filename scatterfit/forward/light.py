@@ -1,6 +1,6 @@
 """The kernel of one droplet widened to the spread of a cloud, ready for lookups."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -108,6 +108,31 @@ def cloud_light(rows, start, step):
     padded[:, count:] = carried * fade + rows[:, :1] * (1.0 - fade)
     wavenumber = 2.0 * np.pi * np.fft.rfftfreq(size, d=step)
     return CloudLight(np.fft.rfft(padded, axis=1), wavenumber, start, step, count, size)
+
+
+def moved_rows(light, rows, shift):
+    """Return the light with some rows as a longer wavelength would have them.
+
+    At one refractive index a cross section over the wavelength squared depends on the radius over
+    the wavelength alone.
+
+    Parameters
+    ----------
+    light : CloudLight
+        Of the pulse.
+    rows : sequence of int
+        Rows to move.
+    shift : float
+        ln of the longer wavelength over the shorter [-].
+
+    Returns
+    -------
+    moved : CloudLight
+        The other light.
+    """
+    spectrum = light.spectrum.copy()
+    spectrum[rows] *= np.exp(2.0 * shift - 1j * light.wavenumber * shift)
+    return replace(light, spectrum=spectrum)
 
 
 def widened(light, variance):

@@ -10,6 +10,7 @@ import numpy as np
 from numba import njit
 
 from scatterfit.forward.cloud_state import LARGEST_MOVE, finer_times
+from scatterfit.forward.growth_model import setting
 
 # Sums may be taken in another order; what is not a number stays so.
 _FAST = {"reassoc", "contract", "arcp", "nsz"}
@@ -68,7 +69,7 @@ def signals(model, state):
 
 def _moves(linear, cloud):
     """Return how far each growth parameter is from where growth was solved, shape (p,)."""
-    moves = np.array([getattr(cloud, name) - getattr(linear.cloud, name)
+    moves = np.array([setting(cloud, name) - setting(linear.cloud, name)
                       for name in linear.log_radius_by], dtype=float)
     for i, name in enumerate(linear.log_radius_by):
         if name == "number":

@@ -5,7 +5,7 @@ from functools import cached_property
 
 import numpy as np
 
-from scatterfit.forward.growth_model import Cloud
+from scatterfit.forward.growth_model import Cloud, setting
 from scatterfit.forward.model import PulseModel, channel_signals
 from scatterfit.inversion.data import Bins
 from scatterfit.inversion.projection import project
@@ -116,7 +116,7 @@ def value_of(cloud, name):
         Its value [any].
     """
     kind, _, index = name.partition(":")
-    return getattr(cloud, f"{kind}s")[int(index)] if index else getattr(cloud, kind)
+    return getattr(cloud, f"{kind}s")[int(index)] if index else setting(cloud, kind)
 
 
 def limits_of(problem, name):

@@ -63,19 +63,24 @@ def _project(data, columns, by, out):
         factors[q] /= norms[q]
         for m in range(samples):
             fit[m] += factors[q] * free[q, m]
-    rows, volts = by
-    size = np.empty(samples)
-    for m in range(samples):
-        size[m] = -weight[m] if amplitude.shape[0] == 0 else 0.0
-    for e in range(amplitude.shape[0]):
-        for m in range(samples):
-            size[m] -= weight[m] * factors[e] * amplitude[e, m]
-    for k in range(rows.shape[0]):
-        for m in range(samples):
-            rows[k, m] *= -weight[m] if volts[k] else size[m]
-        for q in range(count):
-            _removed(basis[q], rows[k])
+    _derived(weight, (basis, amplitude), by, factors)
     return True
+
+
+@njit(cache=True, error_model="numpy", fastmath=_FAST)
+def _derived(weight, columns, by, factors):
+    """Change derivatives of the shape into those of the projected residual."""
+    basis, amplitude = columns
+    rows, volts = by
+    size = np.full(weight.size, 1.0 if amplitude.shape[0] == 0 else 0.0)
+    for e in range(amplitude.shape[0]):
+        for m in range(weight.size):
+            size[m] += factors[e] * amplitude[e, m]
+    for k in range(rows.shape[0]):
+        for m in range(weight.size):
+            rows[k, m] *= -weight[m] * (1.0 if volts[k] else size[m])
+        for q in range(basis.shape[0]):
+            _removed(basis[q], rows[k])
 
 
 @njit(cache=True, error_model="numpy", fastmath=_FAST)

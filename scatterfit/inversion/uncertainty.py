@@ -4,7 +4,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from scatterfit.forward.growth_model import linear_growth
+from scatterfit.forward.growth_model import linear_growth, with_changes
 from scatterfit.inversion.problem import evaluate
 
 _WHITE = 1.25
@@ -73,7 +73,8 @@ def posterior(problem, best, inputs):
         The solution.
     inputs : dict
         ``"names"``: further cloud parameters; ``"more"``: further columns as in
-        :func:`evaluate`; ``"priors"``: standard deviations of both, and replacements;
+        :func:`evaluate`; ``"grown"``, optional: of further names, what they do to growth, as in
+        :func:`with_changes`; ``"priors"``: standard deviations of both, and replacements;
         ``"correlations"``, optional: names of priors, and the correlations of their errors.
 
     Returns
@@ -89,6 +90,7 @@ def posterior(problem, best, inputs):
     names = problem.names + tuple(inputs["names"])
     priors = {**problem.priors, **inputs["priors"]}
     linear = linear_growth(problem.model.setup, best.cloud, names, best.state.linear)
+    linear = with_changes(linear, inputs.get("grown", {}))
     wide = evaluate(
         replace(problem, names=names, priors=priors), best.cloud, more=inputs["more"],
         linear=linear,

@@ -7,6 +7,7 @@ from scatterfit.apparatus.keys import HUMIDITY
 from scatterfit.forward.model import channel_signals
 from scatterfit.inversion.prior import depletion_sigma
 from scatterfit.measured_pulse.prepare import optical_columns
+from scatterfit.measured_pulse.restated_inputs import grown_inputs, seen_inputs
 
 _CREEP = 0.02
 """Two percent: how far the gas may warm, leak or mix during one pulse (common practice)."""
@@ -30,16 +31,21 @@ def bench_inputs(prepared, problem, best, index_shift=2e-4):
     Returns
     -------
     inputs : dict
-        ``"names"``, ``"more"`` and ``"priors"`` for :func:`posterior`.
+        ``"names"``, ``"more"``, ``"grown"`` and ``"priors"`` for :func:`posterior`.
     """
     priors, columns = {}, []
     for name, sigma, parts in _signal_inputs(prepared, problem, best, index_shift):
         priors[name] = (0.0, sigma)
         columns.append((name, parts))
+    for name, parts in seen_inputs(prepared, problem, best):
+        priors[name] = (0.0, 1.0)
+        columns.append((name, parts))
+    grown = grown_inputs(prepared, best)
+    priors |= dict.fromkeys(grown, (0.0, 1.0))
     priors["creep"] = (0.0, _CREEP)
     # The fit's own prior holds the path's share as well, which has a column of its own here.
     priors["depletion"] = (0.0, depletion_sigma(prepared.setup))
-    return {"names": ("creep",), "more": columns, "priors": priors,
+    return {"names": ("creep", *grown), "more": columns, "priors": priors, "grown": grown,
             "correlations": _correlations(prepared, {**problem.priors, **priors})}
 
 

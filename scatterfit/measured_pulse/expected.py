@@ -1,6 +1,7 @@
 """The result that a pulse of a bench would have, before either exists."""
 
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
@@ -22,11 +23,10 @@ from scatterfit.measured_pulse.prepare import (
     prepare_setup,
     pulse_kernel,
     pulse_model,
-    span,
-    window_of,
 )
 from scatterfit.measured_pulse.record import MeasuredPulse, Reason
 from scatterfit.measured_pulse.settings import fit_options
+from scatterfit.measured_pulse.window import span, window_of
 
 _ROOM = 1.6
 """Largest radius of the tables over that of the cloud: room for rivals [-]."""
@@ -111,7 +111,8 @@ def expect(apparatus, scenario, store=None, rivals=True):
     window = window_of(apparatus, time)
     channels = [_channel(pulse.expected[column], column, kind, record, window)
                 for column, kind, record in optical_columns(apparatus)]
-    prepared = assembled(setup, store, time, channels, window)
+    prepared = replace(assembled(setup, store, time, channels, window), restate=partial(
+        prepare_setup, time=pulse.time, columns=noiseless))
     options = fit_options(prepared, straight, straight)
     cloud = replace(pulse.cloud, **no_shifts(prepared.model))
     problem = true_problem(prepared.model, time, channels, options, cloud)

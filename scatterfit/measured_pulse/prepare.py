@@ -1,9 +1,13 @@
 """From a bench and a trace to a problem that can be fitted."""
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
+from scatterfit.apparatus.records import Apparatus
+from scatterfit.apparatus.restated import value_in, with_value
 from scatterfit.cloud_optics.beams import BenchKernel, beam_indices, build_bench_kernel
 from scatterfit.droplet_growth.setup import GrowthSetup, growth_setup
 from scatterfit.errors import TraceError
@@ -11,15 +15,16 @@ from scatterfit.forward.light import cloud_light
 from scatterfit.forward.model import Channel, PulseModel
 from scatterfit.inversion.data import channel_data
 from scatterfit.inversion.noise import resolution_step
+from scatterfit.measured_pulse.window import FEWEST, span, window_of
 
 _PRESSURES = (1e3, 5e6)
 """Before an expansion, where gases are ideal and laws of growth hold [Pa] (common practice)."""
 _APART = 3.0
-_FEWEST = 20
 ANGLE_SIGMAS = 3.0
 """How many of its sigmas a detector's angle may be off [-]."""
 LARGEST_ANGLE = np.radians(1.6)
 """How far a detector's angle may be off at the most [rad]."""
+_CONES = ("polarization", "half_angle_deg")
 _LEAST_SIZE = 0.25
 _STRIDE = 2
 INDEX_STEP = 2e-4
@@ -46,6 +51,23 @@ class Prepared:
     """ChannelData of the optical columns."""
     window: np.ndarray
     """Samples that may be fitted, shape (n,) [bool]."""
+    angles: tuple[float, ...] = ()
+    """Shift of each detector's angle that the models hold [rad]."""
+    varied: tuple[tuple[str, BenchKernel], ...] = ()
+    """Key path and kernel with its value moved by its standard uncertainty, where one is stated
+    of what tables rest on."""
+    restate: Callable[[Apparatus], GrowthSetup] | None = None
+    """Gives the setup of the same record on another bench."""
+
+    def modelled(self, kernel):
+        """Return the forward model with another kernel of the same beams.
+
+        Parameters
+        ----------
+        kernel : BenchKernel
+            The kernel.
+        """
+        return pulse_model(self.setup, kernel, self.relative_index, self.angles)
 
 
 def optical_columns(apparatus):
@@ -207,6 +229,7 @@ def reangled(prepared, angles):
         prepared,
         model=pulse_model(prepared.setup, prepared.kernel, relative, angles),
         index_model=pulse_model(prepared.setup, prepared.kernel, relative + INDEX_STEP, angles),
+        angles=tuple(angles),
     )
 
 
@@ -236,6 +259,7 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
     TraceError
         If fewer than 20 samples of a column can be used.
     """
+    recorded = {"time": time, "columns": columns}
     setup = prepare_setup(apparatus, time, columns)
     kept = span(apparatus, time)
     time, columns = time[kept], {name: np.asarray(v)[kept] for name, v in columns.items()}
@@ -246,14 +270,15 @@ def prepare(apparatus, time, columns, store=None, exclude=()):
     for column, kind, record in optical_columns(apparatus):
         clipped = _clipped(columns[column], getattr(record, "full_scale", None))
         data = channel_data(column, kind, optical[column], window, baseline, clipped)
-        if data.used.sum() < _FEWEST:
+        if data.used.sum() < FEWEST:
             message = (
                 f"column {column} has {int(data.used.sum())} usable samples, fewer than "
-                f"{_FEWEST}: widen analysis.window_ms or look at the recording"
+                f"{FEWEST}: widen analysis.window_ms or look at the recording"
             )
             raise TraceError(message)
         channels.append(data)
-    return assembled(setup, store, time, channels, window)
+    return replace(assembled(setup, store, time, channels, window),
+                   restate=partial(prepare_setup, **recorded))
 
 
 def assembled(setup, store, time, channels, window):
@@ -282,55 +307,22 @@ def assembled(setup, store, time, channels, window):
     return Prepared(
         setup, pulse_model(setup, kernel, relative, straight),
         pulse_model(setup, kernel, relative + INDEX_STEP, straight),
-        kernel, relative, index, time, tuple(channels), window,
+        kernel, relative, index, time, tuple(channels), window, straight,
+        _varied_kernels(setup, store),
     )
 
 
-def span(apparatus, time):
-    """Return the samples up to the end of the window: later ones play no part.
-
-    Parameters
-    ----------
-    apparatus : Apparatus
-        The bench.
-    time : ndarray, shape (n,)
-        Samples [s].
-
-    Returns
-    -------
-    kept : slice
-        Of the samples.
-    """
-    if apparatus.analysis.window is None:
-        return slice(0, time.size)
-    end = int(np.searchsorted(time, apparatus.analysis.window[1], side="right"))
-    return slice(0, max(end, min(_FEWEST, time.size)))
-
-
-def window_of(apparatus, time, exclude=()):
-    """Return which samples may be fitted.
-
-    Parameters
-    ----------
-    apparatus : Apparatus
-        The bench.
-    time : ndarray, shape (n,)
-        Samples [s].
-    exclude : sequence of tuple of float
-        Ranges of time to leave out [s].
-
-    Returns
-    -------
-    window : ndarray, shape (n,)
-        Samples that may be fitted [bool].
-    """
-    window = np.ones(time.size, dtype=bool)
-    if apparatus.analysis.window is not None:
-        low, high = apparatus.analysis.window
-        window &= (time >= low) & (time <= high)
-    for low, high in exclude:
-        window &= (time < low) | (time > high)
-    return window
+def _varied_kernels(setup, store):
+    """Return kernels with what only tables know moved by its stated standard uncertainty."""
+    bench, found = setup.apparatus, []
+    for path, sigma in bench.sigmas.items():
+        if path.rpartition(".")[2] not in _CONES:
+            continue
+        value = value_in(bench, path)
+        if value is not None:
+            other = replace(setup, apparatus=with_value(bench, path, value + sigma))
+            found.append((path, pulse_kernel(other, store)[0]))
+    return tuple(found)
 
 
 def _clipped(values, full_scale):

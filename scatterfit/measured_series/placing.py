@@ -1,73 +1,13 @@
 """Shared unknowns put into a bench, a cloud or the angles of its tables."""
 
-from dataclasses import replace
-
 import numpy as np
 
 from scatterfit import matter
 from scatterfit.apparatus.keys import HUMIDITY, KEYS_OF
-from scatterfit.apparatus.overrides import split_path
+from scatterfit.apparatus.restated import value_in, with_value
 from scatterfit.measured_series.unknowns import moved_value
 
 _ICE_POINT = 273.15
-
-
-def value_in(apparatus, key):
-    """Return a value of a bench.
-
-    Parameters
-    ----------
-    apparatus : Apparatus
-        The bench.
-    key : str
-        Key path of one that can be shared.
-
-    Returns
-    -------
-    value : float or None
-        ``None`` where the bench does not have it [SI].
-    """
-    table, column, name = split_path(key)
-    field = KEYS_OF[table][name].field
-    if table == "detector":
-        found = [d for d in apparatus.detectors if d.column == column]
-        return getattr(found[0], field) if found else None
-    record = getattr(apparatus, table)
-    if record is None:
-        return None
-    if KEYS_OF[table][name].property_name:
-        return record.overrides.get(field)
-    return getattr(record, field)
-
-
-def with_value(apparatus, key, value):
-    """Return a bench with one value replaced.
-
-    Parameters
-    ----------
-    apparatus : Apparatus
-        The bench.
-    key : str
-        Key path.
-    value : float
-        New value [SI].
-
-    Returns
-    -------
-    changed : Apparatus
-        The other bench.
-    """
-    table, column, name = split_path(key)
-    field = KEYS_OF[table][name].field
-    if table == "detector":
-        return replace(apparatus, detectors=tuple(
-            replace(d, **{field: value}) if d.column == column else d for d in apparatus.detectors))
-    record = getattr(apparatus, table)
-    if KEYS_OF[table][name].property_name:
-        record = replace(record, overrides={**record.overrides, field: value})
-    else:
-        record = replace(record, **{field: value})
-    return replace(apparatus, **{table: record})
 
 
 def moved(apparatus, unknowns, x):
