@@ -104,6 +104,14 @@ def test_a_wider_cone_means_fewer_droplets(bench, pulse, store):
     assert sigma < 1.05 * 2.0 * 0.02 / 2.0 * alone.concentration.value * 1e-6
 
 
+def test_a_stated_vapour_pressure_carries_its_own_uncertainty(bench, pulse, store, plain):
+    """Two percent of it are two percent of the saturation ratio."""
+    alone = fitted(replace(bench, sigmas={"vapour.saturation_pressure_kPa": 0.02 * 3169.9}),
+                   pulse, store)  # water at 298.15 K, from memory
+    ratio, before = alone.growth_saturation_ratio, plain.growth_saturation_ratio
+    assert ratio.sigma**2 - before.sigma**2 == pytest.approx((0.02 * ratio.value) ** 2, rel=0.05)
+
+
 def test_values_are_read_and_replaced_by_key_path(bench):
     for key in KEYS:
         if key.kind != "number":

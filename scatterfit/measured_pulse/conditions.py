@@ -5,6 +5,7 @@ import numpy as np
 from scatterfit import matter
 from scatterfit.constants import GAS_CONSTANT
 from scatterfit.droplet_growth.properties import saturation_pressure
+from scatterfit.matter_substance import PRESSURE_ANCHOR
 from scatterfit.measured_pulse.bench_inputs import (
     temperature_relative_sigma,
     vapour_relative_sigma,
@@ -46,6 +47,8 @@ def state_derivatives(setup, temperature, pressure):
 def relative_sigmas(setup):
     """Return the stated relative uncertainties of start temperature, vapour and vapour pressure.
 
+    That of the vapour pressure is its correlation's where the chamber file states none.
+
     Parameters
     ----------
     setup : GrowthSetup
@@ -58,10 +61,12 @@ def relative_sigmas(setup):
     """
     apparatus = setup.apparatus
     saturation = setup.substance.saturation_pressure
+    stated = apparatus.sigmas.get("vapour.saturation_pressure_kPa")
     return {
         "temperature": temperature_relative_sigma(apparatus),
         "vapour": vapour_relative_sigma(apparatus),
-        "saturation": float(saturation.relative_uncertainty),
+        "saturation": float(saturation.relative_uncertainty if stated is None
+                            else stated / saturation(PRESSURE_ANCHOR)),
     }
 
 

@@ -13,14 +13,13 @@ from scatterfit.constants import GAS_CONSTANT, ICE_POINT
 from scatterfit.forward.growth_model import linear_growth
 from scatterfit.forward.light import moved_rows
 from scatterfit.forward.model import channel_signals
+from scatterfit.matter_substance import PRESSURE_ANCHOR
 
 _PROPERTIES = tuple(key.name for key in KEYS if key.property_name)
 _GAS = {
     "growth": ("pressure_kPa",), "pressure": ("offset_kPa", "time_constant_ms"),
     "vapour": ("thermal_accommodation", *_PROPERTIES),
 }
-# Where the chamber file states a saturation pressure [K].
-_ROOM = 298.15
 _SMALL = 0.01
 _SMALL_GROWTH = 3e-3
 
@@ -187,7 +186,8 @@ def _value(setup, path):
     known = getattr(setup.substance, field)
     if field == "molar_mass":
         return float(known)
-    return float(known(_ROOM if field == "saturation_pressure" else setup.droplet_temperature))
+    at = PRESSURE_ANCHOR if field == "saturation_pressure" else setup.droplet_temperature
+    return float(known(at))
 
 
 def _beam(bench, channel):

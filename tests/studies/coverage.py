@@ -25,6 +25,7 @@ import numpy as np
 from scatterfit import matter
 from scatterfit.apparatus.check import apparatus_from_mapping
 from scatterfit.droplet_growth.setup import growth_setup
+from scatterfit.files_compiled import load_compiled
 from scatterfit.files_fit import fit_loaded
 from scatterfit.files_kernel import default_store
 from scatterfit.files_trace import Trace
@@ -176,6 +177,7 @@ def main():
         lines = [json.loads(x) for x in args.summary.read_text().splitlines()]
         sys.stdout.write(summarise(lines) + "\n")
         return
+    load_compiled()
     done = set()
     if args.out.exists():
         done = {json.loads(x)["seed"] for x in args.out.read_text().splitlines()}

@@ -18,6 +18,7 @@ from pathlib import Path
 
 from night_folder import make_night
 
+from scatterfit.compiled import use_compiled
 from scatterfit.files import read_trace
 from scatterfit.measured_pulse.record import MeasuredPulse
 from scatterfit.overnight.batch import Choice, run_batch
@@ -66,7 +67,10 @@ def reading_alone(traces):
 
 
 def one_process(chamber, traces):
-    """Return pulses a second, by wall clock and by processor time, and the profile of the fit."""
+    """Return pulses a second, by wall clock and by processor time, and the profile of the fit.
+
+    The same again, by processor time, with compiled loops.
+    """
     plan = Plan(chamber, traces)
     names = sorted(path.name for path in traces.iterdir())[:_ALONE]
     measure(plan, Job(names[0]))  # loads the kernel
@@ -79,7 +83,14 @@ def one_process(chamber, traces):
     for name in names[:30]:
         measure(plan, Job(name))
     profile.disable()
-    return len(names) / wall, len(names) / cpu, shares(profile)
+    quick = Plan(chamber, traces, compiled=True)
+    measure(quick, Job(names[0]))
+    used = time.process_time()
+    for name in names:
+        measure(quick, Job(name))
+    compiled = time.process_time() - used
+    use_compiled(False)
+    return len(names) / wall, len(names) / cpu, shares(profile), len(names) / compiled
 
 
 def shares(profile):
@@ -107,9 +118,9 @@ def main():
         chamber, traces = make_night(folder, count)
         found = {"processors": processors(), "load_average_before": os.getloadavg()[0],
                  "pulses": count, "samples": 5000, "reading_alone_seconds": reading_alone(traces)}
-        wall, cpu, profile = one_process(chamber, traces)
+        wall, cpu, profile, compiled = one_process(chamber, traces)
         found |= {"one_process_per_second": wall, "one_process_per_cpu_second": cpu,
-                  "profile_shares": profile}
+                  "one_process_compiled_per_cpu_second": compiled, "profile_shares": profile}
         found["batch"] = batch(chamber, traces, folder / "a.sqlite", processors())
         rate = found["batch"]["pulses"] / found["batch"]["seconds"]
         found |= {"batch_per_second": rate, "batch_over_one_process": rate / wall,
