@@ -11,7 +11,7 @@ def load_compiled():
     """Let fits in this process use compiled loops from here on.
 
     Worth its while from a dozen pulses on. The first time on a machine it takes some ten seconds,
-    later one. Where numba is missing, or there is no folder in which compiled code can be kept, the
+    later one. Where numba is missing or broken, or there is no folder in which compiled code can be kept, the
     array code goes on: the numbers are the same.
 
     Returns
@@ -31,7 +31,7 @@ def load_compiled():
         return False
     try:
         _load(str(folder / "compiled"))
-    except (ImportError, OSError, RuntimeError):
+    except Exception:  # noqa: BLE001 - whatever is wrong with numba here, fits do without it
         return False
     return use_compiled()
 

@@ -187,9 +187,11 @@ def test_without_a_folder_for_compiled_code_the_array_code_goes_on(monkeypatch):
     files_compiled.load_compiled.cache_clear()
 
 
-def test_without_numba_the_array_code_goes_on(monkeypatch):
+@pytest.mark.parametrize("error", [ImportError, AttributeError, OSError])
+def test_without_a_sound_numba_the_array_code_goes_on(monkeypatch, error):
+    """A module of another name in the way once broke its import with an AttributeError."""
     def missing(_folder):
-        raise ImportError
+        raise error
 
     files_compiled.load_compiled.cache_clear()
     monkeypatch.setattr(files_compiled, "_load", missing)
