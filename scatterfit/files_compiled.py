@@ -11,8 +11,8 @@ def load_compiled():
     """Let fits in this process use compiled loops from here on.
 
     Worth its while from a dozen pulses on. The first time on a machine it takes some ten seconds,
-    later one. Where numba is missing or broken, or there is no folder in which compiled code can be kept, the
-    array code goes on: the numbers are the same.
+    later one. Where numba is missing or broken, or there is no folder in which compiled code can
+    be kept, the array code goes on: the numbers are the same.
 
     Returns
     -------

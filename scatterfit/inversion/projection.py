@@ -35,8 +35,8 @@ def project(data, columns, by, amplitude):
     columns : tuple of ndarray
         Columns to be fitted, shape (q, m), and what has no free factor, shape (m,) [V].
     by : tuple of ndarray
-        Derivatives of the channel's shape, shape (k, m), and which of them are volts already,
-        shape (k,).
+        Derivatives of the channel's shape, shape (k, m) [V or -], and which of them are volts
+        already, shape (k,) [bool].
     amplitude : ndarray, shape (e, m)
         What the first factors multiply to make the amplitude of the shape: ones, then slow
         changes; none where the amplitude is known [-].

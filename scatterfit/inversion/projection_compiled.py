@@ -22,7 +22,7 @@ def projected(data, columns, by, amplitude):
     Parameters
     ----------
     data, columns, by, amplitude : tuple of ndarray or ndarray
-        As for :func:`scatterfit.inversion.projection.project`.
+        As for :func:`scatterfit.inversion.projection.project` [V or -].
 
     Returns
     -------

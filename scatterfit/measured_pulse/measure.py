@@ -35,7 +35,11 @@ from scatterfit.measured_pulse.record import (
 )
 from scatterfit.measured_pulse.settings import fit_options
 
-_RADIUS_FLOOR = 1.5e-4
+# Kernel and growth law: what pulses of programs that share neither were off beyond their noise.
+_RADIUS_FLOOR = 2.5e-5
+# An index stated without a sigma is seldom said to be against vacuum, air or the gas at hand, which
+# differ by two to three parts in ten thousand: what that moved in radius, by angle, was 1 to 3e-4.
+_BARE_INDEX = 1.5e-4
 _RATE_FLOOR = 2e-3
 _SCALE_FLOOR = 5e-3
 _BASE_SPREAD = 0.003
@@ -252,9 +256,10 @@ def with_cloud(prepared, fit, gas, warnings):
     inputs = bench_inputs(prepared, problem, fit.best)
     after = posterior(problem, fit.best, inputs)
     curve, (final, noise, parts) = q.radius_curve(setup, problem, after.state, after)
-    floor = _RADIUS_FLOOR * final.value
+    least = _radius_floor(setup.apparatus)
+    floor = least * final.value
     final = Quantity(final.value, float(np.hypot(final.sigma, floor)))
-    curve = replace(curve, sigma=np.hypot(curve.sigma, _RADIUS_FLOOR * curve.radius))
+    curve = replace(curve, sigma=np.hypot(curve.sigma, least * curve.radius))
     budget = budget_lines("final_radius_um", 1e6, (noise, parts, floor), fit)
     number = number_results(prepared, fit, after)
     budget += budget_lines("concentration_per_cm3", 1e-6,
@@ -284,6 +289,17 @@ def with_cloud(prepared, fit, gas, warnings):
         residual_lag1=fit.lag1, budget=tuple(budget), channels=_views(prepared, fit),
         learnt=learnt_inputs(fit, after), **rates, **gas,
     )
+
+
+def _radius_floor(apparatus):
+    """Return what a radius may be off beside all that is stated, relative [-]."""
+    known = "vapour.refractive_index" in apparatus.sigmas
+    bare = any(
+        f"{apparatus.path_of(beam)}.refractive_index" not in apparatus.sigmas
+        if beam.refractive_index is not None
+        else apparatus.vapour.refractive_index is not None and not known
+        for beam in apparatus.beams)
+    return _BARE_INDEX if bare else _RADIUS_FLOOR
 
 
 def _verdict(fit, reasons, left):

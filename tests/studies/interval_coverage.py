@@ -1,10 +1,10 @@
 """Do one-sigma intervals hold the truth as often as they should?
 
-    python tests/studies/coverage.py --count 1000 --out tests/studies/coverage.jsonl
-    python tests/studies/coverage.py --count 60 --independent --out coverage_independent.jsonl
-    python tests/studies/coverage.py --summary tests/studies/coverage.jsonl
+    python tests/studies/interval_coverage.py --count 1000 --out tests/studies/coverage.jsonl
+    python tests/studies/interval_coverage.py --count 60 --independent --out elsewhere.jsonl
+    python tests/studies/interval_coverage.py --summary tests/studies/coverage.jsonl
 
-One bench whose chamber file states angle, gain and temperature with sigmas; the true values of
+One bench whose chamber file states angle, gain, temperature and index with sigmas; the true values of
 each pulse are drawn from them, its number, growth scale and noise as well. A file that exists is
 continued. With ``--independent`` the pulses are made by ``independent_pulse.py``, diffusivity,
 conductivity, vapour pressure and nucleation barrier off by what a handbook is. Not part of the
@@ -37,19 +37,21 @@ from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model
 ANGLE, ANGLE_SIGMA = 30.0, 0.15
 GAIN, GAIN_SIGMA = 4.2e4, 0.05
 TEMPERATURE, TEMPERATURE_SIGMA = 296.4, 0.15
+INDEX, INDEX_SIGMA = 1.3368, 1e-4
 GROWTH_SIGMA = 0.012
 RATE, DURATION, NOISE, HOLD = 50e3, 0.095, 0.01, 1e-3
 
 
-def bench(temperature=TEMPERATURE):
-    """Return the bench as its chamber file states it."""
+def bench(temperature=TEMPERATURE, index=INDEX):
+    """Return the bench as its chamber file states it, or as it is."""
     return apparatus_from_mapping({
         "beam": {"wavelength_nm": 532.0, "polarization": "perpendicular"},
         "detector": [{
             "column": "scatter_V", "angle_deg": ANGLE, "angle_deg_sigma": ANGLE_SIGMA,
             "half_angle_deg": 2.0, "gain_V_m": GAIN, "gain_V_m_sigma": GAIN_SIGMA * GAIN,
             "time_constant_ms": 0.02, "full_scale_V": 10.0}],
-        "vapour": {"substance": "water", "mole_fraction": 0.0096, "refractive_index": 1.3368},
+        "vapour": {"substance": "water", "mole_fraction": 0.0096, "refractive_index": index,
+                   "refractive_index_sigma": INDEX_SIGMA},
         "gas": {"carrier": "argon"},
         "chamber": {"temperature_K": temperature, "temperature_K_sigma": TEMPERATURE_SIGMA,
                     "pressure_kPa": 89.35, "path_mm": 120.0},
@@ -60,7 +62,8 @@ def bench(temperature=TEMPERATURE):
 def made_here(rng, time, errors, number):
     """Return light [V], pressure [Pa] and truth of a pulse by scatterfit's own simulation."""
     angle, warmth = errors
-    true, store = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth), default_store()
+    index = INDEX + INDEX_SIGMA * rng.standard_normal()
+    true, store = bench(TEMPERATURE + TEMPERATURE_SIGMA * warmth, index), default_store()
     fine = np.arange(-5e-3, DURATION + 1e-6, 1e-5)
     ratio, start = 0.78, true.chamber.pressure
     low = hold_pressure(true, Scenario(number, DURATION, RATE, NOISE, HOLD, ratio))
@@ -99,7 +102,7 @@ def made_elsewhere(rng, time, errors, number):
     truth = cloud.truth
     gas_index = float(gas.refractive_index(532e-9, truth["T_growth"],
                                            truth["p_growth_kPa"] * 1e3))
-    tables = independent_light(steps, 1.3368 / gas_index, gas_index)
+    tables = independent_light(steps, INDEX / gas_index, gas_index)
     shapes, *_ = ip.channel_shapes(cloud, tables, nature.spread, (0.12, 0.12), 1.0 / RATE, [2e-5])
     return GAIN * shapes[0], pressure, {
         "radius": float(cloud.median[-1]), "number": number, "J": truth["J_per_cm3_s"] * 1e6,
@@ -164,6 +167,30 @@ def summarise(lines):
     return "\n".join([*rows, "", f"{accepted} of {len(lines)} accepted."])
 
 
+def draw(lines, path):
+    """Draw the share of pulses within so many sigmas, beside that of a Gaussian."""
+    from matplotlib.figure import Figure
+    from scipy.special import erf
+
+    figure = Figure(figsize=(6.4, 4.0), layout="constrained")
+    axis = figure.add_subplot()
+    z = np.linspace(0.0, 3.2, 200)
+    axis.plot(z, 100 * erf(z / np.sqrt(2.0)), color="black", lw=4, alpha=0.25, label="Gaussian")
+    for name, colour, dash in (("radius", "#0072B2", "-"), ("number", "#D55E00", "--"),
+                               ("J", "#009E73", "-."), ("T", "#CC79A7", ":"),
+                               ("S", "#56B4E9", (0, (5, 1, 1, 1)))):
+        pairs = np.array([x[name] for x in lines if name in x])
+        apart = np.sort(np.abs(pairs[:, 0] / pairs[:, 1]))
+        share = 100.0 * np.arange(1, apart.size + 1) / apart.size
+        axis.plot(apart, share, color=colour, ls=dash, label=f"{name}, {apart.size} pulses")
+    for n, low, high in ((1, 64, 72), (2, 93.5, 97.5)):
+        axis.plot([n, n], [low, high], color="black", lw=2, marker="_", ms=10)
+    axis.set(xlim=(0.0, 3.2), ylim=(0.0, 101.0), xlabel="|value - truth| / stated sigma",
+             ylabel="pulses within it (%)", title="Do stated uncertainties cover the truth?")
+    axis.legend(loc="lower right")
+    figure.savefig(path, dpi=120)
+
+
 def main():
     """Run pulses or summarise them."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
@@ -171,11 +198,14 @@ def main():
     parser.add_argument("--count", type=int, default=100)
     parser.add_argument("--out", type=Path, default=Path("coverage.jsonl"))
     parser.add_argument("--summary", type=Path)
+    parser.add_argument("--figure", type=Path, help="where to draw what --summary reads")
     parser.add_argument("--independent", action="store_true")
     args = parser.parse_args()
     if args.summary:
         lines = [json.loads(x) for x in args.summary.read_text().splitlines()]
         sys.stdout.write(summarise(lines) + "\n")
+        if args.figure:
+            draw(lines, args.figure)
         return
     load_compiled()
     done = set()
