@@ -27,7 +27,7 @@ def projected(data, columns, by, amplitude):
     Returns
     -------
     found : tuple of ndarray or None
-        The fields of a ``Projected``.
+        The fields of a ``Projected`` [V or -].
     """
     values, weight, free, fixed, amplitude = (
         np.array(a, dtype=float, order="C") for a in (*data, *columns, amplitude))

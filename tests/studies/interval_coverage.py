@@ -4,9 +4,9 @@
     python tests/studies/interval_coverage.py --count 60 --independent --out elsewhere.jsonl
     python tests/studies/interval_coverage.py --summary tests/studies/coverage.jsonl
 
-One bench whose chamber file states angle, gain, temperature and index with sigmas; the true values of
-each pulse are drawn from them, its number, growth scale and noise as well. A file that exists is
-continued. With ``--independent`` the pulses are made by ``independent_pulse.py``, diffusivity,
+One bench whose chamber file states angle, gain, temperature and index with sigmas; the true values
+of each pulse are drawn from them, its number, growth scale and noise as well. A file that exists
+is continued. With ``--independent`` the pulses are made by ``independent_pulse.py``, diffusivity,
 conductivity, vapour pressure and nucleation barrier off by what a handbook is. Not part of the
 test run.
 """
