@@ -112,6 +112,17 @@ def test_a_stated_vapour_pressure_carries_its_own_uncertainty(bench, pulse, stor
     assert ratio.sigma**2 - before.sigma**2 == pytest.approx((0.02 * ratio.value) ** 2, rel=0.05)
 
 
+def test_an_index_without_a_sigma_is_not_taken_for_exact(bench, pulse, store, plain):
+    """Against vacuum, air or the gas: two to three parts in ten thousand (air, handbook value
+    from memory), which the radius follows."""
+    known = fitted(replace(bench, sigmas={"vapour.refractive_index": 1e-5}), pulse, store)
+    bare = line(plain, "model", "final_radius_um") / plain.final_radius.value * 1e-6
+    told = line(known, "model", "final_radius_um") / known.final_radius.value * 1e-6
+    assert bare == pytest.approx(1.5e-4, rel=1e-6)
+    assert told == pytest.approx(2.5e-5, rel=1e-6)
+    assert known.final_radius.sigma < plain.final_radius.sigma
+
+
 def test_values_are_read_and_replaced_by_key_path(bench):
     for key in KEYS:
         if key.kind != "number":
