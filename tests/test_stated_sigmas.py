@@ -15,7 +15,7 @@ WITH_SIGMAS = {
     "beam.wavelength_nm": 2e-10, "beam.polarization": np.radians(3.0),
     "detector.scatter1_V.half_angle_deg": np.radians(0.05),
     "detector.scatter1_V.time_constant_ms": 5e-6,
-    "transmission.half_angle_deg": np.radians(0.1),
+    "transmission.half_angle_deg": np.radians(0.1), "transmission.dark_V": 0.01,
     "chamber.pressure_kPa": 150.0, "pressure.offset_kPa": 60.0,
     "pressure.time_constant_ms": 1e-5,
     "vapour.thermal_accommodation": 0.1, "vapour.density_kg_m3": 2.0,
@@ -94,6 +94,20 @@ def test_lines_against_a_refit_with_the_value_moved(bench, pulse, store, plain, 
         assert line(alone, key, quantity) <= 1.1 * apart + 0.1 * own
         if apart > own and not any(x.input == key and x.left < 0.9 for x in alone.learnt):
             assert line(alone, key, quantity) == pytest.approx(apart, rel=NEAR)
+
+
+def test_a_dark_level_of_the_transmission_acts_on_a_number_that_it_tells(make_bench, store):
+    bench = make_bench(detector={"gain_V_m": None}, transmission={"path_mm": 500.0},
+                       vapour={"mole_fraction": 0.02}, analysis={"max_radius_um": 4.0})
+    pulse = simulate(bench, count=1, number=3e8, seed=3, noise=0.004, store=store)[0]
+    alone = fitted(replace(bench, sigmas={"transmission.dark_V": 0.05}), pulse, store)
+    plain = fitted(bench, pulse, store)
+    moved = fitted(with_value(bench, "transmission.dark_V", 0.05), pulse, store)
+    apart = abs(moved.concentration.value - plain.concentration.value) * 1e-6
+    learnt = [x.left for x in alone.learnt if x.input == "transmission.dark_V"]
+    assert apart > 0.1 * plain.concentration.sigma * 1e-6
+    sigma = line(alone, "transmission.dark_V", "concentration_per_cm3")
+    assert sigma == pytest.approx(learnt[0] * apart, rel=0.4)
 
 
 def test_a_wider_cone_means_fewer_droplets(bench, pulse, store):

@@ -55,6 +55,12 @@ def seen_inputs(prepared, problem, best):
             yield path, _by_sigma(partial(shown.coloured, column), sigma, _SMALL)
         elif table == "detector" and name == "time_constant_ms":
             yield path, _by_sigma(partial(shown.slower, column), sigma, _SMALL)
+        elif path == "transmission.dark_V":
+            # Light is counted from there; a detector's baseline is fitted in any case.
+            yield path, [np.full(shown.time.size, sigma / factors[0] if c.kind == "transmission"
+                                 else 0.0)
+                         for c, factors in zip(problem.model.channels, best.coefficients,
+                                               strict=True)]
 
 
 def grown_inputs(prepared, best):

@@ -1,4 +1,4 @@
-"""Does the fit get all that the trace holds? Scatter over noise draws beside the least there can be.
+"""Does the fit get all that a trace holds? Scatter over noise draws, and the least there can be.
 
     python tests/studies/efficiency.py --count 200
 
