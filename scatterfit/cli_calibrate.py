@@ -9,6 +9,8 @@ from pathlib import Path
 
 from scatterfit.errors import ChamberFileError, InvalidInputError, ScatterfitError, TraceError
 
+_MANY = 50
+
 
 def calibrate_output(chamber, folder, choices, *, out, figure, as_json):
     """Return what ``scatterfit calibrate`` prints, after writing its files.
@@ -221,7 +223,8 @@ def workers(jobs, count):
     if most < 2:
         yield map
         return
-    pool = LocalPool(most)
+    # Each pulse is fitted once and then asked again in every round.
+    pool = LocalPool(most, compiled=count >= _MANY)
     try:
         yield pool.map
     except BrokenExecutor as error:

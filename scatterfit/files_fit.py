@@ -9,14 +9,17 @@ from pathlib import Path
 
 import numpy as np
 
+from scatterfit.compiled import compiled
 from scatterfit.errors import TraceError
 from scatterfit.files import load_pulse
+from scatterfit.files_compiled import load_compiled
 from scatterfit.files_kernel import default_store
 from scatterfit.measured_pulse.measure import measure
 from scatterfit.measured_pulse.monte_carlo import monte_carlo
 from scatterfit.measured_pulse.record import MeasuredPulse, Reason
 
 _LIBRARIES = ("scatterfit", "numpy", "scipy", "lmfit", "miepython")
+_MANY = 200
 
 
 def fit_loaded(apparatus, trace, *, overrides=None, exclude=(), store=None, provenance=None):
@@ -43,7 +46,7 @@ def fit_loaded(apparatus, trace, *, overrides=None, exclude=(), store=None, prov
         With verdict ``failed`` where the trace cannot be used.
     """
     record = {
-        "versions": {name: _version(name) for name in _LIBRARIES} | {
+        "versions": {name: _version(name) for name in _LIBRARIES + ("numba",) * compiled()} | {
             "python": platform.python_version()},
         "trace_sha256": trace.sha256,
         "overrides": dict(overrides or {}),
@@ -84,6 +87,8 @@ def repeated(chamber_path, trace_path, pulse, settings):
     if pulse.final_radius is None:
         return pulse
     apparatus, trace, _ = load_pulse(chamber_path, trace_path, settings["overrides"])
+    if settings["trials"] >= _MANY:
+        load_compiled()
     spread = monte_carlo(
         apparatus, trace.time, dict(trace.columns), pulse,
         {"store": default_store(), "exclude": (), **settings},

@@ -10,11 +10,15 @@ from scatterfit import files_compiled
 from scatterfit.compiled import compiled, use_compiled
 from scatterfit.droplet_growth import cloud as growth
 from scatterfit.droplet_growth.setup import growth_setup
+from scatterfit.files import write_trace
 from scatterfit.files_trace import Trace
 from scatterfit.forward.growth_model import Cloud, linear_growth, per_mole
 from scatterfit.forward.model import channel_signals
 from scatterfit.forward.simulate import pressure_profile
 from scatterfit.measured_pulse.prepare import pulse_kernel, pulse_model
+from scatterfit.overnight import batch
+from scatterfit.overnight.jobs import Plan
+from scatterfit.report.template import chamber_template
 
 TIME = np.arange(-5e-3, 0.1, 1e-4)
 NAMES = ("number", "scale", "delay", "variance", "accommodation", "temperature", "vapour", "bend",
@@ -165,6 +169,27 @@ def test_a_whole_fit(make_bench):
                  (plain.concentration, quick.concentration)):
         assert b.value == pytest.approx(a.value, abs=1e-3 * a.sigma)
         assert b.sigma == pytest.approx(a.sigma, rel=1e-3)
+
+
+def test_a_batch_of_many_traces_uses_them_and_gives_the_same_numbers(tmp_path, monkeypatch):
+    chamber, folder = tmp_path / "bench.toml", tmp_path / "night"
+    chamber.write_text(chamber_template(), encoding="utf-8")
+    folder.mkdir()
+    bench = scatterfit.read_chamber(chamber)
+    for i, pulse in enumerate(scatterfit.simulate(bench, count=2, number=2e9, rate=1e4, seed=8)):
+        write_trace(folder / f"p{i}.csv", pulse.time, pulse.columns)
+    found = {}
+    for many in (2, 3):
+        monkeypatch.setattr(batch, "MANY", many)
+        ledger = tmp_path / f"{many}.sqlite"
+        batch.run_batch(Plan(chamber, folder), ledger, batch.Choice(workers=1))
+        found[many] = [scatterfit.open_results(ledger).pulse(f"p{i}.csv").to_dict()
+                       for i in range(2)]
+    for quick, plain in zip(found[2], found[3], strict=True):
+        assert "numba" in quick["provenance"]["versions"]
+        assert "numba" not in plain["provenance"]["versions"]
+        for key in ("final_radius_um", "concentration_per_cm3"):
+            assert quick[key]["value"] == pytest.approx(plain[key]["value"], rel=1e-7)
 
 
 def test_loading_compiles_what_fits_use():

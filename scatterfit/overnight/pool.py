@@ -45,15 +45,17 @@ class LocalPool(ProcessPoolExecutor):
         How many.
     numerics : bool
         Whether they will fit pulses, and had better load what that needs beforehand.
+    compiled : bool
+        Whether each loads compiled loops before its first task.
     """
 
-    def __init__(self, workers, *, numerics=True):
+    def __init__(self, workers, *, numerics=True, compiled=False):
         methods = multiprocessing.get_all_start_methods()
         method = "forkserver" if "forkserver" in methods else "spawn"
         context = multiprocessing.get_context(method)
         if method == "forkserver":
             context.set_forkserver_preload(_PRELOADED + _NUMERICS * numerics)
-        super().__init__(workers, mp_context=context, initializer=_begin)
+        super().__init__(workers, mp_context=context, initializer=_begin, initargs=(compiled,))
 
     def submit(self, fn, /, *args, **kwargs):
         """Hand in a task; processes that start for it see one thread for linear algebra."""
@@ -84,8 +86,12 @@ def _one_thread():
                 os.environ[name] = value
 
 
-def _begin():
+def _begin(compiled=False):
     """Prepare a worker: it leaves Ctrl-C to its parent, is silent, and ends with its parent."""
+    if compiled:
+        from scatterfit.files_compiled import load_compiled  # noqa: PLC0415 - loads the numerics
+
+        load_compiled()
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     warnings.simplefilter("ignore")
     own_this_process()
