@@ -264,7 +264,7 @@ def test_an_onset_between_two_pulses_has_no_width():
     assert run.onset.sigma == pytest.approx(0.02 / math.sqrt(12), rel=0.05)
     result = activation_to_dict(analysed(cells))["isotherms"][0]
     assert result["width"] is None
-    assert [reason["code"] for reason in result["reasons"]] == ["width-unresolved"]
+    assert [reason["code"] for reason in result["reasons"]] == ["width-unresolved", "no-sigmas"]
 
 
 def test_without_an_onset_nothing_is_claimed():
@@ -312,6 +312,16 @@ def test_two_temperatures_are_two_runs_but_a_falling_one_is_one():
     assert len(found.runs) == 1
     codes = {reason["code"] for reason in activation_to_dict(found)["isotherms"][0]["reasons"]}
     assert "temperature-spread" in codes
+
+
+def test_a_table_without_sigmas_says_what_is_missing():
+    """Errors that pulses share do not scatter: the shared part of the onset is then unknown."""
+    cells = seeded(np.random.default_rng(35), "poisson")
+    plain = activation_to_dict(analysed(cells))["isotherms"][0]
+    cells[f"{S}_sigma"] = 0.01 * cells[S]
+    told = activation_to_dict(analysed(cells))["isotherms"][0]
+    assert "no-sigmas" in [reason["code"] for reason in plain["reasons"]]
+    assert "no-sigmas" not in [reason["code"] for reason in told["reasons"]]
 
 
 def test_runs_are_compared():

@@ -227,6 +227,10 @@ def activation_reasons(run):
     if spread > 2.0:
         found.append(("temperature-spread", f"temperatures differ by {spread:.2g} K within the "
                       "run: the thresholds are those of its mean"))
+    if not run.pulses.ratio_shared and not np.any(data.variance_x):
+        found.append(("no-sigmas", "the table has no sigma of S: the onset's uncertainty is that "
+                      "of the scatter alone; what all pulses share, such as the start "
+                      "temperature, is not in it"))
     if run.kelvin is not None and _below_kelvin(run):
         found.append(("below-kelvin", "activation below the Kelvin limit of a wettable seed: it "
                       "is soluble, or larger than stated"))
