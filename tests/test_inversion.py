@@ -14,6 +14,7 @@ from scatterfit.apparatus.check import apparatus_from_mapping
 from scatterfit.forward.growth_model import Cloud
 from scatterfit.forward.model import channel_signals
 from scatterfit.forward.simulate import pressure_profile
+from scatterfit.inversion import data
 from scatterfit.inversion.data import bin_channels, bin_edges, channel_data, without
 from scatterfit.inversion.disturbances import find_disturbances, find_glitches, stack_columns
 from scatterfit.inversion.explore import best_of
@@ -644,3 +645,28 @@ def test_prior_of_the_growth_scale_grows_with_stated_uncertainties(make_bench, s
     assert 0.02 <= growth_scale_sigma(plain) < growth_scale_sigma(wide)
     assert 0.05 < growth_scale_sigma(wide) < 0.15
     assert growth_scale_sigma(wide, ("temperature",)) < growth_scale_sigma(wide)
+
+
+# Spikes.
+
+
+@pytest.mark.parametrize("places", [(1,), (0,), (198,), (199,), (80, 82), (80, 81), (0, 2),
+                                    (50, 53, 120)])
+def test_spikes_near_an_end_or_each_other_are_left_out(places):
+    """And nothing else is: the samples beside them are sound."""
+    generator = np.random.default_rng(4)
+    signal = 2.0 - 2.0 * np.cos(np.arange(200) / 9.0) + 0.01 * generator.standard_normal(200)
+    signal[list(places)] += 3.0 * np.resize([1.0, -1.2], len(places))
+    found = data._spikes(signal, np.ones(200, dtype=bool))
+    assert np.flatnonzero(found).tolist() == sorted(places)
+
+
+def test_lobes_of_a_few_samples_and_steps_are_no_spikes():
+    """Mode hops and the end of a record in which light rises steeply."""
+    generator = np.random.default_rng(5)
+    noise = 0.01 * generator.standard_normal(200)
+    lobes = 1.0 - np.cos(2.0 * np.pi * np.arange(200) / 6.0)
+    step = np.where(np.arange(200) < 97, 1.0, 1.5)
+    rise = np.exp((np.arange(200) - 199.0) / 3.0)
+    for signal in (lobes, step, rise, 5.0 * rise + lobes):
+        assert not data._spikes(signal + noise, np.ones(200, dtype=bool)).any()

@@ -8,6 +8,8 @@ from scatterfit.inversion.hops import Hops, find_hops, refine_hops
 from scatterfit.inversion.noise import NoiseModel, estimate_noise, running_mean
 
 _SMOOTHING = 15
+_BESIDE = 3
+_FARTHER = 4.0
 _SPIKE = 8.0
 
 
@@ -104,13 +106,28 @@ def _spikes(signal, used):
     far = size > _SPIKE * np.maximum(local, 1e-300)
     # A lone sample bends its two neighbours half as much the other way, and nobody else.
     beside = np.maximum(np.roll(size, 2), np.roll(size, -2))
-    lone = far & (size > np.roll(size, 1)) & (size > np.roll(size, -1)) & (beside < 0.35 * size)
+    next_to = np.maximum(np.roll(size, 1), np.roll(size, -1))
+    lone = far & (next_to < 0.75 * size) & (beside < 0.35 * size)
     lone[:3] = lone[-3:] = False
-    # The ends have neighbours on one side only: they should lie on the line through the next two.
-    for end, line in ((0, 2.0 * values[1] - values[2]), (-1, 2.0 * values[-2] - values[-3])):
-        lone[end] = abs(values[end] - line) > _SPIKE * 2.0 * max(local[end], 1e-300)
+    far[:3] = far[-3:] = True
+    suspects = np.flatnonzero(far & ~lone)
+    lone[suspects] = _apart(values, suspects) > _SPIKE * np.maximum(local[suspects], 1e-300)
     found[index[lone]] = True
     return found
+
+
+def _apart(values, suspects):
+    """Return how far samples lie from their six neighbours, zero where these differ as much.
+
+    Spikes close to each other, or to an end, hide behind one another from differences; the middle
+    four of six neighbours do not care for two that are far off.
+    """
+    first = np.clip(suspects - _BESIDE, 0, values.size - 2 * _BESIDE - 1)
+    around = first[:, None] + np.arange(2 * _BESIDE + 1)
+    others = values[around[around != suspects[:, None]].reshape(-1, 2 * _BESIDE)]
+    others.sort(axis=1)
+    away = np.abs(values[suspects] - 0.5 * (others[:, _BESIDE - 1] + others[:, _BESIDE]))
+    return np.where(away > _FARTHER * (others[:, -2] - others[:, 1]), away, 0.0)
 
 
 def _weighed(data, good, before):

@@ -58,8 +58,8 @@ def search(problem, delays, widest, count=6, *, dense=False):
         Candidates to return at the most.
     dense : bool
         Whether numbers stand so close that the radius at which the vapour is used up moves by a
-        part of a lobe from one to the next, and more sticking coefficients are tried, at several
-        times the cost.
+        part of a lobe from one to the next, delays half as far apart, and more sticking
+        coefficients are tried, at several times the cost.
 
     Returns
     -------
@@ -73,6 +73,9 @@ def search(problem, delays, widest, count=6, *, dense=False):
     scales = np.linspace(-widest, widest, scale_count(setup.apparatus, widest))
     lone = grow(setup, Cloud(number=0.0))
     levels = number_levels(setup, max(float(lone.radius[0].max()), 1e-7), dense=dense)
+    if dense and len(delays) > 1:
+        delays = np.sort(delays)
+        delays = np.unique(np.append(delays, 0.5 * (delays[1:] + delays[:-1])))
     # With a gauge there is time for more of both.
     some = _MORE_STICKING if dense and len(delays) == 1 else _STICKING
     sticking, level = (v.ravel() for v in np.meshgrid(some, levels, indexing="ij"))
