@@ -137,6 +137,17 @@ def test_an_index_without_a_sigma_is_not_taken_for_exact(bench, pulse, store, pl
     assert known.final_radius.sigma < plain.final_radius.sigma
 
 
+@pytest.mark.parametrize("key", ["pressure.offset_kPa", "vapour.saturation_pressure_kPa",
+                                 "chamber.pressure_kPa", "vapour.surface_tension_N_m"])
+def test_a_sigma_as_wide_as_the_value_is_no_trouble(bench, pulse, store, plain, key):
+    """One whole sigma off, there would be no expansion, or no droplets."""
+    wide = {"pressure.offset_kPa": 6e4, "chamber.pressure_kPa": 8e4,
+            "vapour.saturation_pressure_kPa": 3e3, "vapour.surface_tension_N_m": 0.07}[key]
+    found = fitted(replace(bench, sigmas={key: wide}), pulse, store)
+    assert found.final_radius.value == pytest.approx(plain.final_radius.value, rel=1e-3)
+    assert np.isfinite(found.concentration.sigma)
+
+
 def test_values_are_read_and_replaced_by_key_path(bench):
     for key in KEYS:
         if key.kind != "number":

@@ -10,6 +10,7 @@ from scatterfit.apparatus.keys import KEYS, KEYS_OF
 from scatterfit.apparatus.overrides import split_path
 from scatterfit.apparatus.restated import value_in, with_value
 from scatterfit.constants import GAS_CONSTANT, ICE_POINT
+from scatterfit.errors import ScatterfitError
 from scatterfit.forward.growth_model import linear_growth
 from scatterfit.forward.light import moved_rows
 from scatterfit.forward.model import channel_signals
@@ -22,6 +23,7 @@ _GAS = {
 }
 _SMALL = 0.01
 _SMALL_GROWTH = 3e-3
+_FIRST_STEP = 0.05
 
 
 def seen_inputs(prepared, problem, best):
@@ -88,22 +90,28 @@ def grown_inputs(prepared, best):
             grown = partial(_restated, prepared, best, path)
         else:
             continue
-        radius, density = _by_sigma(grown, sigma, _SMALL_GROWTH)
-        found[path] = radius, density
+        changes = _by_sigma(grown, sigma, _SMALL_GROWTH)
+        if changes is not None:
+            found[path] = tuple(changes)
     return found
 
 
 def _by_sigma(seen, sigma, small):
     """Return the change of each array by one sigma, from a step that changes none by much.
 
-    Lobes that are moved by a good part of their width are no derivative.
+    Lobes that are moved by a good part of their width are no derivative, and a sigma may be so
+    wide that there is no such bench. ``None`` where even a small part of it leads to none.
     """
-    before, after = seen(0.0), seen(sigma)
+    before, after = seen(0.0), seen(_FIRST_STEP * sigma)
+    if before is None or after is None:
+        return None
     moved = max(np.max(np.abs(b - a)) / (np.ptp(a) or 1.0)
                 for a, b in zip(before, after, strict=True))
-    share = min(1.0, small / max(moved, 1e-300))
-    after = seen(share * sigma) if share < 1.0 else after
-    return [(b - a) / share for a, b in zip(before, after, strict=True)]
+    share = min(1.0, small * _FIRST_STEP / max(moved, 1e-300))
+    further = seen(share * sigma)
+    if further is None:
+        share, further = _FIRST_STEP, after
+    return [(b - a) / share for a, b in zip(before, further, strict=True)]
 
 
 def _expanded(setup, best, change):
@@ -125,8 +133,14 @@ def _restated(prepared, best, path, change):
     setup = prepared.setup
     # A coefficient of one can only be less.
     change = -change if path.endswith("accommodation") else change
-    there = prepared.restate(with_value(setup.apparatus, path, _value(setup, path) + change))
-    return _logs(linear_growth(there, best.cloud), best.state.linear)
+    try:
+        there = prepared.restate(with_value(setup.apparatus, path, _value(setup, path) + change))
+    except ScatterfitError:
+        return None
+    linear, base = linear_growth(there, best.cloud), best.state.linear
+    # Births at one moment in place of several, or none at all, are another kind of pulse.
+    alike = linear.growth.square.shape[1] == base.growth.square.shape[1]
+    return _logs(linear, base) if alike and linear.growth.converged else None
 
 
 def _logs(linear, base):
