@@ -17,7 +17,7 @@ from scatterfit.errors import InvalidInputError
 from scatterfit.files_simulate import simulate
 from scatterfit.forward.cloud_state import CloudState, hermite
 from scatterfit.forward.growth_model import Cloud, linear_growth, per_mole
-from scatterfit.forward.light import cloud_light, look_up, spread_table
+from scatterfit.forward.light import cloud_light, look_up, moved_rows, spread_table
 from scatterfit.forward.low_pass import low_pass
 from scatterfit.forward.model import Channel, PulseModel, channel_signals
 from scatterfit.forward.simulate import Scenario, hold_pressure, pressure_profile
@@ -121,6 +121,19 @@ def test_light_of_a_power_law_is_widened_in_closed_form():
     middle = slice(200, 1300)
     expected = np.exp(2 * log_radius + 2 * 0.02**2)
     assert table.values[0, middle] == pytest.approx(expected[middle], rel=2e-5)
+
+
+def test_rows_at_a_longer_wavelength_are_those_of_smaller_droplets(model):
+    """At one index a cross section over the wavelength squared depends on r / lambda alone."""
+    shift = 2e-3
+    plain = spread_table(model.light, 1e-5)
+    moved = spread_table(moved_rows(model.light, [0, 2], shift), 1e-5)
+    middle = plain.log_radius[200:-200]
+    for row, expected in ((0, shift), (1, 0.0), (2, shift)):
+        smaller = look_up(plain, middle - expected, 1e-5)[0][row]
+        found = look_up(moved, middle, 1e-5)[0][row]
+        size = np.abs(smaller).max()
+        assert found == pytest.approx(np.exp(2 * expected) * smaller, rel=2e-4, abs=1e-6 * size)
 
 
 def test_radii_beyond_the_table_take_its_end_values(model):
