@@ -6,7 +6,8 @@ import numpy as np
 
 from scatterfit.compiled import compiled
 
-_SINGULAR = 1e-12
+SINGULAR = 1e-12
+"""Part of a column beyond the others, from which it is one of its own [-]."""
 
 
 @dataclass(frozen=True)
@@ -81,9 +82,9 @@ def _projected(data, columns, by, amplitude):
 def _solve(triangle, shadow):
     """Return the solution of an upper triangular system that may be singular."""
     size = np.abs(np.diag(triangle))
-    if size.size and size.min() > _SINGULAR * max(size.max(), 1e-300):
+    if size.size and size.min() > SINGULAR * max(size.max(), 1e-300):
         found = np.zeros_like(shadow)
         for k in reversed(range(shadow.size)):
             found[k] = (shadow[k] - triangle[k, k + 1:] @ found[k + 1:]) / triangle[k, k]
         return found
-    return np.linalg.lstsq(triangle, shadow, rcond=_SINGULAR)[0]
+    return np.linalg.lstsq(triangle, shadow, rcond=SINGULAR)[0]

@@ -5,7 +5,8 @@ import math
 import numpy as np
 from numba import njit
 
-_SINGULAR = 1e-12
+from scatterfit.inversion.projection import SINGULAR
+
 # Sums may be taken in another order; what is not a number stays so.
 _FAST = {"reassoc", "contract", "arcp", "nsz"}
 
@@ -105,7 +106,7 @@ def _orthonormal(basis, triangle, norms):
             for k in range(q):
                 triangle[k, q] += _removed(basis[k], basis[q])
         triangle[q, q] = math.sqrt(_power(basis[q]))
-        if not triangle[q, q] > 10.0 * _SINGULAR:
+        if not triangle[q, q] > 10.0 * SINGULAR:
             return False
         for m in range(basis.shape[1]):
             basis[q, m] /= triangle[q, q]

@@ -5,9 +5,8 @@ import numpy as np
 from scatterfit import matter
 from scatterfit.apparatus.keys import HUMIDITY, KEYS_OF
 from scatterfit.apparatus.restated import value_in, with_value
+from scatterfit.constants import ICE_POINT
 from scatterfit.measured_series.unknowns import moved_value
-
-_ICE_POINT = 273.15
 
 
 def moved(apparatus, unknowns, x):
@@ -106,7 +105,7 @@ def stands_for(apparatus, key):
     value = value_in(apparatus, key)
     if value is None and key == "vapour.diffusivity_mm2_s":
         substance = matter.substance(apparatus.vapour.substance)
-        return float(matter.diffusivity(substance, matter.carrier(apparatus.carrier))(_ICE_POINT))
+        return float(matter.diffusivity(substance, matter.carrier(apparatus.carrier))(ICE_POINT))
     return value
 
 
